@@ -1,0 +1,162 @@
+//! What a running method may see of its trial: the clock, the limits, the effort meter and the
+//! trace sink. The clock is read here and in the runner only.
+
+pub mod memory;
+
+use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
+use std::time::{Duration, Instant};
+
+/// Limits of one trial.
+#[derive(Clone, Debug)]
+pub struct Budget {
+    /// Wall time.
+    pub wall: Duration,
+    /// Memory taken beyond the start of the trial, in bytes.
+    pub memory: Option<u64>,
+}
+
+/// Machine-independent work counts of a trial and the flops they stand for.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub struct Effort {
+    /// Floating-point operations, by the operation counts in `linalg::flops`.
+    pub flops: u64,
+    /// Symmetric eigendecompositions of a block (a Lanczos run counts its products instead).
+    pub eigendecompositions: u64,
+    /// Cholesky (or similar) factorisations.
+    pub factorisations: u64,
+    /// Applications of the constraint operator, its adjoint or the slack to a point or factor.
+    pub operator_products: u64,
+    /// Inner steps: Newton steps, quasi-Newton steps, projections, as the method's card says.
+    pub inner_steps: u64,
+}
+
+/// Why a method ends without an answer.
+#[derive(Clone, Debug, PartialEq, Eq, thiserror::Error)]
+pub enum Halt {
+    /// The wall-time limit was reached before there was a point to return.
+    #[error("the wall-time limit was reached")]
+    TimeLimit,
+    /// The memory limit was reached before there was a point to return.
+    #[error("the memory limit was reached")]
+    MemoryLimit,
+    /// The user interrupted the run.
+    #[error("interrupted")]
+    Interrupted,
+    /// The method does not support this problem.
+    #[error("{0}")]
+    Refused(String),
+    /// The method gave up.
+    #[error("{0}")]
+    Failed(String),
+}
+
+/// One point of a convergence trace. Absent figures are `None`.
+#[derive(Clone, Copy, Debug, Default, PartialEq)]
+pub struct TracePoint {
+    /// Flops so far.
+    pub flops: u64,
+    /// Objective of the iterate.
+    pub objective: Option<f64>,
+    /// Relative primal residual of the iterate, as the method measures it.
+    pub residual: Option<f64>,
+    /// Tail ratio of the iterate: eigenvalues beyond the target rank over the trace.
+    pub tail: Option<f64>,
+}
+
+/// Clock, limits, effort and trace of one running trial.
+#[derive(Debug)]
+pub struct Meter {
+    started: Instant,
+    budget: Budget,
+    interrupt: Arc<AtomicBool>,
+    memory_at_start: i64,
+    /// Work counts; engines add to them.
+    pub effort: Effort,
+    trace: Option<Vec<TracePoint>>,
+}
+
+/// Whether a trial keeps its convergence trace.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Tracing {
+    /// Keep it.
+    On,
+    /// Drop it.
+    Off,
+}
+
+impl Meter {
+    /// Starts the clock.
+    pub fn start(budget: Budget, interrupt: Arc<AtomicBool>, tracing: Tracing) -> Self {
+        Meter {
+            started: Instant::now(),
+            budget,
+            interrupt,
+            memory_at_start: memory::begin(),
+            effort: Effort::default(),
+            trace: (tracing == Tracing::On).then(Vec::new),
+        }
+    }
+
+    /// Starts a meter without limits, for tests and direct use of the engines.
+    pub fn unlimited() -> Self {
+        let budget = Budget { wall: Duration::from_secs(u64::MAX / 4), memory: None };
+        Meter::start(budget, Arc::new(AtomicBool::new(false)), Tracing::Off)
+    }
+
+    /// Returns an error when a limit is reached or the run is interrupted. Methods call it at least
+    /// once an iteration.
+    ///
+    /// # Errors
+    /// `TimeLimit`, `MemoryLimit` or `Interrupted`.
+    pub fn check(&self) -> Result<(), Halt> {
+        if self.interrupt.load(Ordering::Relaxed) {
+            return Err(Halt::Interrupted);
+        }
+        if self.started.elapsed() > self.budget.wall {
+            return Err(Halt::TimeLimit);
+        }
+        if let Some(limit) = self.budget.memory
+            && self.peak_bytes().is_some_and(|peak| peak > limit)
+        {
+            return Err(Halt::MemoryLimit);
+        }
+        Ok(())
+    }
+
+    /// Returns an error when `bytes` more would pass the memory limit. Methods call it before they
+    /// take a large array.
+    ///
+    /// # Errors
+    /// `MemoryLimit`.
+    pub fn check_room(&self, bytes: u64) -> Result<(), Halt> {
+        match self.budget.memory {
+            Some(limit) if bytes > limit => Err(Halt::MemoryLimit),
+            _ => Ok(()),
+        }
+    }
+
+    /// Returns the wall time since the start.
+    pub fn elapsed(&self) -> Duration {
+        self.started.elapsed()
+    }
+
+    /// Returns the most memory this thread held beyond the start of the trial, in bytes, or none
+    /// when the counting allocator is not installed.
+    pub fn peak_bytes(&self) -> Option<u64> {
+        memory::peak_since(self.memory_at_start)
+    }
+
+    /// Records a trace point, when traces are kept.
+    pub fn trace(&mut self, mut point: TracePoint) {
+        point.flops = self.effort.flops;
+        if let Some(trace) = &mut self.trace {
+            trace.push(point);
+        }
+    }
+
+    /// Takes the trace out.
+    pub fn take_trace(&mut self) -> Vec<TracePoint> {
+        self.trace.take().unwrap_or_default()
+    }
+}

@@ -1,0 +1,43 @@
+//! Seeded families: each plants instances whose low-rank optimum is known and proved.
+//!
+//! A family is one file here, one `mod` line and one line in [`registry`].
+
+use crate::card::{FamilyCard, Settings};
+use crate::problem::certificate::Planted;
+use crate::seed::Stream;
+
+/// Says why an instance could not be planted.
+#[derive(Clone, Debug, PartialEq, thiserror::Error)]
+pub enum PlantError {
+    /// The parameters exclude one another; the message names the nearest possible value.
+    #[error("{0}")]
+    Parameters(String),
+    /// The certificate does not hold: a defect of the family, never of the user.
+    #[error("the certificate does not hold: {0}")]
+    Certificate(#[from] crate::problem::certificate::CertificateError),
+    /// A number does not fit the exact range.
+    #[error("{0}")]
+    Range(String),
+}
+
+/// A seeded generator of instances with a proved optimum.
+pub trait Family: Sync {
+    /// Returns the card.
+    fn card(&self) -> &'static FamilyCard;
+
+    /// Plants one instance. The certificate has been checked when this returns.
+    ///
+    /// # Errors
+    /// Impossible parameters, or a certificate that does not hold.
+    fn plant(&self, parameters: &Settings, stream: &mut Stream) -> Result<Planted, PlantError>;
+}
+
+/// Lists every family, in alphabetical order of id.
+pub fn registry() -> &'static [&'static dyn Family] {
+    &[]
+}
+
+/// Finds a family by its id.
+pub fn find(id: &str) -> Option<&'static dyn Family> {
+    registry().iter().copied().find(|family| family.card().id == id)
+}

@@ -1,0 +1,69 @@
+//! The independent judge of a returned point.
+//!
+//! The referee trusts nothing but the problem and the numbers of the answer. It uses its own loops
+//! and compensated sums, so that a defect of a kernel the methods share cannot cancel out. It does
+//! not solve, and it does not see how the answer was found.
+
+use crate::problem::{Answer, Factor, Problem};
+
+/// Tolerances of a verdict.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Tolerance {
+    /// `||A(X_r) - b||_2 <= feasibility * (1 + ||b||_2)`.
+    pub feasibility: f64,
+    /// `|<C, X_r> - p*| <= objective * (1 + |p*|)`.
+    pub objective: f64,
+    /// Eigenvalues above `rank` times the largest count towards the rank.
+    pub rank: f64,
+}
+
+impl Default for Tolerance {
+    fn default() -> Self {
+        Tolerance { feasibility: 1e-6, objective: 1e-6, rank: 1e-6 }
+    }
+}
+
+/// How an optimum is known.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub enum KnownOptimum {
+    /// Proved exactly; a better objective than its certificate allows is an internal error.
+    Certified(f64),
+    /// Published or computed to the given relative accuracy.
+    Reported {
+        /// The value.
+        value: f64,
+        /// Relative accuracy: the true value lies within `accuracy * (1 + |value|)`.
+        accuracy: f64,
+    },
+    /// Not known.
+    Unknown,
+}
+
+/// What is known of an instance when its answers are judged.
+#[derive(Clone, Debug)]
+pub struct Known<'a> {
+    /// The rank-constrained optimum.
+    pub optimum: KnownOptimum,
+    /// Multipliers of an exact dual certificate, when there is one: they bound how far below the
+    /// optimum a point with a residual may lie.
+    pub dual: Option<&'a [f64]>,
+    /// The optimal point by factors, when it is proved to be the only one.
+    pub unique_point: Option<&'a [Factor]>,
+}
+
+/// The referee's word on a point.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Finding {
+    /// The rank-r truncation is feasible and optimal to tolerance.
+    Solved,
+    /// It is after the referee's restoration.
+    Near,
+    /// Feasible, the objective is off.
+    Suboptimal,
+    /// Feasible at the target rank; the optimum is not known.
+    Feasible,
+    /// Not feasible at the target rank, not even after restoration.
+    Infeasible,
+    /// Unreadable: wrong shapes or numbers that are not finite.
+    Malformed,
+}
