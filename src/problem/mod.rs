@@ -2,10 +2,12 @@
 //! certificates. Nothing here solves or judges.
 
 pub mod operator;
+pub mod pattern;
 pub mod point;
 pub mod symmetric;
 
-pub use operator::Operator;
+pub use operator::{BlockOperator, Operator, Slack, SlackStore};
+pub use pattern::Pattern;
 pub use point::{Answer, BlockPoint, Factor, Point, StopReason};
 pub use symmetric::{Coefficient, OuterSum, OuterTerm, SparseSymmetric, SparseVector};
 
