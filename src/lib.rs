@@ -14,7 +14,8 @@
 
 pub mod budget;
 pub mod card;
-pub mod families;
+pub mod engines;
+
 pub mod linalg;
 pub mod methods;
 pub mod problem;

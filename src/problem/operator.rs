@@ -129,11 +129,28 @@ const DENSE_SHARE: f64 = 0.25;
 /// Blocks up to this order are held dense.
 const SMALL_ORDER: usize = 24;
 
+/// How blocks are to be held.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Storage {
+    /// Sparse where the aggregate pattern is sparse and no long outer product occurs.
+    Automatic,
+    /// Dense throughout.
+    Dense,
+    /// Sparse where the aggregate pattern is sparse; long outer products are applied, never formed.
+    Factored,
+}
+
 impl Operator {
-    /// Compiles the operator of a problem.
+    /// Compiles the operator of a problem for work on factors.
     pub fn new(problem: &Problem) -> Self {
-        let blocks =
-            (0..problem.blocks().len()).map(|index| compile_block(problem, index)).collect();
+        Operator::with_storage(problem, Storage::Factored)
+    }
+
+    /// Compiles the operator of a problem with the given storage of blocks.
+    pub fn with_storage(problem: &Problem, storage: Storage) -> Self {
+        let blocks = (0..problem.blocks().len())
+            .map(|index| compile_block(problem, index, storage))
+            .collect();
         let mut orthant_cost = vec![0.0; problem.orthant()];
         for (index, value) in problem.cost().orthant.iter() {
             orthant_cost[index] += value;
@@ -460,7 +477,7 @@ fn split(coefficient: &Coefficient) -> (Option<SparseSymmetric>, Vec<&OuterTerm>
     }
 }
 
-fn compile_block(problem: &Problem, index: usize) -> BlockOperator {
+fn compile_block(problem: &Problem, index: usize, storage: Storage) -> BlockOperator {
     let order = problem.blocks()[index].order;
     let mut entries = Entries::default();
     let mut outer: Vec<(usize, &OuterTerm)> = Vec::new();
@@ -476,7 +493,12 @@ fn compile_block(problem: &Problem, index: usize) -> BlockOperator {
         entries.starts.push(0);
     }
     let cost = cost_entries(problem.cost(), index, order);
-    let pattern = aggregate(order, &entries, &cost);
+    let hold_dense = match storage {
+        Storage::Automatic => !outer.is_empty(),
+        Storage::Dense => true,
+        Storage::Factored => false,
+    };
+    let pattern = if hold_dense { None } else { aggregate(order, &entries, &cost) };
     if let Some(pattern) = &pattern {
         entries.slots = slots_of(pattern, &entries);
     }

@@ -1,0 +1,446 @@
+//! Newton system of one iteration: right sides, multipliers, directions and step lengths.
+
+use super::iterate::{
+    BlockState, add_product_by_entries, add_scaled, inner, slack_times_dense,
+};
+use super::schur::SchurPlan;
+use crate::budget::Effort;
+use crate::linalg::cg;
+use crate::linalg::cholesky;
+use crate::linalg::dense::{self, Accumulate};
+use crate::linalg::eigen::flops;
+use crate::linalg::lanczos::LinearOperator;
+use crate::linalg::vector::{dot, norm2};
+use crate::linalg::workspace::Workspace;
+use crate::linalg::{Mat, MatRef};
+use crate::problem::{BlockOperator, Operator, Slack, SlackStore};
+
+/// The iterate, its residuals and all workspace of the loop, in scaled data.
+#[derive(Debug)]
+pub(super) struct State {
+    pub op: Operator,
+    pub b: Vec<f64>,
+    pub blocks: Vec<BlockState>,
+    pub y: Vec<f64>,
+    /// Nonnegative part: x, slack z, directions and dual residual.
+    pub x: Vec<f64>,
+    pub z: Vec<f64>,
+    pub dx: Vec<f64>,
+    pub dz: Vec<f64>,
+    pub rdz: Vec<f64>,
+    /// Primal residual b - A(X).
+    pub rp: Vec<f64>,
+    pub dy: Vec<f64>,
+    pub mu: f64,
+    plan: SchurPlan,
+    schur: Mat<f64>,
+    factor: Mat<f64>,
+    base: Vec<f64>,
+    rhs: Vec<f64>,
+    image: Vec<f64>,
+    correction: Vec<f64>,
+    by_entries: Vec<bool>,
+    ratios: Vec<f64>,
+    second: Vec<f64>,
+    cg: cg::CgWorkspace,
+    pub ws: Workspace,
+    /// Whether the Schur factor was perturbed in this iteration.
+    perturbed: bool,
+    reach_calls: u64,
+}
+
+/// Steps of a direction to the boundary of the cones.
+#[derive(Clone, Copy, Debug)]
+pub(super) struct Reach {
+    pub primal: f64,
+    pub dual: f64,
+}
+
+impl State {
+    pub fn new(op: Operator, b: Vec<f64>, blocks: Vec<BlockState>, xi: f64, eta: f64) -> Self {
+        let m = b.len();
+        let orthant = op.orthant_cost.len();
+        let by_entries = op.blocks.iter().map(single_entries_are_cheaper).collect();
+        State {
+            plan: SchurPlan::new(&op, orthant),
+            schur: Mat::zeros(m, m),
+            factor: Mat::zeros(m, m),
+            base: vec![0.0; m],
+            rhs: vec![0.0; m],
+            image: vec![0.0; m],
+            correction: vec![0.0; m],
+            by_entries,
+            ratios: vec![0.0; orthant],
+            second: vec![0.0; orthant],
+            cg: cg::CgWorkspace::new(),
+            ws: Workspace::new(),
+            perturbed: false,
+            reach_calls: 0,
+            y: vec![0.0; m],
+            x: vec![xi; orthant],
+            z: vec![eta; orthant],
+            dx: vec![0.0; orthant],
+            dz: vec![0.0; orthant],
+            rdz: vec![0.0; orthant],
+            rp: b.clone(),
+            dy: vec![0.0; m],
+            mu: 0.0,
+            op,
+            b,
+            blocks,
+        }
+    }
+
+    /// Returns the number of complementarity pairs.
+    pub fn pairs(&self) -> f64 {
+        (self.blocks.iter().map(|block| block.order).sum::<usize>() + self.x.len()) as f64
+    }
+
+    /// Returns <X, S> + x'z.
+    pub fn complementarity(&self) -> f64 {
+        let blocks: f64 = self.blocks.iter().map(|block| inner(&block.x, &block.s)).sum();
+        blocks + dot(&self.x, &self.z)
+    }
+
+    /// Recomputes r_p and R_d.
+    pub fn residuals(&mut self) {
+        self.op.apply_orthant(&self.x, &mut self.image);
+        for (block, state) in self.op.blocks.iter().zip(&self.blocks) {
+            block.add_dense(state.x.as_ref(), &mut self.image);
+        }
+        for ((r, b), image) in self.rp.iter_mut().zip(&self.b).zip(&self.image) {
+            *r = b - image;
+        }
+        for (block, state) in self.op.blocks.iter().zip(&mut self.blocks) {
+            fill_full(block, &self.y, 1.0, &mut state.rd, &mut state.outer_scratch);
+            add_scaled(-1.0, &state.s, &mut state.rd);
+            if let (Some(weight), SlackStore::Dense(matrix)) = (&state.weight, &mut state.rd.store) {
+                dense::axpy_matrix(1.0, weight.as_ref(), matrix.as_mut());
+            }
+        }
+        self.rdz.copy_from_slice(&self.op.orthant_cost);
+        for (row, y) in self.op.orthant_rows.iter().zip(&self.y) {
+            for (index, value) in row.iter() {
+                self.rdz[index] -= value * y;
+            }
+        }
+        for (r, z) in self.rdz.iter_mut().zip(&self.z) {
+            *r -= z;
+        }
+    }
+
+    /// Forms and factors the Schur complement; false when it cannot be factored even perturbed.
+    pub fn factor_schur(&mut self, effort: &mut Effort) -> bool {
+        for state in &mut self.blocks {
+            state.invert_s(&mut self.ws);
+            effort.flops += flops::inverse_from_factor(state.order);
+        }
+        for ((ratio, x), z) in self.ratios.iter_mut().zip(&self.x).zip(&self.z) {
+            *ratio = x / z;
+        }
+        let points: Vec<&Mat<f64>> = self.blocks.iter().map(|state| &state.x).collect();
+        let inverses: Vec<&Mat<f64>> = self.blocks.iter().map(|state| &state.si).collect();
+        self.plan.form(&self.op, &points, &inverses, &self.ratios, &mut self.schur);
+        dense::mirror_lower(self.schur.as_mut());
+        effort.flops += self.plan.flops + flops::cholesky(self.b.len());
+        effort.factorisations += 1;
+        let m = self.b.len();
+        let mut shift = 0.0;
+        for _ in 0..8 {
+            dense::copy_into(self.schur.as_ref(), self.factor.as_mut());
+            if shift > 0.0 {
+                for i in 0..m {
+                    self.factor[(i, i)] += shift * self.schur[(i, i)].max(f64::MIN_POSITIVE);
+                }
+            }
+            if cholesky::factor_in_place(self.factor.as_mut(), &mut self.ws).is_ok() {
+                self.perturbed = shift > 0.0;
+                return true;
+            }
+            shift = if shift == 0.0 { 1e-15 } else { shift * 30.0 };
+        }
+        false
+    }
+
+    /// Solves M dy = rhs with the factor, refined against M itself.
+    fn solve_schur(&mut self) {
+        let m = self.b.len();
+        self.dy.copy_from_slice(&self.rhs);
+        cholesky::solve_vector(self.factor.as_ref(), &mut self.dy);
+        let scale = norm2(&self.rhs);
+        if m == 0 || scale == 0.0 {
+            return;
+        }
+        if self.perturbed {
+            let mut operator = crate::linalg::lanczos::DenseOperator { matrix: self.schur.as_ref() };
+            let factor = self.factor.as_ref();
+            let params = cg::Params { tolerance: 1e-14, max_steps: 60 };
+            let mut preconditioner = FactorInverse { factor };
+            let (rhs, dy, work) = (&self.rhs, &mut self.dy, &mut self.cg);
+            cg::solve_preconditioned(&mut operator, &mut preconditioner, rhs, dy, &params, work);
+            return;
+        }
+        let mut last = f64::INFINITY;
+        for _ in 0..3 {
+            self.correction.copy_from_slice(&self.rhs);
+            dense::gemv(&mut self.correction, Accumulate::Add, -1.0, self.schur.as_ref(), &self.dy);
+            let size = norm2(&self.correction);
+            if size <= 1e-15 * scale || size > 0.5 * last {
+                return;
+            }
+            last = size;
+            cholesky::solve_vector(self.factor.as_ref(), &mut self.correction);
+            for (value, change) in self.dy.iter_mut().zip(&self.correction) {
+                *value += change;
+            }
+        }
+    }
+
+    /// Computes the part of the right sides that predictor and corrector share:
+    /// `b + A(X R_d S^-1) + A_l (x/z R_dl)`.
+    fn shared_rhs(&mut self, dual_residual: f64) {
+        self.base.copy_from_slice(&self.b);
+        if dual_residual < 1e-14 {
+            return;
+        }
+        for (index, state) in self.blocks.iter_mut().enumerate() {
+            slack_times_dense(&state.rd, &state.x, Accumulate::Replace, &mut state.t);
+            let block = &self.op.blocks[index];
+            add_product(block, state, self.by_entries[index], 1.0, &mut self.base);
+        }
+        for (row, value) in self.op.orthant_rows.iter().zip(self.base.iter_mut()) {
+            *value += row.iter().map(|(j, a)| a * self.ratios[j] * self.rdz[j]).sum::<f64>();
+        }
+    }
+
+    /// Computes the predictor (affine) direction.
+    pub fn predictor(&mut self, dual_residual: f64, effort: &mut Effort) {
+        self.shared_rhs(dual_residual);
+        self.rhs.copy_from_slice(&self.base);
+        self.solve_schur();
+        self.dual_directions();
+        for state in &mut self.blocks {
+            slack_times_dense(&state.ds, &state.x, Accumulate::Replace, &mut state.t);
+            close_direction(state, 0.0);
+        }
+        for j in 0..self.x.len() {
+            self.dx[j] = -self.x[j] - self.ratios[j] * self.dz[j];
+        }
+        self.count_products(effort);
+    }
+
+    /// Computes the corrector direction for the target `sigma_mu`, from the predictor's directions.
+    pub fn corrector(&mut self, sigma_mu: f64, effort: &mut Effort) {
+        self.rhs.copy_from_slice(&self.base);
+        for index in 0..self.blocks.len() {
+            let block = &self.op.blocks[index];
+            let state = &mut self.blocks[index];
+            self.image.fill(0.0);
+            block.add_dense(state.si.as_ref(), &mut self.image);
+            for (value, image) in self.rhs.iter_mut().zip(&self.image) {
+                *value -= sigma_mu * image;
+            }
+            slack_times_dense(&state.ds, &state.dx, Accumulate::Replace, &mut state.t);
+            add_product(block, state, self.by_entries[index], 1.0, &mut self.rhs);
+        }
+        for j in 0..self.x.len() {
+            self.second[j] = (sigma_mu - self.dx[j] * self.dz[j]) / self.z[j];
+        }
+        let second = &self.second;
+        for (row, value) in self.op.orthant_rows.iter().zip(self.rhs.iter_mut()) {
+            *value -= row.iter().map(|(j, a)| a * second[j]).sum::<f64>();
+        }
+        self.solve_schur();
+        self.dual_directions();
+        for state in &mut self.blocks {
+            slack_times_dense(&state.ds, &state.x, Accumulate::Add, &mut state.t);
+            close_direction(state, sigma_mu);
+        }
+        for j in 0..self.x.len() {
+            self.dx[j] = self.second[j] - self.x[j] - self.ratios[j] * self.dz[j];
+        }
+        self.count_products(effort);
+    }
+
+    /// Sets dS = R_d - A*(dy) in every block and the nonnegative part.
+    fn dual_directions(&mut self) {
+        for (block, state) in self.op.blocks.iter().zip(&mut self.blocks) {
+            fill_full(block, &self.dy, 0.0, &mut state.ds, &mut state.outer_scratch);
+            add_scaled(1.0, &state.rd, &mut state.ds);
+        }
+        self.dz.copy_from_slice(&self.rdz);
+        for (row, dy) in self.op.orthant_rows.iter().zip(&self.dy) {
+            for (index, value) in row.iter() {
+                self.dz[index] -= value * dy;
+            }
+        }
+    }
+
+    /// Returns the steps to the boundary of the current directions.
+    pub fn reach(&mut self, effort: &mut Effort) -> Reach {
+        let mut reach = Reach { primal: f64::INFINITY, dual: f64::INFINITY };
+        for state in &mut self.blocks {
+            self.reach_calls += 2;
+            reach.primal = reach.primal.min(state.reach_x(self.reach_calls));
+            reach.dual = reach.dual.min(state.reach_s(self.reach_calls + 1));
+            effort.flops += 8 * 20 * (state.order * state.order) as u64;
+        }
+        reach.primal = reach.primal.min(orthant_reach(&self.x, &self.dx));
+        reach.dual = reach.dual.min(orthant_reach(&self.z, &self.dz));
+        reach
+    }
+
+    /// Returns <X + a dX, S + b dS> + (x + a dx)'(z + b dz).
+    pub fn trial_complementarity(&self, a: f64, b: f64) -> f64 {
+        let mut total = 0.0;
+        for state in &self.blocks {
+            total += inner(&state.x, &state.s) + a * inner(&state.dx, &state.s);
+            total += b * (inner(&state.x, &state.ds) + a * inner(&state.dx, &state.ds));
+        }
+        total
+            + (0..self.x.len())
+                .map(|j| (self.x[j] + a * self.dx[j]) * (self.z[j] + b * self.dz[j]))
+                .sum::<f64>()
+    }
+
+    /// Moves by the given steps, shortened until X and S factor; returns the steps taken, or none
+    /// when no positive step keeps the cone.
+    pub fn advance(&mut self, mut a: f64, mut b: f64, effort: &mut Effort) -> Option<(f64, f64)> {
+        for state in &mut self.blocks {
+            dense::axpy_matrix(a, state.dx.as_ref(), state.x.as_mut());
+            add_scaled(b, &state.ds, &mut state.s);
+            effort.flops += 2 * flops::cholesky(state.order);
+            effort.factorisations += 2;
+        }
+        let mut taken = None;
+        for _ in 0..12 {
+            let primal = self.blocks.iter_mut().all(|state| state.factor_x(&mut self.ws));
+            let dual = self.blocks.iter_mut().all(|state| state.factor_s(&mut self.ws));
+            if primal && dual {
+                taken = Some((a, b));
+                break;
+            }
+            if !primal {
+                let shorter = 0.7 * a;
+                for state in &mut self.blocks {
+                    dense::axpy_matrix(shorter - a, state.dx.as_ref(), state.x.as_mut());
+                }
+                a = shorter;
+            }
+            if !dual {
+                let shorter = 0.7 * b;
+                for state in &mut self.blocks {
+                    add_scaled(shorter - b, &state.ds, &mut state.s);
+                }
+                b = shorter;
+            }
+        }
+        taken?;
+        for j in 0..self.x.len() {
+            self.x[j] += a * self.dx[j];
+            self.z[j] += b * self.dz[j];
+        }
+        for (y, dy) in self.y.iter_mut().zip(&self.dy) {
+            *y += b * dy;
+        }
+        taken
+    }
+
+    fn count_products(&self, effort: &mut Effort) {
+        effort.operator_products += 2;
+        effort.flops += self
+            .blocks
+            .iter()
+            .map(|state| 2 * flops::gemm(state.order, state.order, state.order))
+            .sum::<u64>();
+        effort.flops += 4 * (self.b.len() * self.b.len()) as u64;
+    }
+}
+
+/// The Cholesky factor of the Schur complement as a preconditioner.
+struct FactorInverse<'a> {
+    factor: MatRef<'a, f64>,
+}
+
+impl LinearOperator for FactorInverse<'_> {
+    fn order(&self) -> usize {
+        self.factor.nrows()
+    }
+
+    fn apply(&mut self, x: &[f64], y: &mut [f64]) {
+        y.copy_from_slice(x);
+        cholesky::solve_vector(self.factor, y);
+    }
+}
+
+/// Fills a slack with `cost_scale C - A*(y)`, long outer products multiplied into a dense store.
+pub(super) fn fill_full(
+    block: &BlockOperator,
+    y: &[f64],
+    cost_scale: f64,
+    slack: &mut Slack,
+    scratch: &mut Mat<f64>,
+) {
+    block.fill_slack(y, cost_scale, slack);
+    let Some(outer) = &block.outer else { return };
+    if let SlackStore::Dense(matrix) = &mut slack.store {
+        for (k, weight) in slack.outer_weights.iter_mut().enumerate() {
+            let target = scratch.col_as_slice_mut(k);
+            for (value, source) in target.iter_mut().zip(outer.vectors.col_as_slice(k)) {
+                *value = *weight * source;
+            }
+            *weight = 0.0;
+        }
+        let vectors_t = outer.vectors.transpose();
+        dense::gemm(matrix.as_mut(), Accumulate::Add, 1.0, scratch.as_ref(), vectors_t);
+    }
+}
+
+/// Sets dX = -X + sigma_mu S^-1 - sym(T' S^-1).
+fn close_direction(state: &mut BlockState, sigma_mu: f64) {
+    dense::gemm(
+        state.dx.as_mut(),
+        Accumulate::Replace,
+        -1.0,
+        state.t.transpose(),
+        state.si.as_ref(),
+    );
+    dense::symmetrise(state.dx.as_mut());
+    dense::axpy_matrix(-1.0, state.x.as_ref(), state.dx.as_mut());
+    if sigma_mu != 0.0 {
+        dense::axpy_matrix(sigma_mu, state.si.as_ref(), state.dx.as_mut());
+    }
+}
+
+/// Adds `scale * <A_i, T' S^-1>` to `out[i]`.
+fn add_product(
+    block: &BlockOperator,
+    state: &mut BlockState,
+    by_entries: bool,
+    scale: f64,
+    out: &mut [f64],
+) {
+    if by_entries {
+        add_product_by_entries(block, &state.t, &state.si, scale, out);
+        return;
+    }
+    let t: MatRef<'_, f64> = state.t.transpose();
+    dense::gemm(state.p.as_mut(), Accumulate::Replace, scale, t, state.si.as_ref());
+    dense::symmetrise(state.p.as_mut());
+    block.add_dense(state.p.as_ref(), out);
+}
+
+/// Whether <A_i, T'S^-1> is cheaper by one dot per entry than by a full product: the product costs
+/// 2 n^3 flops at about ten times the rate of the dots.
+fn single_entries_are_cheaper(block: &BlockOperator) -> bool {
+    let n = block.order;
+    block.outer.is_none() && 10 * 4 * block.entries.values.len() < 2 * n * n
+}
+
+fn orthant_reach(x: &[f64], dx: &[f64]) -> f64 {
+    x.iter()
+        .zip(dx)
+        .filter(|(_, step)| **step < 0.0)
+        .map(|(value, step)| -value / step)
+        .fold(f64::INFINITY, f64::min)
+}
