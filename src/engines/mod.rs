@@ -2,3 +2,4 @@
 //! the referee; each has `Params`, `Info` and an error or outcome of its own.
 
 pub mod ipm;
+pub mod reduction;

@@ -45,7 +45,7 @@ pub(super) struct State {
     cg: cg::CgWorkspace,
     pub ws: Workspace,
     /// Whether the Schur factor was perturbed in this iteration.
-    perturbed: bool,
+    pub perturbed: bool,
     reach_calls: u64,
 }
 
@@ -260,6 +260,48 @@ impl State {
             self.dx[j] = self.second[j] - self.x[j] - self.ratios[j] * self.dz[j];
         }
         self.count_products(effort);
+    }
+
+    /// Refines (dX, dy, dS) so that A(dX) = r_p: rounding in dX grows like 1/mu and would otherwise
+    /// feed the primal residual. The correction solves the same system for the residual as measured
+    /// on dX itself. Uses R_d as workspace.
+    pub fn refine(&mut self, floor: f64, effort: &mut Effort) {
+        let mut last = f64::INFINITY;
+        for _ in 0..3 {
+            self.op.apply_orthant(&self.dx, &mut self.image);
+            for (block, state) in self.op.blocks.iter().zip(&self.blocks) {
+                block.add_dense(state.dx.as_ref(), &mut self.image);
+            }
+            for ((r, rp), image) in self.rhs.iter_mut().zip(&self.rp).zip(&self.image) {
+                *r = rp - image;
+            }
+            let size = norm2(&self.rhs);
+            if size <= floor.max(1e-3 * norm2(&self.rp)) || size > 0.5 * last {
+                return;
+            }
+            last = size;
+            self.base.copy_from_slice(&self.dy);
+            self.solve_schur();
+            for (block, state) in self.op.blocks.iter().zip(&mut self.blocks) {
+                fill_full(block, &self.dy, 0.0, &mut state.rd, &mut state.outer_scratch);
+                add_scaled(1.0, &state.rd, &mut state.ds);
+                slack_times_dense(&state.rd, &state.x, Accumulate::Replace, &mut state.t);
+                let t = state.t.transpose();
+                dense::gemm(state.p.as_mut(), Accumulate::Replace, -1.0, t, state.si.as_ref());
+                dense::symmetrise(state.p.as_mut());
+                dense::axpy_matrix(1.0, state.p.as_ref(), state.dx.as_mut());
+            }
+            for (row, dy) in self.op.orthant_rows.iter().zip(&self.dy) {
+                for (index, value) in row.iter() {
+                    self.dz[index] -= value * dy;
+                    self.dx[index] += self.ratios[index] * value * dy;
+                }
+            }
+            for (dy, base) in self.dy.iter_mut().zip(&self.base) {
+                *dy += base;
+            }
+            self.count_products(effort);
+        }
     }
 
     /// Sets dS = R_d - A*(dy) in every block and the nonnegative part.

@@ -15,6 +15,8 @@ use crate::problem::{Operator, Problem, SlackStore};
 const INFEASIBLE: f64 = 1e-8;
 /// Steps below this end the loop.
 const TINY_STEP: f64 = 1e-7;
+/// Residuals of a direction below this share of `1 + ||b||` are not refined.
+const REFINE_BELOW: f64 = 1e-13;
 /// Iterations without a better iterate that end the loop.
 const PATIENCE: usize = 12;
 
@@ -168,6 +170,7 @@ impl Run<'_> {
                 figures = self.figures();
             }
             self.trace(&figures, meter);
+            if std::env::var("DBG").is_ok() { eprintln!("{iteration:3} rp {:.1e} rd {:.1e} gap {:.1e} p {:.8e} d {:.8e} mu {:.1e} steps {:?} pert {}", figures.residuals.primal, figures.residuals.dual, figures.residuals.gap, figures.primal*self.scaling.rhs*self.scaling.cost, figures.dual*self.scaling.rhs*self.scaling.cost, self.state.mu, self.steps, self.state.perturbed); }
             if may_stop {
                 self.keep_best(&figures, iteration, hook.is_none());
             } else {
@@ -211,6 +214,7 @@ impl Run<'_> {
         let predicted = state.trial_complementarity(a, b) / state.pairs();
         let sigma = centring(mu, predicted, a.min(b));
         state.corrector(sigma * mu, effort);
+        state.refine(REFINE_BELOW * (1.0 + self.b_norm), effort);
         let reach = state.reach(effort);
         let g = 0.9 + 0.09 * a.min(b);
         let (a, b) = ((g * reach.primal).min(1.0), (g * reach.dual).min(1.0));
