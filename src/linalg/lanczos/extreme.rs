@@ -10,9 +10,6 @@ use faer::diag::DiagMut;
 use faer::linalg::evd::{ComputeEigenvectors, self_adjoint_evd, self_adjoint_evd_scratch};
 use faer::{Mat, MatMut, MatRef, Par};
 
-/// Weight of pseudo-random noise in a given start vector: a start that is an exact eigenvector must not hide the others.
-const START_NOISE: f64 = 1e-3;
-
 /// Least steps before convergence is believed, again for starts near a wrong eigenvector.
 const LEAST_STEPS: usize = 8;
 
@@ -27,12 +24,17 @@ const ROW_BLOCK: usize = 256;
 pub struct ExtremeParams<'a> {
     /// Accepts (theta, y) when ||A y - theta y||_2 <= max(tolerance, 4 eps) * max(1, norm), norm being the largest |Ritz value| met.
     pub tolerance: f64,
-    /// Most applications of the operator.
+    /// Most applications of the operator, but for the one that measures the residual at the end.
     pub max_steps: usize,
     /// Most basis vectors held at once, at least 4 (smaller is taken as 4); 40 to 60 suit hard spectra.
     pub basis: usize,
     /// Known vectors (columns, not necessarily orthonormal) to whose orthogonal complement the operator is confined.
     pub deflate: Option<MatRef<'a, f64>>,
+    /// Norm of the pseudo-random vector that is added to a given start of norm 1.
+    ///
+    /// A start at or near a wrong eigenvector hides a lower eigenvalue whose distance times noise / sqrt n is below the residual
+    /// allowed. The default 1 is safe; smaller values keep more of a good start.
+    pub start_noise: f64,
     /// Number that chooses the pseudo-random parts.
     pub seed: u64,
 }
@@ -44,6 +46,7 @@ impl Default for ExtremeParams<'_> {
             max_steps: 5_000,
             basis: 48,
             deflate: None,
+            start_noise: 1.0,
             seed: 0,
         }
     }
@@ -248,18 +251,20 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
         self.params.tolerance.max(4.0 * f64::EPSILON) * self.norm_estimate.max(1.0)
     }
 
-    /// Sets the first basis vector: the given start with a little noise, outside the deflated space.
+    /// Sets the first basis vector: the given start with the noise asked for, outside the deflated space.
     fn place_start(&mut self, start: &[f64]) {
         let n = self.n;
         self.place_random(0);
         let given = if start.is_empty() { 0.0 } else { norm2(start) };
         if given > 0.0 && given.is_finite() {
             let first = &mut self.ws.basis[..n];
-            scale(START_NOISE, first);
+            scale(self.params.start_noise, first);
             axpy(given.recip(), start, first);
             remove_components(&self.ws.deflated, n, &mut self.ws.basis[..n]);
             remove_components(&self.ws.deflated, n, &mut self.ws.basis[..n]);
-            normalise(&mut self.ws.basis[..n]);
+            if normalise(&mut self.ws.basis[..n]) <= 1e-10 {
+                self.place_random(0);
+            }
         }
     }
 
