@@ -1,10 +1,14 @@
 //! The problem model: blocks, symmetric coefficients, the constraint operator, points and exact
 //! certificates. Nothing here solves or judges.
 
+pub mod canonical;
+pub mod certificate;
+pub mod exact;
 pub mod operator;
 pub mod point;
 pub mod symmetric;
 
+pub use certificate::{Certificate, CertificateError, Planted, Proof, Uniqueness};
 pub use operator::Operator;
 pub use point::{Answer, BlockPoint, Factor, Point, StopReason};
 pub use symmetric::{Coefficient, OuterSum, OuterTerm, SparseSymmetric, SparseVector};
