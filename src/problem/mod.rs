@@ -1,11 +1,15 @@
 //! The problem model: blocks, symmetric coefficients, the constraint operator, points and exact
 //! certificates. Nothing here solves or judges.
 
+pub mod canonical;
+pub mod certificate;
+pub mod exact;
 pub mod operator;
 pub mod pattern;
 pub mod point;
 pub mod symmetric;
 
+pub use certificate::{Certificate, CertificateError, Planted, Proof, Uniqueness};
 pub use operator::{BlockOperator, Operator, Slack, SlackStore};
 pub use pattern::Pattern;
 pub use point::{Answer, BlockPoint, Factor, Point, StopReason};
