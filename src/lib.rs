@@ -15,7 +15,9 @@
 pub mod budget;
 pub mod card;
 pub mod families;
+pub mod formats;
 pub mod linalg;
 pub mod methods;
 pub mod problem;
+pub mod referee;
 pub mod seed;
