@@ -15,8 +15,10 @@
 pub mod budget;
 pub mod card;
 pub mod engines;
-
+pub mod families;
+pub mod formats;
 pub mod linalg;
 pub mod methods;
 pub mod problem;
+pub mod referee;
 pub mod seed;
