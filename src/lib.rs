@@ -18,4 +18,8 @@ pub mod families;
 pub mod linalg;
 pub mod methods;
 pub mod problem;
+pub mod record;
+pub mod referee;
+pub mod runner;
 pub mod seed;
+pub mod tables;
