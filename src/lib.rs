@@ -14,11 +14,15 @@
 
 pub mod budget;
 pub mod card;
+pub mod cli;
 pub mod engines;
 pub mod families;
 pub mod formats;
 pub mod linalg;
 pub mod methods;
 pub mod problem;
+pub mod record;
 pub mod referee;
+pub mod runner;
 pub mod seed;
+pub mod tables;

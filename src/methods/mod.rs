@@ -4,6 +4,8 @@
 //! see the problem, their target ranks, their budget and their random stream, never the planted
 //! point or the certificate.
 
+pub mod relax_ipm;
+
 use crate::budget::{Halt, Meter};
 use crate::card::{MethodCard, Settings};
 use crate::problem::{Answer, Problem};
@@ -34,7 +36,7 @@ pub trait Method: Sync {
 
 /// Lists every built-in method, in alphabetical order of id.
 pub fn registry() -> &'static [&'static dyn Method] {
-    &[]
+    &[&relax_ipm::RelaxIpm]
 }
 
 /// Finds a built-in method by its id.

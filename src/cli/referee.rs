@@ -1,0 +1,101 @@
+//! `rankassay referee`.
+
+use std::path::PathBuf;
+
+use clap::Args;
+use serde_json::json;
+
+use super::Ended;
+use super::output::say_and_end;
+use super::report::Failure;
+use crate::formats::solution;
+use crate::record::measured;
+use crate::referee::{Finding, Judgement, Tolerance, judge};
+use crate::runner::read_instance;
+
+#[derive(Debug, Args)]
+pub(super) struct Referee {
+    /// Instance file: native, or sparse SDPA (.dat-s)
+    instance: PathBuf,
+    /// Solution file
+    solution: PathBuf,
+    /// Puts this rank bound on every block
+    #[arg(long, value_name = "R", value_parser = clap::value_parser!(u32).range(1..))]
+    rank: Option<u32>,
+    /// Writes JSON
+    #[arg(long)]
+    json: bool,
+}
+
+pub(super) fn execute(command: &Referee) -> Ended {
+    let mut instance = read_instance(&command.instance)?;
+    if let Some(rank) = command.rank {
+        instance = instance.with_rank(rank as usize, &command.instance.display().to_string())?;
+    }
+    let read = solution::read(&command.solution, &instance.problem).map_err(|error| Failure::from(&error))?;
+    let known = instance.knowledge.known();
+    let judgement = judge(&instance.problem, &read.answer, &known, &Tolerance::default())
+        .map_err(|contradiction| Failure::defect(format!("internal error: {contradiction}")))?;
+    let optimum = instance.knowledge.optimum_value();
+    say_and_end(&if command.json { as_json(&judgement, optimum) } else { as_text(&judgement, optimum) })
+}
+
+fn word(finding: Finding) -> &'static str {
+    match finding {
+        Finding::Solved => "solved",
+        Finding::Near => "near",
+        Finding::Suboptimal => "suboptimal",
+        Finding::Feasible => "feasible",
+        Finding::Infeasible => "infeasible",
+        Finding::Malformed => "malformed",
+    }
+}
+
+/// Lists the figures by their names in `trials.csv`.
+fn figures(judgement: &Judgement, optimum: Option<f64>) -> Vec<(&'static str, Option<f64>)> {
+    let rank = |at: usize| judgement.ranks.map(|ranks| ranks[at] as f64);
+    vec![
+        ("digits", judgement.digits),
+        ("feasibility", judgement.feasibility),
+        ("min_eigenvalue", judgement.min_eigenvalue),
+        ("objective", judgement.objective),
+        ("optimum", optimum),
+        ("objective_error", judgement.objective_error),
+        ("distance", judgement.distance),
+        ("rank_at_1e-4", rank(0)),
+        ("rank_at_1e-6", rank(1)),
+        ("rank_at_1e-8", rank(2)),
+        ("tail_ratio", judgement.tail_ratio),
+        ("restored_feasibility", judgement.restored_feasibility),
+        ("restored_objective_error", judgement.restored_objective_error),
+        ("raw_feasibility", judgement.raw_feasibility),
+        ("raw_objective", judgement.raw_objective),
+        ("lower_bound", judgement.lower_bound),
+    ]
+}
+
+fn as_json(judgement: &Judgement, optimum: Option<f64>) -> String {
+    let mut value = json!({ "verdict": word(judgement.finding), "reason": judgement.reason });
+    for (name, figure) in figures(judgement, optimum) {
+        value[name] = json!(figure.and_then(measured));
+    }
+    value["dimacs"] = json!(judgement.dimacs);
+    format!("{}\n", serde_json::to_string_pretty(&value).expect("the figures are plain data"))
+}
+
+fn as_text(judgement: &Judgement, optimum: Option<f64>) -> String {
+    let mut out = format!("{:<25} {}\n", "verdict", word(judgement.finding));
+    if !judgement.reason.is_empty() {
+        out += &format!("{:<25} {}\n", "reason", judgement.reason);
+    }
+    for (name, figure) in figures(judgement, optimum) {
+        if let Some(value) = figure.and_then(measured) {
+            out += &format!("{name:<25} {value:?}\n");
+        }
+    }
+    if let Some(errors) = judgement.dimacs {
+        let errors: Vec<String> = errors.iter().map(|error| format!("{error:.1e}")).collect();
+        out += &format!("{:<25} {}\n", "DIMACS errors", errors.join(" "));
+    }
+    out
+}

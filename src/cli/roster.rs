@@ -1,0 +1,187 @@
+//! `rankassay roster`.
+
+use clap::{Args, ValueEnum};
+use serde_json::{Value, json};
+
+use super::Ended;
+use super::output::say_and_end;
+use super::report::Failure;
+use crate::card::{FamilyCard, MethodCard, SettingSpec, nearest_word};
+use crate::{families, methods};
+
+#[derive(Clone, Copy, Debug, PartialEq, Eq, ValueEnum)]
+enum Kind {
+    Families,
+    Methods,
+}
+
+#[derive(Debug, Args)]
+pub(super) struct RosterCommand {
+    /// Lists only these
+    kind: Option<Kind>,
+    /// Shows the whole card of this one
+    name: Option<String>,
+    /// Writes JSON
+    #[arg(long)]
+    json: bool,
+}
+
+enum Card {
+    Family(&'static FamilyCard),
+    Method(&'static MethodCard),
+}
+
+pub(super) fn execute(command: &RosterCommand) -> Ended {
+    let mut cards = Vec::new();
+    if command.kind != Some(Kind::Methods) {
+        cards.extend(families::registry().iter().map(|family| Card::Family(family.card())));
+    }
+    if command.kind != Some(Kind::Families) {
+        cards.extend(methods::registry().iter().map(|method| Card::Method(method.card())));
+    }
+    if let Some(name) = &command.name {
+        let known: Vec<&str> = cards.iter().map(Card::id).collect();
+        let Some(card) = cards.iter().find(|card| card.id() == name) else {
+            let hint = nearest_word(name, known.iter().copied());
+            let hint = hint.map_or(String::new(), |word| format!(" (did you mean `{word}`?)"));
+            return Err(Failure::input(format!("unknown name `{name}`, expected one of {}{hint}", known.join(", "))));
+        };
+        return if command.json { say_json(&card.json()) } else { say_and_end(&card.text()) };
+    }
+    if command.json {
+        return say_json(&Value::Array(cards.iter().map(Card::json).collect()));
+    }
+    say_and_end(&list(&cards))
+}
+
+fn say_json(value: &Value) -> Ended {
+    let text = serde_json::to_string_pretty(value).expect("cards are plain data");
+    say_and_end(&format!("{text}\n"))
+}
+
+fn list(cards: &[Card]) -> String {
+    let width = cards.iter().map(|card| card.id().len()).max().unwrap_or(0);
+    let mut out = String::new();
+    for (heading, wanted) in [("Families", true), ("Methods", false)] {
+        let group: Vec<_> = cards.iter().filter(|card| matches!(card, Card::Family(_)) == wanted).collect();
+        if !group.is_empty() {
+            out += &format!("{heading}\n");
+            for card in group {
+                out += &format!("  {:<width$}  {} ({})\n", card.id(), card.title(), card.class());
+            }
+        }
+    }
+    out
+}
+
+impl Card {
+    fn id(&self) -> &'static str {
+        match self {
+            Card::Family(card) => card.id,
+            Card::Method(card) => card.id,
+        }
+    }
+
+    fn title(&self) -> &'static str {
+        match self {
+            Card::Family(card) => card.title,
+            Card::Method(card) => card.title,
+        }
+    }
+
+    fn class(&self) -> &'static str {
+        match self {
+            Card::Family(card) => card.relaxation.word(),
+            Card::Method(card) => card.class.word(),
+        }
+    }
+
+    /// Lists what the card says, name and sentence.
+    fn lines(&self) -> Vec<(&'static str, &'static str)> {
+        match self {
+            Card::Family(card) => vec![
+                ("kind", "family"),
+                ("id", card.id),
+                ("title", card.title),
+                ("class", card.relaxation.word()),
+                ("source", card.source),
+                ("formula", card.formula),
+                ("construction", card.construction),
+                ("optimum", card.optimum),
+                ("certificate", card.certificate),
+            ],
+            Card::Method(card) => vec![
+                ("kind", "method"),
+                ("id", card.id),
+                ("title", card.title),
+                ("class", card.class.word()),
+                ("source", card.reference),
+                ("needs", card.needs),
+                ("cost", card.cost),
+                ("guarantees", card.guarantees),
+                ("failures", card.failures),
+            ],
+        }
+    }
+
+    fn settings(&self) -> (&'static str, &'static [SettingSpec]) {
+        match self {
+            Card::Family(card) => ("parameters", card.parameters),
+            Card::Method(card) => ("options", card.options),
+        }
+    }
+
+    fn json(&self) -> Value {
+        let mut object: serde_json::Map<String, Value> =
+            self.lines().into_iter().map(|(name, text)| (name.to_owned(), json!(text))).collect();
+        let (name, specs) = self.settings();
+        let specs: Vec<Value> = specs
+            .iter()
+            .map(|spec| {
+                json!({
+                    "name": spec.name,
+                    "values": spec.kind.to_string(),
+                    "default": spec.default.setting().to_string(),
+                    "meaning": spec.meaning,
+                })
+            })
+            .collect();
+        object.insert(name.to_owned(), Value::Array(specs));
+        Value::Object(object)
+    }
+
+    fn text(&self) -> String {
+        let mut out = format!("{}: {}\n\n", self.id(), self.title());
+        for (name, text) in self.lines().into_iter().skip(3) {
+            out += &format!("{name}:\n{}", indented(text));
+        }
+        let (name, specs) = self.settings();
+        out += &format!("{name}:\n");
+        for spec in specs {
+            let head = format!("{} ({}; default {})", spec.name, spec.kind, spec.default.setting());
+            out += &format!("  {head}\n{}", indented(spec.meaning).replace("  ", "    "));
+        }
+        if specs.is_empty() {
+            out += "  none\n";
+        }
+        out
+    }
+}
+
+/// Wraps a text to lines of at most 100 characters, indented by two.
+fn indented(text: &str) -> String {
+    let mut out = String::new();
+    for paragraph in text.lines() {
+        let mut line = String::from(" ");
+        for word in paragraph.split_whitespace() {
+            if line.len() > 1 && line.chars().count() + 1 + word.chars().count() > 98 {
+                out += &format!("{line}\n");
+                line = String::from(" ");
+            }
+            line.push(' ');
+            line.push_str(word);
+        }
+        out += &format!("{line}\n");
+    }
+    out
+}

@@ -1,0 +1,173 @@
+//! `rankassay run`.
+
+use std::path::{Path, PathBuf};
+use std::process::ExitCode;
+use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
+
+use clap::Args;
+
+use super::output::{say, tell};
+use super::progress::{Bar, Progress};
+use super::report::Failure;
+use super::{Ended, Loudness, tabulate};
+use crate::runner::{
+    self, Ending, Outcome, Pattern, Plan, Roster, RunOptions, Selection, Shard, Target, latest_folder,
+};
+use crate::tables;
+
+/// Exit code of a run some of whose trials could not be judged.
+const UNJUDGED: u8 = 3;
+
+/// Exit code of an interrupted run.
+const INTERRUPTED: u8 = 130;
+
+/// Folder that holds the run folders when none is given.
+const RUNS: &str = "runs";
+
+#[derive(Debug, Args)]
+pub(super) struct Run {
+    /// Plan file (TOML)
+    plan: PathBuf,
+    /// Run folder; left out, a fresh folder runs/NAME-1, runs/NAME-2, ... is made
+    #[arg(long, value_name = "DIR")]
+    into: Option<PathBuf>,
+    /// Number of trials at a time [default: one for each core]
+    #[arg(long, value_name = "N", value_parser = clap::value_parser!(u16).range(1..=1024))]
+    jobs: Option<u16>,
+    /// Runs only the trials whose `INSTANCE METHOD` contains the text, or matches it when it has * or ?
+    #[arg(long, value_name = "PATTERN")]
+    only: Option<String>,
+    /// Goes on with a run that was interrupted; without --into, with the latest of this plan
+    #[arg(long)]
+    resume: bool,
+    /// Runs part I of N parts of the plan; all trials of an instance are in one part
+    #[arg(long, value_name = "I/N")]
+    shard: Option<String>,
+}
+
+pub(super) fn execute(command: &Run, loudness: Loudness, bar: Bar) -> Ended {
+    let file_name = command.plan.display().to_string();
+    let text = read_plan(&command.plan)?;
+    let folder = command.plan.parent().unwrap_or(Path::new(""));
+    let plan = Plan::parse(&text, &file_name, folder, Roster::built_in()).map_err(|error| Failure::from(&error))?;
+    let shard = command.shard.as_ref().map(|text| text.parse::<Shard>()).transpose();
+    let shard = shard.map_err(|reason| Failure::input(format!("--shard: {reason}")))?;
+    let interrupt = Arc::new(AtomicBool::new(false));
+    listen(&interrupt)?;
+    let options = RunOptions {
+        target: target(command)?,
+        jobs: command.jobs.map(usize::from),
+        selection: Selection { only: command.only.as_deref().map(Pattern::new), shard },
+        interrupt,
+    };
+    let progress = Progress::new(loudness, bar);
+    let outcome = runner::run(&plan, &options, &progress);
+    progress.end();
+    let outcome = outcome?;
+    if outcome.ending == Ending::Interrupted {
+        tell(&interrupted(command, &outcome));
+        return Ok(ExitCode::from(INTERRUPTED));
+    }
+    finish(&outcome, loudness)
+}
+
+fn read_plan(path: &Path) -> Result<String, Failure> {
+    let bytes = std::fs::read(path).map_err(|error| Failure::input(format!("{}: {error}", path.display())))?;
+    String::from_utf8(bytes).map_err(|error| {
+        let valid = error.utf8_error().valid_up_to();
+        let line = error.as_bytes()[..valid].iter().filter(|byte| **byte == b'\n').count() + 1;
+        Failure::input(format!("{}:{line}: the file is not text in UTF-8", path.display()))
+    })
+}
+
+fn target(command: &Run) -> Result<Target, Failure> {
+    let stem = command.plan.file_stem().unwrap_or_default().to_string_lossy().into_owned();
+    match (&command.into, command.resume) {
+        (Some(folder), false) => Ok(Target::New(folder.clone())),
+        (Some(folder), true) => Ok(Target::Resume(folder.clone())),
+        (None, false) => Ok(Target::Numbered { parent: PathBuf::from(RUNS), stem }),
+        (None, true) => latest_folder(Path::new(RUNS), &stem).map(Target::Resume).ok_or_else(|| {
+            Failure::input(format!("there is no {RUNS}/{stem}-* to resume; name the run folder by --into"))
+        }),
+    }
+}
+
+/// Sets the flag on Ctrl-C or a request to end; a second one ends the process at once, which the
+/// journal survives.
+fn listen(interrupt: &Arc<AtomicBool>) -> Result<(), Failure> {
+    let flag = Arc::clone(interrupt);
+    let handler = move || {
+        if flag.swap(true, Ordering::Relaxed) {
+            std::process::exit(i32::from(INTERRUPTED));
+        }
+        tell("interrupted: waiting for the running trials to notice (again to end at once)");
+    };
+    ctrlc::set_handler(handler).map_err(|error| Failure::input(format!("signals cannot be handled: {error}")))
+}
+
+/// Says how far the run came and how to go on.
+fn interrupted(command: &Run, outcome: &Outcome) -> String {
+    let mut words = vec![std::env::args().next().unwrap_or_else(|| "rankassay".to_owned()), "run".to_owned()];
+    words.push(command.plan.display().to_string());
+    words.extend(["--into".to_owned(), outcome.folder.display().to_string(), "--resume".to_owned()]);
+    let mut option = |name: &str, value: Option<String>| {
+        if let Some(value) = value {
+            words.extend([name.to_owned(), value]);
+        }
+    };
+    option("--jobs", command.jobs.map(|jobs| jobs.to_string()));
+    option("--only", command.only.clone());
+    option("--shard", command.shard.clone());
+    let line: Vec<String> = words.iter().map(|word| quoted(word)).collect();
+    format!(
+        "interrupted: {} of {} trials are recorded in {}; go on with\n  {}",
+        outcome.records.len(),
+        outcome.header.trials,
+        outcome.folder.display(),
+        line.join(" ")
+    )
+}
+
+/// Quotes a word for a POSIX shell when it needs it.
+fn quoted(word: &str) -> String {
+    let plain = |c: char| c.is_ascii_alphanumeric() || "-_./=+,:@%".contains(c);
+    if !word.is_empty() && word.chars().all(plain) {
+        word.to_owned()
+    } else {
+        format!("'{}'", word.replace('\'', "'\\''"))
+    }
+}
+
+/// Writes the tables, prints the summary and chooses the exit code.
+fn finish(outcome: &Outcome, loudness: Loudness) -> Ended {
+    let input = tables::Input {
+        records: &outcome.records,
+        instances: &outcome.instances,
+        methods: &outcome.header.methods,
+        wall_limit_s: outcome.header.wall_limit_s,
+        tolerance: outcome.header.tolerance,
+    };
+    tabulate::write_tables(&input, &outcome.folder)?;
+    let unjudged = outcome.records.iter().filter(|record| record.verdict.is_unjudged()).count();
+    if loudness != Loudness::Quiet {
+        say(&format!("{}\nRun folder: {}\n", tables::summary(&input), outcome.folder.display()))?;
+    }
+    if unjudged > 0 {
+        let table = outcome.folder.join("tables").join("failures.md");
+        tell(&format!("{unjudged} trials crashed or gave a malformed answer; see {}", table.display()));
+        return Ok(ExitCode::from(UNJUDGED));
+    }
+    Ok(ExitCode::SUCCESS)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn words_are_quoted_for_a_shell_when_they_need_it() {
+        let words = ["runs/quick-1", "tight* alm", "it's", ""].map(quoted);
+        assert_eq!(words, ["runs/quick-1", "'tight* alm'", "'it'\\''s'", "''"]);
+    }
+}

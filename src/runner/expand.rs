@@ -1,0 +1,237 @@
+//! From a plan to instances and trials with stable ids, in plan order.
+
+use std::collections::{BTreeMap, BTreeSet};
+use std::path::Path;
+
+use rayon::prelude::*;
+
+use super::instance::{Instance, plant, read_instance};
+use super::isolation::guarded;
+use super::journal::Contents;
+use super::plan::{Imported, Plan, Sown};
+use super::schedule::Log;
+use super::selection::Selection;
+use super::{InputError, RunError};
+use crate::families::PlantError;
+use crate::record::{InstanceRecord, Record, RunHeader, SCHEMA};
+
+/// Where an instance comes from.
+#[derive(Clone, Copy, Debug)]
+enum Origin {
+    /// Combination and index within it.
+    Sown(usize, u64),
+    /// Imported file.
+    Imported(usize),
+}
+
+/// An instance of the plan, not planted yet.
+#[derive(Debug)]
+pub(super) struct InstanceSpec {
+    pub(super) id: String,
+    origin: Origin,
+}
+
+/// A trial of the plan.
+#[derive(Debug)]
+pub(super) struct TrialSpec {
+    pub(super) id: String,
+    pub(super) instance: usize,
+    pub(super) entrant: usize,
+    pub(super) repeat: u64,
+}
+
+/// All instances and trials of a plan.
+#[derive(Debug)]
+pub(super) struct Expansion {
+    pub(super) instances: Vec<InstanceSpec>,
+    pub(super) trials: Vec<TrialSpec>,
+}
+
+/// Names a planted instance: family, order and rank, what else differs from its default, index.
+fn sown_id(sown: &Sown<'_>, index: u64) -> String {
+    let card = sown.family.card();
+    let mut id = card.id.to_owned();
+    let mut add = |name: &str| {
+        if let Some(value) = sown.parameters.get(name) {
+            id.push_str(&format!("-{name}={value}"));
+        }
+    };
+    add("order");
+    add("rank");
+    for spec in card.parameters.iter().filter(|spec| spec.name != "order" && spec.name != "rank") {
+        if sown.parameters.get(spec.name) != Some(&spec.default.setting()) {
+            add(spec.name);
+        }
+    }
+    format!("{id}-{index}")
+}
+
+/// Names an imported instance: the stem of its file, and its rank bound.
+fn imported_id(imported: &Imported) -> String {
+    let stem = Path::new(&imported.path).file_name().unwrap_or_default().to_string_lossy();
+    let stem = stem.split('.').next().unwrap_or_default();
+    let plain: String = stem.chars().map(|c| if c.is_alphanumeric() || c == '_' { c } else { '-' }).collect();
+    imported.rank.map_or_else(|| plain.clone(), |rank| format!("{plain}-rank={rank}"))
+}
+
+impl Expansion {
+    /// Expands a plan: instances in plan order; for each instance the methods; for each the repeats.
+    pub(super) fn new(plan: &Plan<'_>) -> Self {
+        let mut instances = Vec::new();
+        for (at, sown) in plan.sown.iter().enumerate() {
+            for index in 0..sown.count {
+                instances.push(InstanceSpec { id: sown_id(sown, index), origin: Origin::Sown(at, index) });
+            }
+        }
+        let mut taken: BTreeSet<String> = instances.iter().map(|instance| instance.id.clone()).collect();
+        for (at, imported) in plan.imported.iter().enumerate() {
+            let plain = imported_id(imported);
+            // Files of one name in different folders.
+            let mut id = plain.clone();
+            let mut number = 2;
+            while !taken.insert(id.clone()) {
+                id = format!("{plain}-{number}");
+                number += 1;
+            }
+            instances.push(InstanceSpec { id, origin: Origin::Imported(at) });
+        }
+        let mut trials = Vec::new();
+        for (at, instance) in instances.iter().enumerate() {
+            for (entrant, method) in plan.entrants.iter().enumerate() {
+                for repeat in 1..=plan.repeats {
+                    let number = trials.len() + 1;
+                    let mut id = format!("{number:04}-{}-{}", instance.id, method.label);
+                    if plan.repeats > 1 {
+                        id.push_str(&format!("-{repeat}"));
+                    }
+                    trials.push(TrialSpec { id, instance: at, entrant, repeat });
+                }
+            }
+        }
+        Expansion { instances, trials }
+    }
+
+    /// Returns what a selection pattern is matched with.
+    pub(super) fn describe(&self, plan: &Plan<'_>, trial: &TrialSpec) -> String {
+        format!("{} {}", self.instances[trial.instance].id, plan.entrants[trial.entrant].label)
+    }
+
+    /// Lists the positions of the selected trials.
+    pub(super) fn select(&self, plan: &Plan<'_>, selection: &Selection) -> Vec<usize> {
+        let takes = |trial: &TrialSpec| {
+            selection.takes(&self.instances[trial.instance].id, &plan.entrants[trial.entrant].label)
+        };
+        (0..self.trials.len()).filter(|at| takes(&self.trials[*at])).collect()
+    }
+
+    /// Plants the first instance of every combination and reads every imported file, so that what is
+    /// impossible is found before anything is written. Returns the imports by path and digest.
+    pub(super) fn check(
+        &self,
+        plan: &Plan<'_>,
+        pool: &rayon::ThreadPool,
+    ) -> Result<Vec<(String, String)>, RunError> {
+        let imports = plan.imported.iter().map(|imported| {
+            let instance = read_imported(imported)?;
+            Ok((imported.path.clone(), instance.record.digest))
+        });
+        let imports = imports.collect::<Result<Vec<_>, InputError>>()?;
+        let verdicts: Vec<Result<(), RunError>> = pool.install(|| {
+            plan.sown.par_iter().map(|sown| try_planting(plan, sown)).collect()
+        });
+        verdicts.into_iter().collect::<Result<Vec<()>, RunError>>()?;
+        Ok(imports)
+    }
+
+    /// Plants or reads an instance and fills in its record.
+    pub(super) fn load(&self, plan: &Plan<'_>, at: usize) -> Result<Instance, RunError> {
+        let spec = &self.instances[at];
+        let mut instance = match spec.origin {
+            Origin::Sown(sown, index) => {
+                let sown = &plan.sown[sown];
+                let planted = guarded(|| plant(sown.family, &sown.parameters, plan.seed, index));
+                let internal = |detail: String| RunError::Internal { trial: spec.id.clone(), detail };
+                let planted = planted
+                    .map_err(|panic| internal(format!("planting panicked: {panic}")))?
+                    .map_err(|error| internal(format!("planting failed: {error}")))?;
+                let mut instance = Instance::from_planted(planted);
+                let card = sown.family.card();
+                instance.record.family = card.id.to_owned();
+                instance.record.parameters = sown.parameters.to_string();
+                instance.record.index = index;
+                instance.record.relaxation = card.relaxation.word().to_owned();
+                instance
+            }
+            Origin::Imported(imported) => {
+                let imported = &plan.imported[imported];
+                let mut instance = read_imported(imported)?;
+                instance.record.family = "imported".to_owned();
+                instance.record.parameters = format!("path={}", imported.path);
+                if let Some(rank) = imported.rank {
+                    instance.record.parameters.push_str(&format!(" rank={rank}"));
+                }
+                instance
+            }
+        };
+        instance.record.instance.clone_from(&spec.id);
+        instance.record.seed = plan.seed;
+        Ok(instance)
+    }
+
+    /// Describes the run for its journal.
+    pub(super) fn header(&self, plan: &Plan<'_>, imports: Vec<(String, String)>) -> RunHeader {
+        let tolerance = plan.tolerance;
+        RunHeader {
+            schema: SCHEMA,
+            title: plan.title.clone(),
+            plan_digest: plan.digest.clone(),
+            imports,
+            seed: plan.seed,
+            wall_limit_s: plan.budget.wall.as_secs_f64(),
+            memory_limit: plan.budget.memory,
+            tolerance: [tolerance.feasibility, tolerance.objective, tolerance.rank],
+            methods: plan.entrants.iter().map(super::plan::Entrant::record).collect(),
+            trials: self.trials.len() as u64,
+        }
+    }
+
+    /// Puts what was recorded before and now in plan order.
+    pub(super) fn in_plan_order(&self, before: Contents, log: Log) -> (Vec<InstanceRecord>, Vec<Record>) {
+        let place = |ids: &mut dyn Iterator<Item = &str>| -> BTreeMap<String, usize> {
+            ids.enumerate().map(|(at, id)| (id.to_owned(), at)).collect()
+        };
+        let instance_place = place(&mut self.instances.iter().map(|instance| instance.id.as_str()));
+        let trial_place = place(&mut self.trials.iter().map(|trial| trial.id.as_str()));
+        let mut instances = before.instances;
+        instances.extend(log.instances);
+        instances.sort_by_key(|record| instance_place.get(&record.instance).copied());
+        let mut records = before.records;
+        records.extend(log.records);
+        records.sort_by_key(|record| trial_place.get(&record.trial).copied());
+        (instances, records)
+    }
+}
+
+fn read_imported(imported: &Imported) -> Result<Instance, InputError> {
+    let mut instance = read_instance(&imported.resolved)?;
+    if let Some(rank) = imported.rank {
+        instance = instance.with_rank(rank, &imported.path)?;
+    }
+    if let Some(reported) = &imported.optimum {
+        instance = instance.with_reported(reported);
+    }
+    Ok(instance)
+}
+
+fn try_planting(plan: &Plan<'_>, sown: &Sown<'_>) -> Result<(), RunError> {
+    let internal = |detail: String| RunError::Internal { trial: sown_id(sown, 0), detail };
+    match guarded(|| plant(sown.family, &sown.parameters, plan.seed, 0).map(|_| ())) {
+        Ok(Ok(())) => Ok(()),
+        Ok(Err(PlantError::Parameters(reason) | PlantError::Range(reason))) => {
+            let message = format!("family with impossible parameters {}", sown.parameters);
+            Err(plan.error_at(sown.span.clone(), &message, &reason).into())
+        }
+        Ok(Err(error)) => Err(internal(format!("planting failed: {error}"))),
+        Err(panic) => Err(internal(format!("planting panicked: {panic}"))),
+    }
+}

@@ -1,0 +1,112 @@
+//! What the run ran on, and when: the only clock readings outside of budgets.
+
+use std::collections::BTreeMap;
+use std::time::{SystemTime, UNIX_EPOCH};
+
+use serde::Serialize;
+
+/// A machine, as far as it matters to times.
+#[derive(Clone, Debug, Serialize)]
+pub(super) struct Machine {
+    system: &'static str,
+    architecture: &'static str,
+    processor: Option<String>,
+    features: Vec<&'static str>,
+    cores: usize,
+    memory_bytes: Option<u64>,
+}
+
+/// Returns the number of cores this process may use, at least one.
+pub(super) fn cores() -> usize {
+    std::thread::available_parallelism().map_or(1, usize::from)
+}
+
+/// Describes this machine.
+pub(super) fn describe() -> Machine {
+    let cpu = facts("/proc/cpuinfo");
+    let memory = facts("/proc/meminfo");
+    let kilobytes = memory.get("MemTotal").and_then(|text| text.split(' ').next()?.parse::<u64>().ok());
+    Machine {
+        system: std::env::consts::OS,
+        architecture: std::env::consts::ARCH,
+        processor: cpu.get("model name").cloned(),
+        features: features(),
+        cores: cores(),
+        memory_bytes: kilobytes.map(|kilobytes| kilobytes * 1024),
+    }
+}
+
+/// Reads `name : value` lines, the first of each name; empty where the system has no such file.
+fn facts(path: &str) -> BTreeMap<String, String> {
+    let text = std::fs::read_to_string(path).unwrap_or_default();
+    let mut facts = BTreeMap::new();
+    for line in text.lines() {
+        if let Some((name, value)) = line.split_once(':') {
+            facts.entry(name.trim().to_owned()).or_insert_with(|| value.trim().to_owned());
+        }
+    }
+    facts
+}
+
+/// Lists the vector instructions that dense kernels choose between.
+fn features() -> Vec<&'static str> {
+    #[allow(unused_mut, reason = "stays empty on other architectures")]
+    let mut found = Vec::new();
+    #[cfg(target_arch = "x86_64")]
+    {
+        let known = [
+            ("sse4.2", is_x86_feature_detected!("sse4.2")),
+            ("avx", is_x86_feature_detected!("avx")),
+            ("avx2", is_x86_feature_detected!("avx2")),
+            ("fma", is_x86_feature_detected!("fma")),
+            ("avx512f", is_x86_feature_detected!("avx512f")),
+        ];
+        found.extend(known.iter().filter(|(_, has)| *has).map(|(name, _)| *name));
+    }
+    found
+}
+
+/// Returns the time now as `YYYY-MM-DDThh:mm:ssZ`.
+pub(super) fn now() -> String {
+    let seconds = SystemTime::now().duration_since(UNIX_EPOCH).map_or(0, |elapsed| elapsed.as_secs());
+    timestamp(seconds)
+}
+
+/// Writes seconds since 1970 as a date of the Gregorian calendar, by counting 400-year cycles from
+/// 1 March 2000 backwards (the shift by months makes the leap day the last of its year).
+fn timestamp(seconds: u64) -> String {
+    const CYCLE: u64 = 146_097;
+    let (day, second) = (seconds / 86_400, seconds % 86_400);
+    // 719,468 days lie between 1 March of year 0 and 1 January 1970.
+    let shifted = day + 719_468;
+    let (cycle, day_of_cycle) = (shifted / CYCLE, shifted % CYCLE);
+    let year_of_cycle =
+        (day_of_cycle - day_of_cycle / 1460 + day_of_cycle / 36_524 - day_of_cycle / 146_096) / 365;
+    let day_of_year = day_of_cycle - (365 * year_of_cycle + year_of_cycle / 4 - year_of_cycle / 100);
+    let shifted_month = (5 * day_of_year + 2) / 153;
+    let day_of_month = day_of_year - (153 * shifted_month + 2) / 5 + 1;
+    let month = if shifted_month < 10 { shifted_month + 3 } else { shifted_month - 9 };
+    let year = year_of_cycle + cycle * 400 + u64::from(month <= 2);
+    let (hour, minute, second) = (second / 3600, second / 60 % 60, second % 60);
+    format!("{year:04}-{month:02}-{day_of_month:02}T{hour:02}:{minute:02}:{second:02}Z")
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn timestamps_follow_the_calendar() {
+        // Reference values from `date -u -d @N`.
+        for (seconds, expected) in [
+            (0, "1970-01-01T00:00:00Z"),
+            (951_782_399, "2000-02-28T23:59:59Z"),
+            (951_782_400, "2000-02-29T00:00:00Z"),
+            (1_709_210_096, "2024-02-29T12:34:56Z"),
+            (1_735_689_599, "2024-12-31T23:59:59Z"),
+            (4_107_542_400, "2100-03-01T00:00:00Z"),
+        ] {
+            assert_eq!(timestamp(seconds), expected);
+        }
+    }
+}

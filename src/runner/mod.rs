@@ -1,0 +1,174 @@
+//! Runs a plan: expands it to trials, plants or reads their instances, runs the methods side by side
+//! with a thread each, has every answer refereed, and keeps one record a trial.
+//!
+//! Nothing here solves, judges or makes a table, and nothing here prints: whoever runs a plan hears of
+//! its course through an [`Observer`].
+
+mod expand;
+mod folder;
+mod instance;
+mod isolation;
+pub mod journal;
+mod machine;
+mod manifest;
+mod merge;
+mod plan;
+mod schedule;
+mod selection;
+mod trial;
+
+pub use folder::{FolderError, Target, latest_folder, write_files};
+pub use instance::{InputError, Instance, Knowledge, plant, read_instance};
+pub use journal::{Contents, JournalError};
+pub use merge::{MergeError, Merged, merge};
+pub use plan::{Entrant, Imported, Plan, PlanError, ReportedOptimum, Roster, Sown, Span};
+pub use selection::{Pattern, Selection, Shard};
+
+use std::path::PathBuf;
+use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
+
+use sha2::{Digest, Sha256};
+
+use crate::record::{InstanceRecord, Record, RunHeader};
+use expand::Expansion;
+
+/// Returns the SHA-256 of `bytes` in hexadecimal digits.
+pub(crate) fn hexadecimal_digest(bytes: &[u8]) -> String {
+    Sha256::digest(bytes).iter().map(|byte| format!("{byte:02x}")).collect()
+}
+
+/// How a plan is run.
+#[derive(Debug)]
+pub struct RunOptions {
+    /// Where the run folder is.
+    pub target: Target,
+    /// Number of trials at a time; none for one a core.
+    pub jobs: Option<usize>,
+    /// Which trials of the plan.
+    pub selection: Selection,
+    /// Set to end the run at the next check of every running method.
+    pub interrupt: Arc<AtomicBool>,
+}
+
+/// Hears how a run goes. Calls come from several threads.
+pub trait Observer: Sync {
+    /// Learns how many of the selected trials are to be run, and how many are recorded already.
+    fn begin(&self, pending: usize, recorded: usize);
+    /// Learns something worth telling.
+    fn notice(&self, text: &str);
+    /// Learns of a trial that has ended.
+    fn finished(&self, record: &Record);
+}
+
+/// How a run ended.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Ending {
+    /// Every selected trial is recorded.
+    Complete,
+    /// The run was interrupted; what was recorded is kept.
+    Interrupted,
+}
+
+/// What a run leaves behind.
+#[derive(Clone, Debug)]
+pub struct Outcome {
+    /// The run folder.
+    pub folder: PathBuf,
+    /// What its trials have in common.
+    pub header: RunHeader,
+    /// Instances, in plan order.
+    pub instances: Vec<InstanceRecord>,
+    /// Records, in plan order.
+    pub records: Vec<Record>,
+    /// How it ended.
+    pub ending: Ending,
+}
+
+/// Says why a run did not start or had to stop.
+#[derive(Debug, thiserror::Error)]
+pub enum RunError {
+    /// The plan is wrong.
+    #[error("{0}")]
+    Plan(Box<PlanError>),
+    /// An imported file is wrong.
+    #[error("{0}")]
+    Input(Box<InputError>),
+    /// The run folder cannot be used.
+    #[error("{0}")]
+    Folder(#[from] FolderError),
+    /// The journal cannot be used.
+    #[error("{0}")]
+    Journal(#[from] JournalError),
+    /// No trial is selected.
+    #[error("{0}")]
+    Nothing(String),
+    /// The system does not give the threads that were asked for.
+    #[error("{0} threads cannot be started: {1}")]
+    Threads(usize, String),
+    /// A defect of this program: a certificate, a family or the referee is wrong.
+    #[error("internal error in trial {trial}: {detail}")]
+    Internal {
+        /// Id of the trial or of the instance.
+        trial: String,
+        /// What contradicts what.
+        detail: String,
+    },
+}
+
+impl From<PlanError> for RunError {
+    fn from(error: PlanError) -> Self {
+        RunError::Plan(Box::new(error))
+    }
+}
+
+impl From<InputError> for RunError {
+    fn from(error: InputError) -> Self {
+        RunError::Input(Box::new(error))
+    }
+}
+
+/// Runs a plan.
+///
+/// Every impossible parameter and every imported file is found out before the run folder is made. The
+/// rows of the records are in plan order whatever the number of jobs, and everything in them but times
+/// and memory is the same for any number of jobs as long as no limit is reached.
+///
+/// # Errors
+/// See [`RunError`]. After [`RunError::Internal`] the run folder keeps what was recorded.
+pub fn run(plan: &Plan<'_>, options: &RunOptions, observer: &dyn Observer) -> Result<Outcome, RunError> {
+    let jobs = options.jobs.unwrap_or_else(machine::cores).max(1);
+    let pool = rayon::ThreadPoolBuilder::new()
+        .num_threads(jobs)
+        .stack_size(16 << 20)
+        .build()
+        .map_err(|error| RunError::Threads(jobs, error.to_string()))?;
+    let expansion = Expansion::new(plan);
+    let selected = expansion.select(plan, &options.selection);
+    if selected.is_empty() {
+        let example = expansion.trials.first().map_or(String::new(), |trial| expansion.describe(plan, trial));
+        let text = format!("no trial of the plan is selected; the first is `{example}`");
+        return Err(RunError::Nothing(text));
+    }
+    let imports = expansion.check(plan, &pool)?;
+    let header = expansion.header(plan, imports);
+    let (folder, journal, before) = folder::open(&options.target, &header, observer)?;
+    let started = manifest::Manifest::begin(&folder, plan, &header, jobs)?;
+    let log = schedule::run(&schedule::Work {
+        plan,
+        expansion: &expansion,
+        selected: &selected,
+        before: &before,
+        journal: &journal,
+        pool: &pool,
+        interrupt: &options.interrupt,
+        observer,
+    })?;
+    let ending =
+        if options.interrupt.load(Ordering::Relaxed) && !log.complete { Ending::Interrupted } else { Ending::Complete };
+    let (instances, records) = expansion.in_plan_order(before, log);
+    folder::write_rows(&folder, "instances.csv", &instances)?;
+    folder::write_rows(&folder, "trials.csv", &records)?;
+    started.end(&folder)?;
+    Ok(Outcome { folder, header, instances, records, ending })
+}
