@@ -14,6 +14,7 @@
 
 pub mod budget;
 pub mod card;
+pub mod engines;
 pub mod families;
 pub mod linalg;
 pub mod methods;

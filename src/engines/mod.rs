@@ -1,0 +1,2 @@
+//! Numerical engines that methods are composed of. An engine knows problems, budgets and streams; it
+//! knows no method and judges nothing.
