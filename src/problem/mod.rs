@@ -1,11 +1,14 @@
 //! The problem model: blocks, symmetric coefficients, the constraint operator, points and exact
 //! certificates. Nothing here solves or judges.
 
+pub mod line;
 pub mod operator;
 pub mod pattern;
 pub mod point;
+mod rows;
 pub mod symmetric;
 
+pub use line::LineScratch;
 pub use operator::{BlockOperator, Operator, Slack, SlackStore};
 pub use pattern::Pattern;
 pub use point::{Answer, BlockPoint, Factor, Point, StopReason};
