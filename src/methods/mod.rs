@@ -4,6 +4,10 @@
 //! see the problem, their target ranks, their budget and their random stream, never the planted
 //! point or the certificate.
 
+pub mod alternating_projections;
+pub mod factored_alm;
+pub mod factored_newton;
+
 use crate::budget::{Halt, Meter};
 use crate::card::{MethodCard, Settings};
 use crate::problem::{Answer, Problem};
@@ -34,7 +38,11 @@ pub trait Method: Sync {
 
 /// Lists every built-in method, in alphabetical order of id.
 pub fn registry() -> &'static [&'static dyn Method] {
-    &[]
+    &[
+        &alternating_projections::AlternatingProjections,
+        &factored_alm::FactoredAlm,
+        &factored_newton::FactoredNewton,
+    ]
 }
 
 /// Finds a built-in method by its id.

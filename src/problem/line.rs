@@ -4,7 +4,8 @@
 //! Rows are flat slices (n rows of `width` numbers), so that an engine may hold all blocks in one
 //! vector. Values here are plain products and sums; the referee has its own.
 
-use super::operator::{BlockOperator, CostPart, Entries, OuterBatch, Slack, SlackStore};
+use super::operator::{BlockOperator, CostPart, Entries, Operator, OuterBatch, Slack, SlackStore};
+use super::point::Factor;
 use crate::linalg::vector::dot;
 use crate::linalg::{Mat, MatMut, MatRef, dense};
 
@@ -31,6 +32,25 @@ impl LineScratch {
             left: Mat::zeros(width, outer),
             right: Mat::zeros(width, outer),
         }
+    }
+}
+
+impl Operator {
+    /// Computes `<C, V V'> + c'x` for factors.
+    #[track_caller]
+    pub fn cost_of_factors(&self, factors: &[Factor], x: &[f64]) -> f64 {
+        assert_eq!(factors.len(), self.blocks.len(), "one factor a block");
+        let mut unused = vec![0.0; self.constraints()];
+        let blocks: f64 = self
+            .blocks
+            .iter()
+            .zip(factors)
+            .map(|(block, factor)| {
+                let mut scratch = LineScratch::new(block, factor.width);
+                block.add_square(&factor.data, factor.width, &mut scratch, &mut unused)
+            })
+            .sum();
+        blocks + dot(&self.orthant_cost, x)
     }
 }
 
@@ -135,6 +155,24 @@ impl BlockOperator {
             let (left, vectors) = (scratch.left.as_ref(), outer.vectors.transpose());
             dense::gemm(out_t, dense::Accumulate::Add, 1.0, left, vectors);
         }
+    }
+
+    /// Returns the diagonal of S.
+    pub fn slack_diagonal(&self, slack: &Slack) -> Vec<f64> {
+        let mut diagonal: Vec<f64> = match &slack.store {
+            SlackStore::Sparse { pattern, values } => (0..self.order)
+                .map(|i| values[pattern.slot(i, i).expect("a pattern holds its diagonal")])
+                .collect(),
+            SlackStore::Dense(matrix) => (0..self.order).map(|i| matrix[(i, i)]).collect(),
+        };
+        if let Some(outer) = &self.outer {
+            for (k, weight) in slack.outer_weights.iter().enumerate() {
+                for (d, a) in diagonal.iter_mut().zip(outer.vectors.col_as_slice(k)) {
+                    *d += weight * a * a;
+                }
+            }
+        }
+        diagonal
     }
 
     /// Returns the flops of one gradient and one line pass at `width`, by their leading terms.
