@@ -2,6 +2,13 @@
 //!
 //! A family is one file here, one `mod` line and one line in [`registry`].
 
+mod assembly;
+mod balanced_graph;
+mod tight_unique;
+
+pub use balanced_graph::BalancedGraph;
+pub use tight_unique::TightUnique;
+
 use crate::card::{FamilyCard, Settings};
 use crate::problem::certificate::Planted;
 use crate::seed::Stream;
@@ -34,7 +41,7 @@ pub trait Family: Sync {
 
 /// Lists every family, in alphabetical order of id.
 pub fn registry() -> &'static [&'static dyn Family] {
-    &[]
+    &[&BalancedGraph, &TightUnique]
 }
 
 /// Finds a family by its id.

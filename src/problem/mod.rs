@@ -1,6 +1,9 @@
 //! The problem model: blocks, symmetric coefficients, the constraint operator, points and exact
 //! certificates. Nothing here solves or judges.
 
+pub mod canonical;
+pub mod certificate;
+pub mod exact;
 pub mod line;
 pub mod operator;
 pub mod pattern;
@@ -8,6 +11,7 @@ pub mod point;
 mod rows;
 pub mod symmetric;
 
+pub use certificate::{Certificate, CertificateError, Planted, Proof, Uniqueness};
 pub use line::LineScratch;
 pub use operator::{BlockOperator, Operator, Slack, SlackStore};
 pub use pattern::Pattern;
