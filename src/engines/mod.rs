@@ -1,5 +1,9 @@
-//! Numerical engines that methods are composed of. An engine knows nothing of methods, families or
-//! the referee; each has `Params`, `Info` and an error or outcome of its own.
+//! Numerical engines that methods are composed of. An engine knows problems, budgets and streams; it
+//! knows no method, no family and no referee. Each has `Params`, `Info` and an outcome or error.
 
+pub mod affine;
+pub mod alm;
 pub mod ipm;
+pub mod lbfgs;
+pub mod newton;
 pub mod reduction;

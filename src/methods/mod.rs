@@ -4,6 +4,12 @@
 //! see the problem, their target ranks, their budget and their random stream, never the planted
 //! point or the certificate.
 
+pub mod alternating_projections;
+pub mod factored_alm;
+pub mod factored_newton;
+pub mod ipm_tail_weight;
+pub mod reduce_both_ends;
+pub mod reduce_largest;
 pub mod relax_ipm;
 
 use crate::budget::{Halt, Meter};
@@ -36,7 +42,15 @@ pub trait Method: Sync {
 
 /// Lists every built-in method, in alphabetical order of id.
 pub fn registry() -> &'static [&'static dyn Method] {
-    &[&relax_ipm::RelaxIpm]
+    &[
+        &alternating_projections::AlternatingProjections,
+        &factored_alm::FactoredAlm,
+        &factored_newton::FactoredNewton,
+        &ipm_tail_weight::IpmTailWeight,
+        &reduce_both_ends::ReduceBothEnds,
+        &reduce_largest::ReduceLargest,
+        &relax_ipm::RelaxIpm,
+    ]
 }
 
 /// Finds a built-in method by its id.

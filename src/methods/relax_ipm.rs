@@ -4,7 +4,7 @@ use super::{Method, Trial};
 use crate::budget::Halt;
 use crate::card::{DefaultSetting, Kind, MethodCard, MethodClass, SettingSpec};
 use crate::engines::ipm;
-use crate::problem::{Answer, BlockPoint, Point, Problem, StopReason};
+use crate::problem::{Answer, BlockPoint, Point, Problem};
 
 /// The method.
 #[derive(Clone, Copy, Debug)]
@@ -52,22 +52,11 @@ impl Method for RelaxIpm {
                 orthant: solution.orthant,
             },
             multipliers: Some(solution.multipliers),
-            stop: stop_reason(info.outcome),
+            stop: info.outcome.stop_reason(),
             note: format!(
                 "{} iterations, relative gap {:.1e}, values {:.9e} and {:.9e}",
                 info.iterations, info.residuals.gap, info.primal_value, info.dual_value
             ),
         })
-    }
-}
-
-fn stop_reason(outcome: ipm::Outcome) -> StopReason {
-    match outcome {
-        ipm::Outcome::Optimal => StopReason::Converged,
-        ipm::Outcome::Stalled => StopReason::Stalled,
-        ipm::Outcome::IterationLimit => StopReason::IterationLimit,
-        ipm::Outcome::TimeLimit => StopReason::TimeLimit,
-        ipm::Outcome::PrimalInfeasible => StopReason::PrimalInfeasible,
-        ipm::Outcome::DualInfeasible => StopReason::DualInfeasible,
     }
 }

@@ -4,12 +4,15 @@
 pub mod canonical;
 pub mod certificate;
 pub mod exact;
+pub mod line;
 pub mod operator;
 pub mod pattern;
 pub mod point;
+mod rows;
 pub mod symmetric;
 
 pub use certificate::{Certificate, CertificateError, Planted, Proof, Uniqueness};
+pub use line::LineScratch;
 pub use operator::{BlockOperator, Operator, Slack, SlackStore};
 pub use pattern::Pattern;
 pub use point::{Answer, BlockPoint, Factor, Point, StopReason};

@@ -182,6 +182,18 @@ impl Operator {
         }
     }
 
+    /// Computes `cost_scale * c - sum_i y_i a_i`, the slack of the nonnegative part.
+    pub fn orthant_slack(&self, y: &[f64], cost_scale: f64, out: &mut [f64]) {
+        for (s, c) in out.iter_mut().zip(&self.orthant_cost) {
+            *s = cost_scale * c;
+        }
+        for (row, multiplier) in self.orthant_rows.iter().zip(y) {
+            for (index, coefficient) in row.iter() {
+                out[index] -= multiplier * coefficient;
+            }
+        }
+    }
+
     /// Computes `<C, X> + c'x` for dense blocks.
     pub fn cost_dense(&self, points: &[Mat<f64>], x: &[f64]) -> f64 {
         let blocks: f64 = self

@@ -4,11 +4,11 @@
 #[derive(Clone, Debug, PartialEq)]
 pub struct Pattern {
     order: usize,
-    column_starts: Vec<u32>,
-    rows: Vec<u32>,
-    full_starts: Vec<u32>,
-    full_columns: Vec<u32>,
-    full_slots: Vec<u32>,
+    pub(super) column_starts: Vec<u32>,
+    pub(super) rows: Vec<u32>,
+    pub(super) full_starts: Vec<u32>,
+    pub(super) full_columns: Vec<u32>,
+    pub(super) full_slots: Vec<u32>,
 }
 
 impl Pattern {
@@ -79,45 +79,5 @@ impl Pattern {
             .iter()
             .zip(&self.full_slots[range])
             .map(|(&column, &slot)| (column as usize, slot as usize))
-    }
-
-    /// Computes `out = M V` for `values` on the pattern and V of n rows of `width` numbers.
-    #[track_caller]
-    pub fn multiply_rows(&self, values: &[f64], v: &[f64], width: usize, out: &mut [f64]) {
-        assert!(v.len() == self.order * width && out.len() == v.len() && values.len() == self.stored());
-        match width {
-            1 => self.multiply_narrow::<1>(values, v, out),
-            2 => self.multiply_narrow::<2>(values, v, out),
-            3 => self.multiply_narrow::<3>(values, v, out),
-            4 => self.multiply_narrow::<4>(values, v, out),
-            _ => {
-                for i in 0..self.order {
-                    let target = &mut out[i * width..(i + 1) * width];
-                    target.fill(0.0);
-                    for (column, slot) in self.row(i) {
-                        let source = &v[column * width..(column + 1) * width];
-                        let value = values[slot];
-                        for (t, s) in target.iter_mut().zip(source) {
-                            *t += value * s;
-                        }
-                    }
-                }
-            }
-        }
-    }
-
-    fn multiply_narrow<const W: usize>(&self, values: &[f64], v: &[f64], out: &mut [f64]) {
-        let (v, _) = v.as_chunks::<W>();
-        let (out, _) = out.as_chunks_mut::<W>();
-        for (i, target) in out.iter_mut().enumerate() {
-            let mut sum = [0.0; W];
-            for (column, slot) in self.row(i) {
-                let value = values[slot];
-                for (s, x) in sum.iter_mut().zip(&v[column]) {
-                    *s += value * x;
-                }
-            }
-            *target = sum;
-        }
     }
 }

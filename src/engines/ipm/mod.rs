@@ -19,10 +19,12 @@ mod iterate;
 mod scaling;
 mod schur;
 mod solve;
+pub mod tail;
 
 pub use solve::solve;
 
 use crate::linalg::Mat;
+use crate::problem::StopReason;
 
 /// Settings of the engine.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -55,6 +57,20 @@ pub enum Outcome {
     PrimalInfeasible,
     /// `<C, X> < 0` and `||A(X)|| <= -1e-8 <C, X>`: the value is unbounded or the dual infeasible.
     DualInfeasible,
+}
+
+impl Outcome {
+    /// Returns the stop reason that an answer of this outcome carries.
+    pub fn stop_reason(self) -> StopReason {
+        match self {
+            Outcome::Optimal => StopReason::Converged,
+            Outcome::Stalled => StopReason::Stalled,
+            Outcome::IterationLimit => StopReason::IterationLimit,
+            Outcome::TimeLimit => StopReason::TimeLimit,
+            Outcome::PrimalInfeasible => StopReason::PrimalInfeasible,
+            Outcome::DualInfeasible => StopReason::DualInfeasible,
+        }
+    }
 }
 
 /// Residuals of an iterate, as [`Params::tolerance`] states them.

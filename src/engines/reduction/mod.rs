@@ -13,6 +13,10 @@
 //! Eigenvalues of X are cut, never the columns of a square root, which would hide 1e-8 as 1e-4; all
 //! below the cut go at once.
 
+mod pipeline;
+
+pub use pipeline::reduce_relaxation;
+
 use crate::budget::{Halt, Meter};
 use crate::linalg::dense::{self, Accumulate};
 use crate::linalg::eigen::{SymmetricEigen, flops};
@@ -74,12 +78,18 @@ impl Part {
 
     /// Returns the factor Q D^1/2.
     pub fn factor(&self) -> Factor {
+        self.leading_factor(self.rank())
+    }
+
+    /// Returns the factor of the `width` largest eigenpairs; columns beyond the rank are zero.
+    pub fn leading_factor(&self, width: usize) -> Factor {
         let (n, r) = (self.basis.nrows(), self.rank());
-        let mut factor = Factor::zeros(n, r);
-        for j in 0..r {
-            let root = self.values[j].max(0.0).sqrt();
+        let mut factor = Factor::zeros(n, width);
+        for j in 0..r.min(width) {
+            let source = r - 1 - j;
+            let root = self.values[source].max(0.0).sqrt();
             for i in 0..n {
-                factor.data[i * r + j] = root * self.basis[(i, j)];
+                factor.data[i * width + j] = root * self.basis[(i, source)];
             }
         }
         factor

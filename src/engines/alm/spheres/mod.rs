@@ -1,0 +1,351 @@
+//! The fast path for constraints that fix each diagonal entry: unit rows, no multipliers to iterate on.
+//!
+//! Each block is solved by itself. Stage 1 works at a width above the asked one when `lift` allows: Gauss-Seidel
+//! sweeps (each row in turn gets its best unit vector; A. Javanmard, A. Montanari, F. Ricci-Tersenghi, PNAS
+//! 113:E2218-E2223, 2016, from memory), a cut of the width to the numerical rank, then the trust-region Newton
+//! method of [`trust`]; a certificate; and while that fails and the rank bound is not reached, twice the width
+//! with the escape vector as a new column. Stage 2 brings the result to the asked width: its leading principal
+//! columns, and random projections of it, rows normalised, each polished at the asked width (at width 1 by
+//! sweeps, which are then single flips). From width 3 on a signed graph without frustration has no spurious
+//! minimum (J. Markdahl, J. Thunberg, J. Goncalves, IEEE Transactions on Automatic Control 63:1664-1675, 2018,
+//! from memory); at width 2 it may have winding states, so the lift starts at 3.
+
+pub mod cost;
+pub mod trust;
+
+use super::certificate::{CertificateParams, least_eigenpair};
+use super::start::{numerical_rank, principal, resized};
+use super::{AlmParams, Lift};
+use crate::budget::{Halt, Meter};
+use crate::linalg::lanczos::LanczosWorkspace;
+use crate::linalg::vector::{axpy, dot};
+use crate::problem::{BlockOperator, Factor};
+use crate::seed::Stream;
+use cost::SphereBlock;
+use trust::{TrustEnd, TrustParams, TrustWorkspace};
+
+/// Least width at which the lifted stage starts.
+const LEAST_LIFT: usize = 3;
+/// Sweeps end when one of them gains less than this share of the sum of row norms of the cost.
+const SWEEP_GAIN: f64 = 1e-4;
+/// Most sweeps before the trust-region method takes over.
+const SWEEPS: usize = 60;
+/// Eigenvalues of X above this share of the largest count when the width is cut after the sweeps.
+const CUT_SHARE: f64 = 3e-3;
+/// Columns kept beyond the numerical rank at that cut.
+const CUT_SPARE: usize = 2;
+/// Length of the escape column relative to the rows.
+const ESCAPE: f64 = 0.1;
+/// Most widenings of the lifted stage.
+const WIDENINGS: usize = 10;
+/// Random projections tried at width 1 for each start that the caller grants.
+const FLIPS_A_START: usize = 16;
+
+/// What came out for one block.
+#[derive(Clone, Debug)]
+pub struct BlockOutcome {
+    /// The factor, in the problem's units, of the asked width.
+    pub factor: Factor,
+    /// Multipliers of the block's constraints (constraint, value), from the stage with the best certificate.
+    pub multipliers: Vec<(usize, f64)>,
+    /// Objective of the factor.
+    pub objective: f64,
+    /// Width of the lifted stage at its end.
+    pub widest: usize,
+    /// Points polished at the asked width.
+    pub tried: usize,
+    /// Why the block ended early, if it did.
+    pub halt: Option<Halt>,
+    /// Whether every descent met its tolerance.
+    pub settled: bool,
+}
+
+/// Everything one block's solution works with.
+struct Solver<'a> {
+    block: &'a SphereBlock,
+    operator: &'a BlockOperator,
+    params: &'a AlmParams,
+    trust: TrustWorkspace,
+    lanczos: LanczosWorkspace,
+    settled: bool,
+}
+
+/// A point at some width with its objective.
+#[derive(Clone, Debug)]
+struct Candidate {
+    q: Factor,
+    objective: f64,
+}
+
+/// Solves one block at `width`.
+pub fn solve_block(
+    block: &SphereBlock,
+    operator: &BlockOperator,
+    width: usize,
+    params: &AlmParams,
+    stream: &mut Stream,
+    meter: &mut Meter,
+) -> BlockOutcome {
+    let mut solver = Solver {
+        block,
+        operator,
+        params,
+        trust: TrustWorkspace::default(),
+        lanczos: LanczosWorkspace::new(),
+        settled: true,
+    };
+    let first = match params.lift {
+        Lift::WhenNeeded => width.max(LEAST_LIFT.max(width + 1).min(rank_bound(block.order))),
+        Lift::Never => width,
+    };
+    let mut lifted = solver.lifted(first, stream, meter);
+    let widest = lifted.candidate.q.width;
+    let mut best: Option<Candidate> = None;
+    let mut tried = 0;
+    if lifted.halt.is_none() && numerical_rank(&lifted.candidate.q, 1e-14) <= width {
+        let objective = lifted.candidate.objective;
+        best = Some(Candidate { q: resized(&lifted.candidate.q, width), objective });
+    } else {
+        // Stage 2 also runs when the budget has ended: the leading columns are then only normalised.
+        let repeats = if width == 1 { FLIPS_A_START } else { 1 };
+        for attempt in 0..(params.starts * repeats).max(1) {
+            let mut q = match attempt {
+                0 => resized(&lifted.candidate.q, width),
+                _ if params.lift == Lift::Never => random_rows(block.order, width, stream),
+                _ => projected(&lifted.candidate.q, width, stream),
+            };
+            normalise_rows(&mut q, stream);
+            tried += 1;
+            let halt = if lifted.halt.is_none() { solver.descend(&mut q, meter) } else { None };
+            let objective = solver.objective(&q);
+            if best.as_ref().is_none_or(|candidate| objective < candidate.objective) {
+                best = Some(Candidate { q, objective });
+            }
+            lifted.halt = lifted.halt.or(halt);
+            let reached = |o: f64| o - lifted.bound <= params.certificate * (1.0 + o.abs());
+            if lifted.halt.is_some() || best.as_ref().is_some_and(|c| reached(c.objective)) {
+                break;
+            }
+        }
+    }
+    let best = best.expect("at least one candidate was made");
+    let mut factor = best.q;
+    for i in 0..block.order {
+        factor.row_mut(i).iter_mut().for_each(|value| *value *= block.radii[i]);
+    }
+    BlockOutcome {
+        factor,
+        multipliers: block.ids.iter().copied().zip(lifted.multipliers).collect(),
+        objective: best.objective,
+        widest,
+        tried,
+        halt: lifted.halt,
+        settled: solver.settled,
+    }
+}
+
+/// Result of the lifted stage.
+struct Lifted {
+    candidate: Candidate,
+    multipliers: Vec<f64>,
+    bound: f64,
+    halt: Option<Halt>,
+}
+
+impl Solver<'_> {
+    /// Stage 1: descends, certifies and widens.
+    fn lifted(&mut self, first: usize, stream: &mut Stream, meter: &mut Meter) -> Lifted {
+        let n = self.block.order;
+        let limit = first.max(rank_bound(n));
+        let mut q = random_rows(n, first, stream);
+        let mut halt = None;
+        let mut kept: Option<(f64, Vec<f64>)> = None;
+        for round in 0..=WIDENINGS {
+            // 1. Descend; cut the width once, while it is cheap to be wrong.
+            let mut ended = self.sweeps(&mut q, meter).err();
+            if round == 0 && ended.is_none() && first > LEAST_LIFT {
+                let rank = numerical_rank(&q, CUT_SHARE) + CUT_SPARE;
+                if rank < q.width {
+                    q = resized(&q, rank.max(LEAST_LIFT.min(first)));
+                    normalise_rows(&mut q, stream);
+                }
+            }
+            if ended.is_none() {
+                ended = self.trust_region(&mut q, meter);
+            }
+            // 2. Certify.
+            let objective = self.objective(&q);
+            let y = self.multipliers(&q);
+            let dual = dot_radii(self.block, &y);
+            if ended.is_some() {
+                halt = ended;
+                kept.get_or_insert((f64::NEG_INFINITY, y));
+                break;
+            }
+            let (least, vector) = self.certify(&q, &y, meter);
+            let trace: f64 = self.block.radii.iter().map(|s| s * s).sum();
+            let bound = dual + trace * least.min(0.0);
+            if kept.as_ref().is_none_or(|(best, _)| bound > *best) {
+                kept = Some((bound, y));
+            }
+            let certified = objective - bound <= self.params.certificate * (1.0 + objective.abs());
+            let last = q.width >= limit && round > 1;
+            if certified || last || self.params.lift == Lift::Never || round == WIDENINGS {
+                break;
+            }
+            // 3. Widen along the escape vector; the other new columns get a little noise.
+            let room = 8 * 12 * (n * (2 * q.width + 1)) as u64;
+            if let Err(reason) = meter.check_room(room) {
+                halt = Some(reason);
+                break;
+            }
+            q = widened(&q, (2 * q.width).min(limit).max(q.width + 1), &vector, stream);
+        }
+        let (bound, multipliers) = kept.expect("the first round keeps its multipliers");
+        let objective = self.objective(&q);
+        Lifted { candidate: Candidate { q, objective }, multipliers, bound, halt }
+    }
+
+    /// Brings a point to a minimiser at its width; returns why it ended early, if it did.
+    fn descend(&mut self, q: &mut Factor, meter: &mut Meter) -> Option<Halt> {
+        if let Err(halt) = self.sweeps(q, meter) {
+            return Some(halt);
+        }
+        if q.width == 1 { None } else { self.trust_region(q, meter) }
+    }
+
+    fn sweeps(&self, q: &mut Factor, meter: &mut Meter) -> Result<(), Halt> {
+        let mut image = vec![0.0; q.width];
+        let (mut count, flat) = (0, q.width == 1);
+        loop {
+            meter.check()?;
+            let fall = self.block.sweep(&mut q.data, q.width, &mut image);
+            count += 1;
+            meter.effort.inner_steps += 1;
+            meter.effort.operator_products += 1;
+            meter.effort.flops += self.block.flops(q.width);
+            let done = if flat { fall <= 0.0 } else { fall <= SWEEP_GAIN * self.block.scale() };
+            if done || (!flat && count >= SWEEPS) || count >= 100 * SWEEPS {
+                return Ok(());
+            }
+        }
+    }
+
+    fn trust_region(&mut self, q: &mut Factor, meter: &mut Meter) -> Option<Halt> {
+        let params = TrustParams {
+            tolerance: self.params.stationarity,
+            outer: self.params.outer * 4,
+            inner: self.params.inner,
+        };
+        let ended =
+            trust::minimise(self.block, &mut q.data, q.width, &params, &mut self.trust, meter);
+        match ended {
+            TrustEnd::Halted(halt) => return Some(halt),
+            TrustEnd::Limit => self.settled = false,
+            TrustEnd::Converged | TrustEnd::Stalled => {}
+        }
+        None
+    }
+
+    fn image(&self, q: &Factor) -> Factor {
+        let mut image = Factor::zeros(q.order, q.width);
+        self.block.product(&q.data, q.width, &mut image.data);
+        image
+    }
+
+    fn objective(&self, q: &Factor) -> f64 {
+        dot(&q.data, &self.image(q).data) + self.block.constant()
+    }
+
+    /// Returns the multipliers `(C_ii + q_i.(CQ)_i / s_i^2) / a_i` of the rows.
+    fn multipliers(&self, q: &Factor) -> Vec<f64> {
+        let image = self.image(q);
+        (0..q.order)
+            .map(|i| {
+                let row: f64 = q.row(i).iter().zip(image.row(i)).map(|(a, b)| a * b).sum();
+                let square = self.block.radii[i].powi(2);
+                (self.block.diagonal[i] + row / square) / self.block.coefficients[i]
+            })
+            .collect()
+    }
+
+    /// Returns the least eigenvalue of the slack and its vector.
+    fn certify(&mut self, q: &Factor, y: &[f64], meter: &mut Meter) -> (f64, Vec<f64>) {
+        let mut factor = q.clone();
+        for i in 0..q.order {
+            factor.row_mut(i).iter_mut().for_each(|value| *value *= self.block.radii[i]);
+        }
+        let largest = self.block.ids.iter().max().map_or(0, |id| id + 1);
+        let mut all = vec![0.0; largest];
+        for (id, value) in self.block.ids.iter().zip(y) {
+            all[*id] = *value;
+        }
+        let mut slack = self.operator.slack();
+        self.operator.fill_slack(&all, 1.0, &mut slack);
+        let settings = CertificateParams::default();
+        least_eigenpair(self.operator, &slack, &factor, &settings, &mut self.lanczos, meter)
+    }
+}
+
+/// Least p with p(p+1)/2 > n, at most n: the rank bound of n diagonal constraints, plus one.
+pub fn rank_bound(n: usize) -> usize {
+    let mut p = 1;
+    while p < n && p * (p + 1) / 2 <= n {
+        p += 1;
+    }
+    p
+}
+
+fn dot_radii(block: &SphereBlock, y: &[f64]) -> f64 {
+    (0..block.order).map(|i| y[i] * block.coefficients[i] * block.radii[i].powi(2)).sum()
+}
+
+fn random_rows(order: usize, width: usize, stream: &mut Stream) -> Factor {
+    let mut q = Factor::zeros(order, width);
+    q.data.iter_mut().for_each(|value| *value = stream.normal());
+    normalise_rows(&mut q, stream);
+    q
+}
+
+/// Projects the rows of a wider point on random directions: `Q G`, G Gaussian (M. Goemans and D. Williamson,
+/// Journal of the ACM 42:1115-1145, 1995, for width 1).
+fn projected(q: &Factor, width: usize, stream: &mut Stream) -> Factor {
+    let turn: Vec<f64> = (0..q.width * width).map(|_| stream.normal()).collect();
+    let mut out = Factor::zeros(q.order, width);
+    for i in 0..q.order {
+        let target = &mut out.data[i * width..][..width];
+        for (value, row) in q.row(i).iter().zip(turn.chunks_exact(width)) {
+            axpy(*value, row, target);
+        }
+    }
+    out
+}
+
+/// Gives every row norm 1; rows that vanish are drawn anew.
+fn normalise_rows(q: &mut Factor, stream: &mut Stream) {
+    for i in 0..q.order {
+        let row = q.row_mut(i);
+        while !(dot(row, row) > 1e-24) {
+            row.iter_mut().for_each(|value| *value = stream.normal());
+        }
+        let inverse = 1.0 / dot(row, row).sqrt();
+        row.iter_mut().for_each(|value| *value *= inverse);
+    }
+}
+
+/// Appends columns: the first is the escape vector, the others noise, then normalises rows.
+fn widened(q: &Factor, width: usize, escape: &[f64], stream: &mut Stream) -> Factor {
+    let base = principal(q).map_or_else(|| q.clone(), |(_, turned)| turned);
+    let mut out = Factor::zeros(q.order, width);
+    let largest = escape.iter().fold(0.0_f64, |m, v| m.max(v.abs())).max(f64::MIN_POSITIVE);
+    for i in 0..q.order {
+        let row = out.row_mut(i);
+        row[..q.width].copy_from_slice(base.row(i));
+        row[q.width] = ESCAPE * escape[i] / largest;
+        for value in &mut row[q.width + 1..] {
+            *value = 0.1 * ESCAPE * stream.normal() / (width as f64).sqrt();
+        }
+    }
+    normalise_rows(&mut out, stream);
+    out
+}
