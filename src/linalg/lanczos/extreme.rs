@@ -82,7 +82,8 @@ pub struct Extreme {
 
 /// Computes the smallest eigenvalue of `op` and its vector, starting from `start` (empty, zero or deflated altogether: pseudo-random).
 ///
-/// Memory: (basis + 4) vectors of length n. Usable from n = 1 on. Panics when `start` is neither empty nor of length n, when the
+/// Memory: (basis + 4) vectors of length n. The number of steps grows with sqrt(spread / gap) at the lower end: a spectrum graded over
+/// eight decades is out of reach at tight tolerances unless the basis holds the whole space. Usable from n = 1 on. Panics when `start` is neither empty nor of length n, when the
 /// order is 0, when the deflated vectors have another length, or when nothing is left beside them.
 #[track_caller]
 pub fn smallest_eigenpair<A: LinearOperator + ?Sized>(
@@ -353,6 +354,12 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
         let (total, pass) = self.ws.coefficients.split_at_mut(self.capacity + 1);
         let (total, pass) = (&mut total[..count], &mut pass[..count]);
         total.fill(0.0);
+        // The two newest vectors carry nearly all of it; without them one pass over the whole basis is usually enough.
+        for i in (j.saturating_sub(1)..=j).rev() {
+            let vector = &known[i * n..(i + 1) * n];
+            total[i] = dot(vector, next);
+            axpy(-total[i], vector, next);
+        }
         let mut norm = norm2(next);
         for _ in 0..3 {
             let before = norm;
@@ -426,7 +433,7 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
     /// Replaces the basis by the Ritz vectors of the smallest values, followed by the remainder.
     fn restart(&mut self, remainder: f64) {
         let (n, k) = (self.n, self.size);
-        let keep = (2 * k / 5).max(1);
+        let keep = (k / 2).max(1);
         let mut block = std::mem::take(&mut self.ws.small);
         block.resize(ROW_BLOCK * keep, 0.0);
         let weights = self.ws.ritz_vectors.as_ref().submatrix(0, 0, k, keep);
