@@ -3,6 +3,7 @@
 //! Source: Wu and Simon, SIAM J. Matrix Anal. Appl. 22:602-616 (2000). Every new vector is orthogonalised against the whole basis, the
 //! projected matrix is the measured one (not the assumed tridiagonal), and convergence is accepted on a residual computed anew.
 
+use super::deflation::{fill_deflated, remove_components};
 use super::{LanczosWorkspace, LinearOperator};
 use crate::linalg::dense::{Accumulate, column, gemm, gemv};
 use crate::linalg::vector::{axpy, dot, fill_pseudo_random, norm2, normalise, scale};
@@ -127,37 +128,6 @@ impl<A: LinearOperator + ?Sized> LinearOperator for Negated<'_, A> {
     fn apply(&mut self, x: &[f64], y: &mut [f64]) {
         self.0.apply(x, y);
         scale(-1.0, y);
-    }
-}
-
-/// Stores an orthonormal basis of the given vectors and returns its size; vectors that depend on earlier ones are dropped.
-#[track_caller]
-fn fill_deflated(vectors: Option<MatRef<'_, f64>>, n: usize, store: &mut Vec<f64>) -> usize {
-    store.clear();
-    let Some(vectors) = vectors else { return 0 };
-    assert_eq!(vectors.nrows(), n, "length of the deflated vectors");
-    let mut count = 0;
-    for j in 0..vectors.ncols() {
-        store.extend_from_slice(column(vectors, j));
-        let (known, new) = store.split_at_mut(count * n);
-        let before = normalise(new);
-        for _ in 0..2 {
-            remove_components(known, n, new);
-        }
-        if before > 0.0 && norm2(new) > 1e-10 {
-            normalise(new);
-            count += 1;
-        } else {
-            store.truncate(count * n);
-        }
-    }
-    count
-}
-
-fn remove_components(known: &[f64], n: usize, x: &mut [f64]) {
-    for vector in known.chunks_exact(n) {
-        let c = dot(vector, x);
-        axpy(-c, vector, x);
     }
 }
 
@@ -323,7 +293,7 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
             let remainder = if closed { 0.0 } else { remainder };
             let full = self.size == self.capacity;
             let limit = self.steps >= self.params.max_steps;
-            if full || limit || self.size % TEST_EVERY == 0 {
+            if full || limit || self.size.is_multiple_of(TEST_EVERY) {
                 if !self.solve_projected() {
                     return Expansion::Failed;
                 }
