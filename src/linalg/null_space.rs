@@ -71,7 +71,10 @@ pub fn null_space(a: MatRef<'_, f64>, tau: f64) -> Result<NullSpace, NullSpaceEr
         });
     }
     if max_abs(a) == 0.0 {
-        return Ok(NullSpace { basis: Mat::identity(k, k), singular_values: vec![0.0; m.min(k)] });
+        return Ok(NullSpace {
+            basis: Mat::identity(k, k),
+            singular_values: vec![0.0; m.min(k)],
+        });
     }
     let mut ws = Workspace::new();
     let (reduced, order) = if m > k {

@@ -93,7 +93,7 @@ pub fn step_bound<A: LinearOperator + ?Sized>(
         let steps = j + 1;
         // A vanishing remainder means that the space is invariant: the Ritz values are eigenvalues.
         let closed = steps == n || off[j] <= 4.0 * f64::EPSILON * magnitude;
-        if closed || !off[j].is_finite() || steps == limit || steps % TEST_EVERY == 0 {
+        if closed || !off[j].is_finite() || steps == limit || steps.is_multiple_of(TEST_EVERY) {
             let last = if closed { 0.0 } else { off[j] };
             let (ritz, delta) = safe_margin(&diagonal[..steps], &off[..steps], last, work);
             let done = delta <= params.tolerance * ritz.abs().max(1.0);
