@@ -86,7 +86,8 @@ impl Method for IpmTailWeight {
         let (name, attempt) = best.expect("at least one attempt was made");
         let stop = match (trial.meter.check(), attempt.outcome) {
             (Err(Halt::TimeLimit), _) => StopReason::TimeLimit,
-            (_, outcome) => outcome.stop_reason(),
+            (Err(halt), _) => return Err(halt),
+            (Ok(()), outcome) => outcome.stop_reason(),
         };
         Ok(Answer {
             point: Point {

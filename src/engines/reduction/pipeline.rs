@@ -52,7 +52,8 @@ pub fn reduce_relaxation(
         multipliers: Some(solution.multipliers),
         stop: match meter.check() {
             Err(Halt::TimeLimit) => StopReason::TimeLimit,
-            _ => info.outcome.stop_reason(),
+            Err(halt) => return Err(halt),
+            Ok(()) => info.outcome.stop_reason(),
         },
         note: format!(
             "rank {}; rank bound {}; optimum {unique} (kernel of S {}, unseen {}); free directions left {}",
