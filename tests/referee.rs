@@ -547,6 +547,165 @@ proptest! {
     }
 }
 
+/// min <C,X> with C = WW' + Diag(y), W't = 0 column by column, diag(X) = 1: S = WW' is dense, singular and
+/// not diagonally dominant; the optimum is tt' with value sum y, in integers.
+fn dense_slack(n: usize, seed: u64) -> Balanced {
+    let mut draw = Draw(seed);
+    let mut sign = || if draw.next(2) == 0 { 1.0 } else { -1.0 };
+    let signs: Vec<f64> = (0..n).map(|_| sign()).collect();
+    let dual: Vec<f64> = (0..n).map(|_| -3.0 + 2.0 * sign()).collect();
+    let mut product = Mat::<f64>::zeros(n, n);
+    for k in 0..n - 1 {
+        let mut column: Vec<f64> = (0..n).map(|_| sign()).collect();
+        let others: f64 = (0..n)
+            .filter(|i| *i != k)
+            .map(|i| signs[i] * column[i])
+            .sum();
+        column[k] = -signs[k] * others;
+        for j in 0..n {
+            for i in 0..n {
+                product[(i, j)] += column[i] * column[j];
+            }
+        }
+    }
+    let entry = |i: usize, j: usize| product[(i, j)] + if i == j { dual[i] } else { 0.0 };
+    let entries = (0..n)
+        .flat_map(|j| (0..=j).map(move |i| (i, j)))
+        .map(|(i, j)| (i, j, entry(i, j)));
+    let cost = Functional::on_block(
+        0,
+        Coefficient::Sparse(SparseSymmetric::gather(n, entries.collect())),
+    );
+    let constraints = (0..n).map(|i| unit_entry(n, i)).collect();
+    let blocks = vec![Block {
+        order: n,
+        rank: Some(1),
+    }];
+    let problem = Problem::new(blocks, 0, cost, constraints, vec![1.0; n]).unwrap();
+    let optimum = dual.iter().sum();
+    Balanced {
+        problem,
+        signs,
+        dual,
+        optimum,
+    }
+}
+
+#[test]
+fn a_dense_singular_slack_gives_the_optimum_to_nine_digits() {
+    for (n, seed) in [(5, 1), (40, 2), (150, 3)] {
+        let instance = dense_slack(n, seed);
+        let bound =
+            lower_bound(&instance.problem, &instance.dual).expect("diag(X) = 1 bounds the trace");
+        let loss = 1e-9 * instance.optimum.abs();
+        assert!(
+            bound <= instance.optimum && bound >= instance.optimum - loss,
+            "{n}: {bound} {}",
+            instance.optimum
+        );
+        // A multiplier that is too large makes S indefinite and must not raise the bound.
+        for shift in [1e-9, 1e-3, 1.0] {
+            let mut corrupted = instance.dual.clone();
+            corrupted[n / 2] += shift;
+            let lower =
+                lower_bound(&instance.problem, &corrupted).expect("the trace is still bounded");
+            assert!(
+                lower <= instance.optimum,
+                "{n}, {shift}: {lower} above {}",
+                instance.optimum
+            );
+        }
+    }
+}
+
+#[test]
+fn a_spectral_bound_is_never_passed() {
+    // 0 <= X <= 4I by X + Z = 4I, C = sum l_i h_i h_i' with the orthogonal columns h_i of a 4 x 4 Hadamard
+    // matrix: the eigenvalues of C are 4 l_i, the optimum is 4 sum min(0, 4 l_i).
+    let hadamard = [
+        [1.0, 1.0, 1.0, 1.0],
+        [1.0, -1.0, 1.0, -1.0],
+        [1.0, 1.0, -1.0, -1.0],
+        [1.0, -1.0, -1.0, 1.0],
+    ];
+    let weights = [-3.0, -1.0, 0.0, 2.0];
+    let entry = |i: usize, j: usize| {
+        (0..4)
+            .map(|k| weights[k] * hadamard[k][i] * hadamard[k][j])
+            .sum::<f64>()
+    };
+    let pairs: Vec<(usize, usize)> = (0..4).flat_map(|j| (0..=j).map(move |i| (i, j))).collect();
+    let cost =
+        SparseSymmetric::gather(4, pairs.iter().map(|&(i, j)| (i, j, entry(i, j))).collect());
+    let cost = Functional::on_block(0, Coefficient::Sparse(cost));
+    let unit = |i, j| Coefficient::Sparse(SparseSymmetric::gather(4, vec![(i, j, 1.0)]));
+    let both = |&(i, j): &(usize, usize)| Functional {
+        parts: vec![(0, unit(i, j)), (1, unit(i, j))],
+        orthant: SparseVector::default(),
+    };
+    let rhs = pairs
+        .iter()
+        .map(|&(i, j)| if i == j { 4.0 } else { 0.0 })
+        .collect();
+    let blocks = vec![
+        Block {
+            order: 4,
+            rank: Some(2),
+        },
+        Block {
+            order: 4,
+            rank: None,
+        },
+    ];
+    let problem = Problem::new(blocks, 0, cost, pairs.iter().map(both).collect(), rhs).unwrap();
+    let optimum = -64.0;
+    // The optimal multipliers make S_X = C - Y the positive and S_Z = -Y the negative part of C.
+    let negative = |i: usize, j: usize| -> f64 {
+        (0..4)
+            .map(|k| weights[k].min(0.0) * hadamard[k][i] * hadamard[k][j])
+            .sum()
+    };
+    let best: Vec<f64> = pairs.iter().map(|&(i, j)| negative(i, j)).collect();
+    let bound = lower_bound(&problem, &best).unwrap();
+    assert!(
+        bound <= optimum && bound >= optimum - 1e-9 * 64.0,
+        "{bound}"
+    );
+    let mut draw = Draw(99);
+    for trial in 0..200 {
+        let size = 10f64.powi(trial % 12 - 9);
+        let y: Vec<f64> = best.iter().map(|y| y + size * draw.unit()).collect();
+        let bound = lower_bound(&problem, &y).unwrap();
+        assert!(bound <= optimum, "{bound} at noise {size}");
+    }
+    // The planted rank-2 point, h_1 h_1' + h_2 h_2' with Z = 4I - X, attains it here.
+    let columns = |range: std::ops::Range<usize>| {
+        let columns: Vec<Vec<f64>> = range.map(|k| hadamard[k].to_vec()).collect();
+        BlockPoint::Factor(Factor::from_columns(4, &columns))
+    };
+    let answer = answer_of(vec![columns(0..2), columns(2..4)], vec![]);
+    let known = Known {
+        optimum: KnownOptimum::Certified(optimum),
+        ..UNKNOWN
+    };
+    let judgement = judge(&problem, &answer, &known, &Tolerance::default()).unwrap();
+    assert_eq!(
+        (judgement.finding, judgement.digits),
+        (Finding::Solved, Some(16.0))
+    );
+    // The whole of 4 I on the first block, which exceeds the rank, is no answer at rank 2.
+    let answer = answer_of(
+        vec![columns(0..4), BlockPoint::Dense(Mat::zeros(4, 4))],
+        vec![],
+    );
+    let judgement = judge(&problem, &answer, &known, &Tolerance::default()).unwrap();
+    assert_ne!(judgement.finding, Finding::Solved);
+    assert_eq!(
+        (judgement.ranks, judgement.tail_ratio),
+        (Some([4, 4, 4]), Some(0.5))
+    );
+}
+
 #[test]
 fn no_bound_is_given_where_the_trace_is_unbounded() {
     let constraint = |i: usize, j: usize| {

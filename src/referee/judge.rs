@@ -357,7 +357,7 @@ impl Measured {
             };
         };
         let explained = dot2(y, &self.residual).abs();
-        if !(self.objective < optimum - explained) {
+        if self.objective >= optimum - explained {
             return Ok(());
         }
         let allowance = explained + self.rounding(problem, y, optimum);

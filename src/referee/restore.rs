@@ -7,7 +7,8 @@
 //! steps are taken (a step that does not reduce the residual is halved up to six times, then
 //! restoration ends); the point of least residual is returned. Work is counted, not timed, and bounded,
 //! so that the outcome does not depend on the machine. This is no solver: it does not look at the
-//! objective.
+//! objective, and it moves within the width of the factors it is given: a block truncated to zero
+//! stays zero.
 
 use super::measure::View;
 use super::truncate::plain_dot;
@@ -100,7 +101,7 @@ pub(super) fn restore(
     let mut work_left = WORK;
     for _ in 0..STEPS {
         let before = norm(&residual);
-        if !(before > enough) || work_left == 0 {
+        if before <= enough || before.is_nan() || work_left == 0 {
             break;
         }
         least_norm_step(problem, &point, &residual, &mut step, &mut work_left);
@@ -154,7 +155,7 @@ fn least_norm_step(
         forward(problem, point, step, &mut image);
         let curvature = plain_dot(&direction, &image);
         // A direction in the null space of J': the equations are dependent and this is all they give.
-        if !(curvature > 0.0) {
+        if curvature <= 0.0 || curvature.is_nan() {
             break;
         }
         let length = squared / curvature;
@@ -163,7 +164,7 @@ fn least_norm_step(
             rest[i] -= length * image[i];
         }
         let next = plain_dot(&rest, &rest);
-        if !(next > goal) {
+        if next <= goal || next.is_nan() {
             break;
         }
         let turn = next / squared;

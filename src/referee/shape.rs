@@ -69,7 +69,10 @@ pub(super) fn check(problem: &Problem, answer: &Answer) -> Result<(), String> {
 }
 
 fn check_numbers(numbers: &[f64], place: impl Fn() -> String) -> Result<(), String> {
-    match numbers.iter().find(|value| !(value.abs() <= LARGEST)) {
+    match numbers
+        .iter()
+        .find(|value| value.is_nan() || value.abs() > LARGEST)
+    {
         None => Ok(()),
         Some(value) if value.is_finite() => Err(format!(
             "{} holds {value:e}, beyond {LARGEST:e} in magnitude",
