@@ -22,17 +22,22 @@
 //!   there `a X_kk <= b` for each entry, and `tr X_j <= b / min a` when the whole diagonal of block j
 //!   stands in it. This covers diag(X) = 1, tr X = c and X + Z = c I.
 //!
-//! **Verified Cholesky.** Let B be a symmetric matrix of floating-point numbers of order n whose
-//! floating-point Cholesky factorisation runs to completion, giving R. Then `R'R = B + E` with
-//! `|E| <= g |R'| |R|`, `g = (n+1)u / (1 - (n+1)u)`, `u = 2^-53`, whatever the order of the sums (Higham,
-//! Accuracy and Stability of Numerical Algorithms, 2nd ed., theorem 10.3; from memory). The diagonal of
-//! this gives `||r_k||^2 <= b_kk + g ||r_k||^2`, so `||r_k||^2 <= b_kk / (1 - g)`, and by Cauchy
-//! `|E_kl| <= g/(1-g) sqrt(b_kk b_ll)`, a rank-one matrix of norm `g/(1-g) tr B`. As R'R is PSD,
-//! `lambda_min(B) >= -g/(1-g) tr B` (the criterion of Rump, BIT 46:433-452, 2006). Underflow adds at most
-//! `2^-1073 max(1, r_kk)` for each of at most n+2 operations of an entry, less than `(n+2)^2 2^-1000 (1 + tr B)`
-//! in norm. B is the rounded `S - sigma I` with sigma a little below the computed least eigenvalue; it
-//! differs from the true one by at most the largest row sum of the entry radii plus u |b_kk| for the
-//! rounding of the shift. Hence `lambda_min(S) >= sigma - g/(1-g) tr B - row sum - underflow`.
+//! **Verified Cholesky.** Let B be the rounded `S - sigma I`, sigma a little below the computed least
+//! eigenvalue, and let its floating-point Cholesky factorisation run to completion, giving R. Then R'R is
+//! PSD whatever rounding did, so with `E = R'R - B`, `lambda_min(B) >= -||E||`. The norm of E is bounded
+//!
+//! - up to order [`RESIDUAL_ORDER`] by its largest row sum, each entry `sum_k r_ki r_kj - b_ij` evaluated
+//!   with a compensated sum that bounds its own error;
+//! - beyond, without evaluating it: `|E| <= g |R'| |R|`, `g = (n+1)u / (1 - (n+1)u)`, `u = 2^-53`, whatever
+//!   the order of the sums (Higham, Accuracy and Stability of Numerical Algorithms, 2nd ed., theorem
+//!   10.3; from memory). The diagonal of this gives `||r_k||^2 <= b_kk + g ||r_k||^2`, so
+//!   `||r_k||^2 <= b_kk / (1 - g)`, and by Cauchy `|E_kl| <= g/(1-g) sqrt(b_kk b_ll)`, a rank-one matrix of
+//!   norm `g/(1-g) tr B` (the criterion of Rump, BIT 46:433-452, 2006). Underflow adds at most
+//!   `2^-1073 max(1, r_kk)` for each of at most n+2 operations of an entry, less than
+//!   `(n+2)^2 2^-1000 (1 + tr B)` in norm.
+//!
+//! B differs from the true `S - sigma I` by at most the largest row sum of the entry radii plus u |b_kk| for
+//! the rounding of the shift. Hence `lambda_min(S) >= sigma - ||E|| - row sum - rounding`.
 
 use super::slack::{self, SlackBlock};
 use super::spectral;
@@ -44,8 +49,12 @@ use faer::Mat;
 /// n^3/3 multiplications a trial.
 pub const CHOLESKY_ORDER: usize = 800;
 
+/// Largest order for which the residual of that factorisation is evaluated, about n^3/6 compensated
+/// products; beyond, its a-priori bound is taken, which is some n times larger.
+pub const RESIDUAL_ORDER: usize = 400;
+
 /// Most trials with growing shifts.
-const TRIALS: usize = 12;
+const TRIALS: usize = 14;
 
 /// Computes a number that is proved to be at most the objective of every feasible point of `problem`,
 /// from the multipliers `y` (length m); see the theorem in the module's header.
@@ -222,8 +231,10 @@ fn verified_cholesky(block: &SlackBlock) -> Option<f64> {
     let inflate = 1.0 + (n + 8) as f64 * f64::EPSILON;
     let radius = radii.iter().copied().fold(0.0, f64::max) * inflate;
     let least = spectral::least(&matrix).ok()?;
-    let size: f64 = (0..n).map(|i| (matrix[(i, i)] - least).abs()).sum::<f64>() + least.abs();
-    let mut margin = (n + 2) as f64 * UNIT_ROUNDOFF * size + radius + f64::MIN_POSITIVE;
+    let largest = (0..n)
+        .map(|i| (matrix[(i, i)] - least).abs())
+        .fold(least.abs(), f64::max);
+    let mut margin = 4.0 * UNIT_ROUNDOFF * (n as f64).sqrt() * largest + radius + f64::MIN_POSITIVE;
     let mut factor = vec![0.0; n * n];
     for _ in 0..TRIALS {
         let shift = least - margin;
@@ -239,15 +250,40 @@ fn verified_cholesky(block: &SlackBlock) -> Option<f64> {
             rounding = rounding.max(UNIT_ROUNDOFF * pivot.abs());
         }
         if runs_to_completion(&mut factor, n) {
-            let g = (n + 2) as f64 * UNIT_ROUNDOFF;
-            let backward = g / (1.0 - 3.0 * g) * trace * inflate;
-            let underflow = ((n + 2) * (n + 2)) as f64 * 2f64.powi(-1000) * (1.0 + trace);
-            let loss = (backward + radius + rounding + underflow) * (1.0 + 8.0 * f64::EPSILON);
+            let residual = if n <= RESIDUAL_ORDER {
+                residual_norm(&factor, &matrix, shift) * inflate
+            } else {
+                let g = (n + 2) as f64 * UNIT_ROUNDOFF;
+                let underflow = ((n + 2) * (n + 2)) as f64 * 2f64.powi(-1000) * (1.0 + trace);
+                g / (1.0 - 3.0 * g) * trace * inflate + underflow
+            };
+            let loss = (residual + radius + rounding) * (1.0 + 8.0 * f64::EPSILON);
             return Some((shift - loss.next_up()).next_down());
         }
         margin *= 4.0;
     }
     None
+}
+
+/// Bounds the largest row sum of `|L L' - (S - shift I)|`, L the lower triangle in `factor`, up to the
+/// rounding of the sums over a row.
+fn residual_norm(factor: &[f64], matrix: &Mat<f64>, shift: f64) -> f64 {
+    let n = matrix.nrows();
+    let mut sums = vec![0.0; n];
+    for i in 0..n {
+        for j in 0..=i {
+            let entry = matrix[(i, j)];
+            let mut difference = Accumulator::new();
+            difference.add(if i == j { shift - entry } else { -entry });
+            difference.add_dot(&factor[i * n..=i * n + j], &factor[j * n..=j * n + j]);
+            let size = difference.value().abs() + difference.error_bound();
+            sums[i] += size;
+            if i != j {
+                sums[j] += size;
+            }
+        }
+    }
+    sums.into_iter().fold(0.0, f64::max)
 }
 
 /// Runs the Cholesky factorisation of the lower triangle in `a` (rows one after another, in place) and
