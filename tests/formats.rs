@@ -1,6 +1,9 @@
 //! The readers and writers of `formats`: roundtrips, dialects, broken files, hostile text.
 
-#![allow(clippy::print_stderr, reason = "a test says what it skipped or measured")]
+#![allow(
+    clippy::print_stderr,
+    reason = "a test says what it skipped or measured"
+)]
 
 use proptest::prelude::*;
 use rankassay::formats::instance::{self, Instance};
