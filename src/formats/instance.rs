@@ -20,6 +20,7 @@
 
 use super::json::{self, Step};
 use super::{FormatError, FormatErrorKind as Kind, MAX_TOTAL_ORDER, Source, read_text};
+use crate::problem::canonical::digest;
 use crate::problem::certificate::Certificate;
 use crate::problem::{
     Block, Coefficient, Functional, OuterSum, OuterTerm, Problem, SparseSymmetric, SparseVector,
@@ -136,14 +137,8 @@ pub fn parse(text: &str, file: &str) -> Result<Instance, FormatError> {
         .or_else(|error| checker.refuse(&[], Kind::Unexpected, format!("a problem ({error})")))?;
     if let Some(written) = &raw.digest {
         let computed = digest(&problem);
-        if computed
-            .as_ref()
-            .is_some_and(|computed| computed != written)
-        {
-            let expected = format!(
-                "the digest of this problem, {}",
-                computed.unwrap_or_default()
-            );
+        if computed != *written {
+            let expected = format!("the digest of this problem, {computed}");
             return checker.refuse(&[Step::Key("digest")], Kind::Digest, expected);
         }
     }
@@ -348,9 +343,7 @@ pub fn write(instance: &Instance) -> String {
         text.push_str(&json(&functional_text(constraint)));
     }
     let _ = write!(text, "],\n\"rhs\": {}", json(&problem.rhs()));
-    if let Some(digest) = digest(problem) {
-        let _ = write!(text, ",\n\"digest\": {}", json(&digest));
-    }
+    let _ = write!(text, ",\n\"digest\": {}", json(&digest(problem)));
     if let Some(certificate) = &instance.certificate {
         let _ = write!(text, ",\n\"certificate\": {}", json(certificate));
     }
@@ -412,8 +405,4 @@ fn functional_text(functional: &Functional) -> FunctionalText {
 /// The file cannot be written.
 pub fn save(path: &Path, instance: &Instance) -> std::io::Result<()> {
     std::fs::write(path, write(instance))
-}
-
-fn digest(_problem: &Problem) -> Option<String> {
-    None
 }

@@ -41,12 +41,34 @@ fn translate(source: Source<'_>, error: &serde_json::Error) -> FormatError {
         .take(error.line().saturating_sub(1))
         .last()
         .unwrap_or(0);
-    let offset = line_start + error.column().saturating_sub(1);
-    let mut out = source.error(offset, 1, Kind::Unexpected, expected);
+    let last = line_start + error.column().saturating_sub(1);
+    let start = token_start(source.text.as_bytes(), last, error.is_data());
+    let mut out = source.error(start, last + 1 - start, Kind::Unexpected, expected);
     if let Some(found) = found {
         out.token = super::shorten(found);
     }
     out
+}
+
+/// Goes back from the last byte of a token, where serde reports, to its first. A quote ends a string
+/// when the text was sound so far and only the value did not fit; else it may open one.
+fn token_start(bytes: &[u8], last: usize, text_is_sound: bool) -> usize {
+    let is_word =
+        |byte: u8| byte.is_ascii_alphanumeric() || matches!(byte, b'.' | b'+' | b'-' | b'_');
+    let mut start = last;
+    match bytes.get(last) {
+        Some(b'"') if text_is_sound => {
+            let opens = |at: usize| bytes[at] == b'"' && (at == 0 || bytes[at - 1] != b'\\');
+            (0..last).rev().find(|at| opens(*at)).unwrap_or(last)
+        }
+        Some(byte) if is_word(*byte) => {
+            while start > 0 && is_word(bytes[start - 1]) {
+                start -= 1;
+            }
+            start
+        }
+        _ => last,
+    }
 }
 
 /// Makes an error for the value at `path` of a text that is known to be valid JSON. The position is

@@ -143,7 +143,9 @@ impl<'a> Source<'a> {
             .map_or(self.text.len(), |at| offset + at);
         let from = self.boundary(line_start.max(offset.saturating_sub(EXCERPT_REACH)));
         let until = self.boundary(line_end.min(offset + EXCERPT_REACH));
-        let shown_end = end.min(until);
+        let shown_end = end.min(until).max(offset);
+        let blank_free = self.text[from..until].trim_end().len();
+        let shown = blank_free.max(shown_end - from);
         FormatError {
             file: self.file.to_owned(),
             line: 1 + before.bytes().filter(|&byte| byte == b'\n').count(),
@@ -152,9 +154,9 @@ impl<'a> Source<'a> {
             expected: expected.into(),
             kind,
             excerpt: Some(Box::new(Excerpt {
-                text: self.text[from..until].trim_end().to_owned(),
+                text: self.text[from..from + shown].to_owned(),
                 start: offset - from,
-                length: shown_end.saturating_sub(offset),
+                length: shown_end - offset,
             })),
         }
     }

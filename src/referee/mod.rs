@@ -3,8 +3,33 @@
 //! The referee trusts nothing but the problem and the numbers of the answer. It uses its own loops
 //! and compensated sums, so that a defect of a kernel the methods share cannot cancel out. It does
 //! not solve, and it does not see how the answer was found.
+//!
+//! What it does, in this order:
+//!
+//! 1. shapes, finiteness and magnitude of the answer (`shape`); else `malformed`;
+//! 2. truncation of every block to its target rank, as a factor (`truncate`): from here on the
+//!    point is PSD and of the target rank by construction;
+//! 3. residual and objective of the untruncated and of the truncated point (`measure`);
+//! 4. restoration of feasibility in factor form, the same for every method (`restore`);
+//! 5. distance, DIMACS errors and a rigorous lower bound where they can be had (`distance`,
+//!    `dimacs`, `bound`);
+//! 6. the finding (`judge`).
 
-use crate::problem::{Answer, Factor, Problem};
+mod bound;
+mod dimacs;
+mod distance;
+mod judge;
+mod measure;
+mod restore;
+mod shape;
+mod slack;
+mod spectral;
+mod truncate;
+
+pub use bound::lower_bound;
+pub use judge::{Contradicted, Contradiction, Judgement, judge};
+
+use crate::problem::Factor;
 
 /// Tolerances of a verdict.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -19,7 +44,11 @@ pub struct Tolerance {
 
 impl Default for Tolerance {
     fn default() -> Self {
-        Tolerance { feasibility: 1e-6, objective: 1e-6, rank: 1e-6 }
+        Tolerance {
+            feasibility: 1e-6,
+            objective: 1e-6,
+            rank: 1e-6,
+        }
     }
 }
 
