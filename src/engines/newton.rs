@@ -45,7 +45,7 @@ pub struct NewtonParams {
 
 impl Default for NewtonParams {
     fn default() -> Self {
-        NewtonParams { tolerance: 1e-13, steps: 30, dense_order: 1500, krylov_steps: 1000, levenberg: 1e-3 }
+        NewtonParams { tolerance: 1e-13, steps: 30, dense_order: 3000, krylov_steps: 1000, levenberg: 1e-3 }
     }
 }
 

@@ -19,6 +19,9 @@ pub const ENOUGH: f64 = 0.25;
 pub const FIRST_INNER: f64 = 1e-2;
 /// Factor of the inner tolerance after each outer step.
 pub const INNER_SHRINK: f64 = 0.3;
+/// A descent ends when the residual has not halved in this many outer steps: it is then stationary and
+/// infeasible, or at the limit of the arithmetic.
+pub const PATIENCE: usize = 8;
 /// Residual and cost are recomputed from their definitions after this many updates.
 pub const REFRESH_EVERY: usize = 64;
 
@@ -160,6 +163,7 @@ pub fn descend(
     let right = 1.0 + l.rhs_norm();
     l.refresh();
     let mut best = f64::INFINITY;
+    let (mut marked, mut marked_at) = (f64::INFINITY, 0);
     let mut tolerance = FIRST_INNER.max(params.stationarity);
     let mut info = DescentInfo {
         stationarity: f64::INFINITY,
@@ -202,12 +206,15 @@ pub fn descend(
             l.update_multipliers();
         }
         best = best.min(violation);
+        if best <= 0.5 * marked {
+            (marked, marked_at) = (best, info.outer);
+        }
         if feasible && info.stationarity <= params.stationarity {
             info.end = DescentEnd::Converged;
             return info;
         }
         if !fell && !feasible {
-            if l.sigma >= LARGEST_SIGMA {
+            if l.sigma >= LARGEST_SIGMA || info.outer - marked_at >= PATIENCE {
                 return info;
             }
             l.sigma *= SIGMA_GROWTH;

@@ -75,15 +75,17 @@ pub fn solve(
         starts: 0,
         widest,
     };
-    // 1. Random starts at the widths asked for.
-    let mut certified = false;
-    while !certified && run.starts < params.starts.max(1) && run.halt.is_none() {
-        run.starts += 1;
-        certified = run.from_random(&params.widths, stream);
-    }
+    // 1. One random start at the widths asked for.
+    run.starts = 1;
+    let mut certified = run.from_random(&params.widths, stream);
     // 2. A lift: solve wider, truncate, solve again.
     if !certified && run.halt.is_none() && params.lift == Lift::WhenNeeded {
-        run.lifted(stream);
+        certified = run.lifted(stream);
+    }
+    // 3. More random starts.
+    while !certified && run.starts < params.starts && run.halt.is_none() {
+        run.starts += 1;
+        certified = run.from_random(&params.widths, stream);
     }
     run.answer()
 }
@@ -240,8 +242,9 @@ impl Run<'_, '_> {
         self.descend(l)
     }
 
-    /// Solves at greater widths and brings each certified result, or the last, back to the widths asked for.
-    fn lifted(&mut self, stream: &mut Stream) {
+    /// Solves at greater widths and brings each result back to the widths asked for, until one is certified at
+    /// either width or the bound is reached; true when it is at the widths asked for.
+    fn lifted(&mut self, stream: &mut Stream) -> bool {
         let limits = width_limits(self.problem);
         let mut widths = self.params.widths.clone();
         loop {
@@ -250,7 +253,7 @@ impl Run<'_, '_> {
                 *width = (2 * *width).max(*width + 1).min(limits[k]).max(*width);
             }
             if widths == before || self.halt.is_some() {
-                return;
+                return false;
             }
             self.widest = self.widest.max(widths.iter().copied().max().unwrap_or(0));
             let mut l = Lagrangian::new(self.problem, self.op, &widths);
@@ -260,7 +263,7 @@ impl Run<'_, '_> {
             let mut certified = false;
             for _ in 0..ESCAPES {
                 if self.halt.is_some() {
-                    return;
+                    return false;
                 }
                 let found = self.certify(&wide);
                 certified = wide.feasibility <= FEASIBLE && found.gap <= self.params.certificate;
@@ -271,8 +274,11 @@ impl Run<'_, '_> {
                 }
                 wide = next;
             }
-            if self.truncated(&wide) || certified {
-                return;
+            if self.truncated(&wide) {
+                return true;
+            }
+            if certified {
+                return false;
             }
         }
     }

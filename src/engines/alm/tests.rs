@@ -65,8 +65,8 @@ fn with_trace_row(problem: &Problem) -> Problem {
 pub(crate) fn mixed(seed: &str) -> (Problem, Vec<Factor>, Vec<f64>) {
     let mut draw = stream(seed);
     let orders = [40usize, 9];
-    let mut number = |draw: &mut Stream| draw.between(-3, 3) as f64;
-    let mut functional = |draw: &mut Stream, long: bool| {
+    let number = |draw: &mut Stream| draw.between(-3, 3) as f64;
+    let functional = |draw: &mut Stream, long: bool| {
         let mut entries = Vec::new();
         for _ in 0..5 {
             entries.push((draw.index(orders[0]), draw.index(orders[0]), number(draw)));

@@ -53,11 +53,6 @@ impl<'a> System<'a> {
         &self.l
     }
 
-    /// Returns the operator.
-    pub fn operator(&self) -> &'a Operator {
-        self.op
-    }
-
     /// Returns the gradient g.
     pub fn gradient(&self) -> &[f64] {
         &self.l.gradient

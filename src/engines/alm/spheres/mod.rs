@@ -34,6 +34,11 @@ const SWEEPS: usize = 60;
 const CUT_SHARE: f64 = 3e-3;
 /// Columns kept beyond the numerical rank at that cut.
 const CUT_SPARE: usize = 2;
+/// Tolerance of the descent before the second cut, and the share of its cut: gradients of this size leave
+/// eigenvalues of this share in columns that vanish at the solution.
+const LOOSE: f64 = 1e-4;
+/// See [`LOOSE`].
+const LOOSE_SHARE: f64 = 1e-5;
 /// Length of the escape column relative to the rows.
 const ESCAPE: f64 = 0.1;
 /// Most widenings of the lifted stage.
@@ -161,17 +166,17 @@ impl Solver<'_> {
         let mut halt = None;
         let mut kept: Option<(f64, Vec<f64>)> = None;
         for round in 0..=WIDENINGS {
-            // 1. Descend; cut the width once, while it is cheap to be wrong.
+            // 1. Descend; cut the width twice, where it is cheap to be wrong: the certificate tells.
             let mut ended = self.sweeps(&mut q, meter).err();
-            if round == 0 && ended.is_none() && first > LEAST_LIFT {
-                let rank = numerical_rank(&q, CUT_SHARE) + CUT_SPARE;
-                if rank < q.width {
-                    q = resized(&q, rank.max(LEAST_LIFT.min(first)));
-                    normalise_rows(&mut q, stream);
+            if round == 0 && first > LEAST_LIFT {
+                cut(&mut q, CUT_SHARE, CUT_SPARE, stream);
+                if ended.is_none() {
+                    ended = self.trust_region(&mut q, LOOSE, meter);
                 }
+                cut(&mut q, LOOSE_SHARE, 0, stream);
             }
             if ended.is_none() {
-                ended = self.trust_region(&mut q, meter);
+                ended = self.trust_region(&mut q, self.params.stationarity, meter);
             }
             // 2. Certify.
             let objective = self.objective(&q);
@@ -182,7 +187,7 @@ impl Solver<'_> {
                 kept.get_or_insert((f64::NEG_INFINITY, y));
                 break;
             }
-            let (least, vector) = self.certify(&q, &y, meter);
+                let (least, vector) = self.certify(&q, &y, meter);
             let trace: f64 = self.block.radii.iter().map(|s| s * s).sum();
             let bound = dual + trace * least.min(0.0);
             if kept.as_ref().is_none_or(|(best, _)| bound > *best) {
@@ -211,7 +216,7 @@ impl Solver<'_> {
         if let Err(halt) = self.sweeps(q, meter) {
             return Some(halt);
         }
-        if q.width == 1 { None } else { self.trust_region(q, meter) }
+        if q.width == 1 { None } else { self.trust_region(q, self.params.stationarity, meter) }
     }
 
     fn sweeps(&self, q: &mut Factor, meter: &mut Meter) -> Result<(), Halt> {
@@ -231,9 +236,9 @@ impl Solver<'_> {
         }
     }
 
-    fn trust_region(&mut self, q: &mut Factor, meter: &mut Meter) -> Option<Halt> {
+    fn trust_region(&mut self, q: &mut Factor, tolerance: f64, meter: &mut Meter) -> Option<Halt> {
         let params = TrustParams {
-            tolerance: self.params.stationarity,
+            tolerance: tolerance.max(self.params.stationarity),
             outer: self.params.outer * 4,
             inner: self.params.inner,
         };
@@ -305,6 +310,15 @@ fn random_rows(order: usize, width: usize, stream: &mut Stream) -> Factor {
     q.data.iter_mut().for_each(|value| *value = stream.normal());
     normalise_rows(&mut q, stream);
     q
+}
+
+/// Cuts the width to the eigenvalues of X above `share` of the largest and `spare` columns more.
+fn cut(q: &mut Factor, share: f64, spare: usize, stream: &mut Stream) {
+    let width = (numerical_rank(q, share) + spare).max(LEAST_LIFT);
+    if width < q.width {
+        *q = resized(q, width);
+        normalise_rows(q, stream);
+    }
 }
 
 /// Projects the rows of a wider point on random directions: `Q G`, G Gaussian (M. Goemans and D. Williamson,

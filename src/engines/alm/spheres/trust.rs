@@ -10,11 +10,17 @@
 use super::cost::SphereBlock;
 use crate::budget::{Halt, Meter};
 use crate::linalg::vector::{axpy, dot, norm2};
+use pulp::Arch;
 
 /// Accepts a step when the fall is at least this share of the predicted one.
 const ACCEPT: f64 = 0.05;
 /// Residual of the subproblem relative to its start: min(this, |g| relative to the first gradient).
 const FORCING: f64 = 0.1;
+
+/// Most quarterings of a step.
+const SHORTENINGS: usize = 14;
+/// Curvature of a direction d below this times d'Md counts as none: rotations of Q have none.
+const FLAT: f64 = 1e-11;
 
 /// Settings of a run.
 #[derive(Clone, Copy, Debug)]
@@ -46,7 +52,6 @@ pub struct TrustWorkspace {
     image: Vec<f64>,
     gradient: Vec<f64>,
     eta: Vec<f64>,
-    image_eta: Vec<f64>,
     residual: Vec<f64>,
     direction: Vec<f64>,
     image_direction: Vec<f64>,
@@ -63,7 +68,6 @@ impl TrustWorkspace {
             &mut self.image,
             &mut self.gradient,
             &mut self.eta,
-            &mut self.image_eta,
             &mut self.residual,
             &mut self.direction,
             &mut self.image_direction,
@@ -91,61 +95,64 @@ pub fn minimise(
     let mut size = refresh(q, width, ws);
     let first = size;
     let scale: f64 = ws.weights.iter().sum::<f64>().sqrt();
-    let (mut radius, largest) = (0.5 * scale, 2.0 * scale);
-    let mut rejected = 0;
+    let (mut radius, largest) = (0.25 * scale, 2.0 * scale);
     for _ in 0..params.outer {
-        if size <= params.tolerance * norm2(&ws.y) {
+        let goal = params.tolerance * norm2(&ws.y);
+        if size <= goal {
             return TrustEnd::Converged;
         }
-        // 1. Step.
-        let forcing = FORCING.min(size / first.max(f64::MIN_POSITIVE)).max(1e-8);
+        // 1. Step. Its residual need not be far below the final tolerance.
+        let forcing = FORCING.min(size / first.max(f64::MIN_POSITIVE)).max(0.1 * goal / size);
         let model = match truncated_gradients(block, q, width, radius, forcing, params.inner, ws, meter) {
             Ok(model) => model,
             Err(halt) => return TrustEnd::Halted(halt),
         };
-        // 2. Trial point and its image.
-        for (i, (t, (row, step))) in ws
-            .trial
-            .chunks_exact_mut(width)
-            .zip(q.chunks_exact(width).zip(ws.eta.chunks_exact(width)))
-            .enumerate()
-        {
-            debug_assert!(i < block.order);
-            let mut square = 0.0;
-            for k in 0..width {
-                t[k] = row[k] + step[k];
-                square += t[k] * t[k];
-            }
-            let inverse = 1.0 / square.sqrt();
-            t.iter_mut().for_each(|value| *value *= inverse);
-        }
-        block.product(&ws.trial, width, &mut ws.trial_image);
-        meter.effort.operator_products += 1;
         meter.effort.inner_steps += 1;
-        meter.effort.flops += block.flops(width) + 12 * (block.order * width) as u64;
-        // 3. Actual against predicted change.
-        let actual = change(q, width, ws);
+        // 2. Shorten it until the function falls as the model says: cheaper than a new subproblem.
+        let slope = dot(&ws.gradient, &ws.eta);
+        let bend = 2.0 * (model.change - slope);
         let noise = 1e-15 * norm2(&ws.y) * norm2(&ws.eta);
-        let ratio = (actual - noise) / (model.change - noise);
-        let accept = ratio > ACCEPT && actual <= noise;
-        if ratio < 0.25 || !ratio.is_finite() {
-            radius = 0.25 * radius.min(model.length);
-        } else if ratio > 0.75 && model.reach == Reach::Boundary {
-            radius = (2.0 * radius).min(largest);
-        }
-        if accept {
-            q.copy_from_slice(&ws.trial);
-            std::mem::swap(&mut ws.image, &mut ws.trial_image);
-            size = refresh(q, width, ws);
-            rejected = 0;
-        } else {
-            rejected += 1;
-            if rejected > 12 || norm2(&ws.eta) <= 1e-15 * norm2(q) {
-                return TrustEnd::Stalled;
+        let mut t = 1.0;
+        let mut accepted = false;
+        for _ in 0..SHORTENINGS {
+            retract(q, width, t, ws);
+            block.product(&ws.trial, width, &mut ws.trial_image);
+            meter.effort.operator_products += 1;
+            meter.effort.flops += block.flops(width) + 12 * (block.order * width) as u64;
+            let actual = change(q, width, ws);
+            let ratio = (actual - noise) / (t * slope + 0.5 * t * t * bend - noise);
+            if ratio > ACCEPT && actual <= noise {
+                accepted = true;
+                if ratio > 0.75 && model.reach == Reach::Boundary {
+                    radius = (2.0 * radius).min(largest);
+                }
+                break;
             }
+            t *= 0.25;
+            radius = t * model.length;
         }
+        if !accepted {
+            return TrustEnd::Stalled;
+        }
+        q.copy_from_slice(&ws.trial);
+        std::mem::swap(&mut ws.image, &mut ws.trial_image);
+        size = refresh(q, width, ws);
     }
     TrustEnd::Limit
+}
+
+/// Sets the trial point to q + t eta with rows normalised.
+fn retract(q: &[f64], width: usize, t: f64, ws: &mut TrustWorkspace) {
+    let rows = q.chunks_exact(width).zip(ws.eta.chunks_exact(width));
+    for (out, (row, step)) in ws.trial.chunks_exact_mut(width).zip(rows) {
+        let mut square = 0.0;
+        for k in 0..width {
+            out[k] = row[k] + t * step[k];
+            square += out[k] * out[k];
+        }
+        let inverse = 1.0 / square.sqrt();
+        out.iter_mut().for_each(|value| *value *= inverse);
+    }
 }
 
 /// Computes y, the gradient and the preconditioner from the image and returns the gradient's norm.
@@ -205,12 +212,13 @@ fn truncated_gradients(
     meter: &mut Meter,
 ) -> Result<Model, Halt> {
     ws.eta.fill(0.0);
-    ws.image_eta.fill(0.0);
     ws.residual.copy_from_slice(&ws.gradient);
     let mut rho = precondition(&ws.residual, &ws.weights, width, 0.0, &mut ws.direction);
     let start = norm2(&ws.residual);
     // Squared lengths in the norm of the preconditioner: of eta, of eta with the direction, of the direction.
     let (mut ee, mut ed, mut dd) = (0.0, 0.0, rho);
+    // Change of the model: every full step gains alpha rho / 2.
+    let mut change = 0.0;
     let mut reach = Reach::Inside;
     for _ in 0..limit {
         meter.check()?;
@@ -218,6 +226,9 @@ fn truncated_gradients(
         meter.effort.operator_products += 1;
         meter.effort.flops += block.flops(width) + 20 * (block.order * width) as u64;
         let curvature = project_image(q, width, &ws.y, &ws.direction, &mut ws.image_direction);
+        if curvature.abs() <= FLAT * dd {
+            break;
+        }
         let alpha = rho / curvature;
         let longer = ee + alpha * (2.0 * ed + alpha * dd);
         if !(curvature > 0.0) || longer >= radius * radius {
@@ -225,27 +236,32 @@ fn truncated_gradients(
             let tau = left / (ed + (ed * ed + dd * left).sqrt());
             if tau.is_finite() {
                 axpy(tau, &ws.direction, &mut ws.eta);
-                axpy(tau, &ws.image_direction, &mut ws.image_eta);
+                change += tau * (0.5 * tau * curvature - rho);
                 ee = radius * radius;
             }
             reach = Reach::Boundary;
             break;
         }
+        change -= 0.5 * alpha * rho;
         ee = longer;
-        axpy(alpha, &ws.direction, &mut ws.eta);
-        axpy(alpha, &ws.image_direction, &mut ws.image_eta);
-        axpy(alpha, &ws.image_direction, &mut ws.residual);
-        if norm2(&ws.residual) <= forcing * start {
+        let (next, square) = advance(
+            alpha,
+            &ws.direction,
+            &ws.image_direction,
+            &ws.weights,
+            width,
+            &mut ws.eta,
+            &mut ws.residual,
+        );
+        if square.sqrt() <= forcing * start {
             break;
         }
-        let next = weighted_square(&ws.residual, &ws.weights, width);
         let beta = next / rho;
         precondition(&ws.residual, &ws.weights, width, beta, &mut ws.direction);
         ed = beta * (ed + alpha * dd);
         dd = next + beta * beta * dd;
         rho = next;
     }
-    let change = dot(&ws.gradient, &ws.eta) + 0.5 * dot(&ws.eta, &ws.image_eta);
     Ok(Model { change, length: ee.sqrt(), reach })
 }
 
@@ -257,41 +273,95 @@ fn precondition(
     beta: f64,
     direction: &mut [f64],
 ) -> f64 {
-    let mut sum = 0.0;
-    for (i, weight) in weights.iter().enumerate() {
-        let inverse = 1.0 / weight;
-        let range = i * width..(i + 1) * width;
-        for (d, r) in direction[range.clone()].iter_mut().zip(&residual[range]) {
-            let kept = if beta == 0.0 { 0.0 } else { beta * *d };
-            *d = kept - inverse * r;
-            sum += inverse * r * r;
-        }
-    }
-    sum
-}
-
-fn weighted_square(residual: &[f64], weights: &[f64], width: usize) -> f64 {
-    residual
-        .chunks_exact(width)
-        .zip(weights)
-        .map(|(row, weight)| row.iter().map(|r| r * r).sum::<f64>() / weight)
-        .sum()
+    Arch::new().dispatch(
+        #[inline(always)]
+        || {
+            let mut sum = 0.0;
+            for (i, weight) in weights.iter().enumerate() {
+                let inverse = 1.0 / weight;
+                let range = i * width..(i + 1) * width;
+                let row = &residual[range.clone()];
+                let target = &mut direction[range];
+                if beta == 0.0 {
+                    target.fill(0.0);
+                }
+                for (d, r) in target.iter_mut().zip(row) {
+                    *d = beta * *d - inverse * r;
+                }
+                sum += inverse * inner(row, row);
+            }
+            sum
+        },
+    )
 }
 
 /// Turns C d into the tangential part of S d and returns <d, S d>.
 fn project_image(q: &[f64], width: usize, y: &[f64], d: &[f64], image: &mut [f64]) -> f64 {
-    let mut curvature = 0.0;
-    for (i, (row, out)) in q.chunks_exact(width).zip(image.chunks_exact_mut(width)).enumerate() {
-        let d = &d[i * width..][..width];
-        let mut radial = 0.0;
-        for k in 0..width {
-            out[k] -= y[i] * d[k];
-            radial += out[k] * row[k];
-        }
-        for k in 0..width {
-            out[k] -= radial * row[k];
-            curvature += out[k] * d[k];
+    Arch::new().dispatch(
+        #[inline(always)]
+        || {
+            let mut curvature = 0.0;
+            for (i, y) in y.iter().enumerate() {
+                let range = i * width..(i + 1) * width;
+                let (row, d) = (&q[range.clone()], &d[range.clone()]);
+                let out = &mut image[range];
+                // d is tangential, so q.(Cd - y d) = q.Cd.
+                let radial = inner(out, row);
+                for k in 0..width {
+                    out[k] -= y * d[k] + radial * row[k];
+                }
+                curvature += inner(out, d);
+            }
+            curvature
+        },
+    )
+}
+
+/// Moves step and residual along the direction and returns residual' M^-1 residual and |residual|^2.
+fn advance(
+    alpha: f64,
+    direction: &[f64],
+    image: &[f64],
+    weights: &[f64],
+    width: usize,
+    eta: &mut [f64],
+    residual: &mut [f64],
+) -> (f64, f64) {
+    Arch::new().dispatch(
+        #[inline(always)]
+        || {
+            let (mut weighted, mut plain) = (0.0, 0.0);
+            for (i, weight) in weights.iter().enumerate() {
+                let range = i * width..(i + 1) * width;
+                let (d, hd) = (&direction[range.clone()], &image[range.clone()]);
+                let (e, r) = (&mut eta[range.clone()], &mut residual[range]);
+                for k in 0..width {
+                    e[k] += alpha * d[k];
+                    r[k] += alpha * hd[k];
+                }
+                let square = inner(r, r);
+                plain += square;
+                weighted += square / weight;
+            }
+            (weighted, plain)
+        },
+    )
+}
+
+/// Computes a'b with four independent partial sums.
+#[inline(always)]
+fn inner(a: &[f64], b: &[f64]) -> f64 {
+    let (a4, a_rest) = a.as_chunks::<4>();
+    let (b4, b_rest) = b.as_chunks::<4>();
+    let mut sums = [0.0; 4];
+    for (x, y) in a4.iter().zip(b4) {
+        for k in 0..4 {
+            sums[k] += x[k] * y[k];
         }
     }
-    curvature
+    let mut rest = 0.0;
+    for (x, y) in a_rest.iter().zip(b_rest) {
+        rest += x * y;
+    }
+    (sums[0] + sums[1]) + (sums[2] + sums[3]) + rest
 }
