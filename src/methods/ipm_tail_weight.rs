@@ -4,7 +4,7 @@
 use super::{Method, Trial};
 use crate::budget::{Halt, Meter};
 use crate::card::{DefaultSetting, Kind, MethodCard, MethodClass, SettingSpec};
-use crate::engines::ipm::tail::{TailInfo, TailParams, TailWeight};
+use crate::engines::ipm::tail::{FirstWeight, TailInfo, TailParams, TailWeight};
 use crate::engines::ipm::{self, Outcome};
 use crate::engines::newton::{NewtonParams, polish};
 use crate::engines::reduction::Spectral;
@@ -32,7 +32,7 @@ static CARD: MethodCard = MethodCard {
             name: "start",
             kind: Kind::Word(&["both", "gentle", "firm"]),
             default: DefaultSetting::Word("both"),
-            meaning: "gentle: the weight starts at relative gap 1e-4 with 1e-5 of |<C,X>|/tr X, to stay on the optimal face; \
+            meaning: "gentle: the weight starts late and as small as the duality gap, to stay on the optimal face; \
                 firm: it starts at gap 0.1 with 0.02 of it, to cross a gap; both: gentle, then firm unless the first point \
                 meets the relaxation's value; the better point is returned.",
         },
@@ -40,7 +40,25 @@ static CARD: MethodCard = MethodCard {
             name: "growth",
             kind: Kind::Decimal { least: 1.01, most: 10.0 },
             default: DefaultSetting::Decimal(1.5),
-            meaning: "Factor by which the weight grows an iteration while the tail ratio is above 1e-5.",
+            meaning: "Factor by which the weight grows when the tail ratio is above 1e-5 and did not fall enough.",
+        },
+        SettingSpec {
+            name: "hold",
+            kind: Kind::Decimal { least: 0.0, most: 1.0 },
+            default: DefaultSetting::Decimal(0.5),
+            meaning: "The weight is held while the tail ratio falls below hold times its last value.",
+        },
+        SettingSpec {
+            name: "gate",
+            kind: Kind::Decimal { least: 1e-8, most: 1.0 },
+            default: DefaultSetting::Decimal(1e-4),
+            meaning: "Relative gap below which the gentle weight starts.",
+        },
+        SettingSpec {
+            name: "share",
+            kind: Kind::Decimal { least: 1e-6, most: 1e6 },
+            default: DefaultSetting::Decimal(1.0),
+            meaning: "First gentle weight as a share of <X,S> over the tail of X.",
         },
     ],
 };
@@ -63,9 +81,22 @@ impl Method for IpmTailWeight {
 
     fn solve(&self, problem: &Problem, trial: &mut Trial) -> Result<Answer, Halt> {
         let growth = trial.options.decimal("growth");
-        let gentle =
-            TailParams { gate: 1e-4, start: 1e-5, growth, tolerance: 1e-8, patience: 120 };
-        let firm = TailParams { gate: 0.1, start: 0.02, growth, tolerance: 1e-8, patience: 80 };
+        let gentle = TailParams {
+            gate: trial.options.decimal("gate"),
+            start: FirstWeight::OfGap(trial.options.decimal("share")),
+            growth,
+            hold: trial.options.decimal("hold"),
+            tolerance: 1e-8,
+            patience: 120,
+        };
+        let firm = TailParams {
+            gate: 0.1,
+            start: FirstWeight::OfValue(0.02),
+            growth,
+            hold: trial.options.decimal("hold"),
+            tolerance: 1e-8,
+            patience: 80,
+        };
         let plans = match trial.options.word("start") {
             "gentle" => vec![("gentle", gentle)],
             "firm" => vec![("firm", firm)],

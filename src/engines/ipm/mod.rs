@@ -130,6 +130,8 @@ pub struct Steer<'a> {
     pub residuals: Residuals,
     /// Value `<C, X> + c'x` of the unweighted cost.
     pub value: f64,
+    /// `<X, S> + x'z`.
+    pub complementarity: f64,
     /// S by block; a hook that moves the cost moves S with it and keeps it positive definite.
     pub slacks: &'a mut [Mat<f64>],
     /// Extra cost W by block: the method works on C + W.

@@ -170,7 +170,6 @@ impl Run<'_> {
                 figures = self.figures();
             }
             self.trace(&figures, meter);
-            if std::env::var("DBG").is_ok() { eprintln!("{iteration:3} rp {:.1e} rd {:.1e} gap {:.1e} p {:.8e} d {:.8e} mu {:.1e} steps {:?} pert {}", figures.residuals.primal, figures.residuals.dual, figures.residuals.gap, figures.primal*self.scaling.rhs*self.scaling.cost, figures.dual*self.scaling.rhs*self.scaling.cost, self.state.mu, self.steps, self.state.perturbed); }
             if may_stop {
                 self.keep_best(&figures, iteration, hook.is_none());
             } else {
@@ -275,6 +274,7 @@ impl Run<'_> {
                 points: &points,
                 residuals: figures.residuals,
                 value,
+                complementarity: self.state.mu * self.state.pairs(),
                 slacks: &mut slacks,
                 weights: &mut weights,
             },
@@ -460,7 +460,8 @@ fn centring(mu: f64, predicted: f64, step: f64) -> f64 {
     let exponent = if mu > 1e-6 {
         if step < 1.0 / 3.0_f64.sqrt() { 1.0 } else { (3.0 * step * step).max(1.0) }
     } else {
-        (3.0 * step * step).clamp(1.0, 1.0)
+        // Near the end the exponent is held at one: bolder centring loses the last digits.
+        1.0
     };
     (predicted / mu).powf(exponent).min(1.0)
 }

@@ -22,14 +22,27 @@ use crate::linalg::{Mat, cholesky};
 pub struct TailParams {
     /// The weight starts once `||r_p||/(1+||b||) < 1e-3` and the relative gap is below this.
     pub gate: f64,
-    /// First weight as a share of `|<C, X>| / tr X`.
-    pub start: f64,
-    /// Factor by which the weight grows while the tail ratio is above `1e-5`.
+    /// First weight.
+    pub start: FirstWeight,
+    /// Factor by which the weight grows when the tail ratio is above `1e-5` and did not fall below
+    /// `hold` times its last value.
     pub growth: f64,
+    /// See `growth`.
+    pub hold: f64,
     /// Stops when the tail ratio, the primal residual and the relative gap are below this.
     pub tolerance: f64,
     /// Most steered iterations.
     pub patience: usize,
+}
+
+/// How the first weight is chosen.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub enum FirstWeight {
+    /// This share of `|<C, X>| / tr X`: enough to cross a gap.
+    OfValue(f64),
+    /// This share of `<X, S> / tail`: no more than the duality gap itself, so that the iterate stays
+    /// near the optimal face.
+    OfGap(f64),
 }
 
 /// How the steering ended.
@@ -52,6 +65,7 @@ pub struct TailWeight {
     target: Vec<Mat<f64>>,
     trial: Vec<Mat<f64>>,
     ws: Workspace,
+    last: f64,
     /// What happened so far.
     pub info: TailInfo,
 }
@@ -67,6 +81,7 @@ impl TailWeight {
             target: blocks.iter().map(|b| square(b.order)).collect(),
             trial: blocks.iter().map(|b| square(b.order)).collect(),
             ws: Workspace::new(),
+            last: f64::INFINITY,
             info: TailInfo::default(),
         }
     }
@@ -140,11 +155,18 @@ impl Hook for TailWeight {
         }
         self.info.steered += 1;
         if self.info.rho == 0.0 {
-            let scale = (steer.value.abs() / trace.max(f64::MIN_POSITIVE)).max(1e-3);
-            self.info.rho = self.params.start * scale;
-        } else if ratio > 1e-5 {
+            self.info.rho = match self.params.start {
+                FirstWeight::OfValue(share) => {
+                    share * (steer.value.abs() / trace.max(f64::MIN_POSITIVE)).max(1e-3)
+                }
+                FirstWeight::OfGap(share) => {
+                    share * steer.complementarity / tail.max(1e-6 * trace).max(f64::MIN_POSITIVE)
+                }
+            };
+        } else if ratio > 1e-5 && ratio > self.params.hold * self.last {
             self.info.rho *= self.params.growth;
         }
+        self.last = ratio;
         for index in 0..self.ranks.len() {
             if let Some(rank) = self.ranks[index] {
                 self.turn(index, rank, steer, meter);

@@ -5,6 +5,11 @@
 //! dense. Outer products over long vectors are never multiplied out: they are kept as the columns of
 //! one matrix and applied by matrix products.
 
+mod compile;
+mod slack;
+
+pub use slack::{Slack, SlackStore};
+
 use super::pattern::Pattern;
 use super::{Coefficient, Factor, Functional, OuterTerm, Problem, SparseSymmetric};
 use crate::linalg::vector::{axpy, dot};
@@ -83,33 +88,6 @@ pub struct BlockOperator {
     pub pattern: Option<Arc<Pattern>>,
 }
 
-/// A symmetric matrix on the aggregate pattern of a block, or dense, plus weighted long outer
-/// products that are applied and never formed.
-#[derive(Clone, Debug)]
-pub struct Slack {
-    /// Order.
-    pub order: usize,
-    /// Values on the pattern, or the full matrix.
-    pub store: SlackStore,
-    /// Weights of the columns of the block's outer batch: the matrix is
-    /// `store + vectors diag(outer_weights) vectors'`.
-    pub outer_weights: Vec<f64>,
-}
-
-/// Storage of a [`Slack`].
-#[derive(Clone, Debug)]
-pub enum SlackStore {
-    /// Values on a pattern.
-    Sparse {
-        /// The pattern.
-        pattern: Arc<Pattern>,
-        /// One value per upper-triangle slot.
-        values: Vec<f64>,
-    },
-    /// Full matrix, both triangles.
-    Dense(Mat<f64>),
-}
-
 /// The compiled operator.
 #[derive(Clone, Debug)]
 pub struct Operator {
@@ -121,13 +99,6 @@ pub struct Operator {
     pub orthant_cost: Vec<f64>,
     constraints: usize,
 }
-
-/// A vector is long when its outer product has more than this many entries per row of the block.
-const LONG_ENTRIES_PER_ROW: usize = 4;
-/// A block is held dense when its pattern fills more than this share of the matrix.
-const DENSE_SHARE: f64 = 0.25;
-/// Blocks up to this order are held dense.
-const SMALL_ORDER: usize = 24;
 
 /// How blocks are to be held.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -149,7 +120,7 @@ impl Operator {
     /// Compiles the operator of a problem with the given storage of blocks.
     pub fn with_storage(problem: &Problem, storage: Storage) -> Self {
         let blocks = (0..problem.blocks().len())
-            .map(|index| compile_block(problem, index, storage))
+            .map(|index| compile::compile_block(problem, index, storage))
             .collect();
         let mut orthant_cost = vec![0.0; problem.orthant()];
         for (index, value) in problem.cost().orthant.iter() {
@@ -301,145 +272,6 @@ impl BlockOperator {
         }
     }
 
-    /// Makes an empty slack of this block's storage.
-    pub fn slack(&self) -> Slack {
-        let store = match &self.pattern {
-            Some(pattern) => SlackStore::Sparse {
-                pattern: Arc::clone(pattern),
-                values: vec![0.0; pattern.stored()],
-            },
-            None => SlackStore::Dense(Mat::zeros(self.order, self.order)),
-        };
-        let outer_weights = vec![0.0; self.outer.as_ref().map_or(0, |outer| outer.ids.len())];
-        Slack { order: self.order, store, outer_weights }
-    }
-
-    /// Fills `slack` with `cost_scale * C - A*(y)`.
-    pub fn fill_slack(&self, y: &[f64], cost_scale: f64, slack: &mut Slack) {
-        match &mut slack.store {
-            SlackStore::Sparse { values, .. } => {
-                values.fill(0.0);
-                if let CostPart::Sparse(cost) = &self.cost
-                    && cost_scale != 0.0
-                {
-                    for (slot, value) in cost.slots.iter().zip(&cost.values) {
-                        values[*slot as usize] += cost_scale * value;
-                    }
-                }
-                for (g, &id) in self.entries.ids.iter().enumerate() {
-                    let multiplier = y[id as usize];
-                    for k in self.entries.range(g) {
-                        values[self.entries.slots[k] as usize] -=
-                            multiplier * self.entries.values[k];
-                    }
-                }
-            }
-            SlackStore::Dense(matrix) => self.fill_dense(y, cost_scale, matrix),
-        }
-        if let Some(outer) = &self.outer {
-            for (k, &id) in outer.ids.iter().enumerate() {
-                slack.outer_weights[k] = -outer.weights[k] * y[id as usize];
-            }
-        }
-    }
-
-    fn fill_dense(&self, y: &[f64], cost_scale: f64, matrix: &mut Mat<f64>) {
-        match &self.cost {
-            CostPart::Dense(cost) if cost_scale == 1.0 => matrix.copy_from(cost),
-            CostPart::Dense(cost) if cost_scale != 0.0 => {
-                for j in 0..self.order {
-                    let target = matrix.col_as_slice_mut(j);
-                    for (value, source) in target.iter_mut().zip(cost.col_as_slice(j)) {
-                        *value = cost_scale * source;
-                    }
-                }
-            }
-            _ => matrix.fill(0.0),
-        }
-        if let CostPart::Sparse(cost) = &self.cost {
-            for k in 0..cost.values.len() {
-                add_both(matrix, cost.rows[k], cost.columns[k], cost_scale * cost.values[k]);
-            }
-        }
-        for (g, &id) in self.entries.ids.iter().enumerate() {
-            let multiplier = y[id as usize];
-            for k in self.entries.range(g) {
-                let (i, j) = (self.entries.rows[k], self.entries.columns[k]);
-                add_both(matrix, i, j, -multiplier * self.entries.values[k]);
-            }
-        }
-    }
-
-    /// Computes `out = S V` for a factor V.
-    #[track_caller]
-    pub fn slack_times(&self, slack: &Slack, v: &Factor, out: &mut Factor) {
-        assert!(v.order == self.order && out.order == v.order && out.width == v.width);
-        let width = v.width;
-        match &slack.store {
-            SlackStore::Sparse { pattern, values } => {
-                pattern.multiply_rows(values, &v.data, width, &mut out.data);
-            }
-            SlackStore::Dense(matrix) => {
-                let v_t = MatRef::from_column_major_slice(&v.data, width, self.order);
-                let out_t = crate::linalg::MatMut::from_column_major_slice_mut(
-                    &mut out.data,
-                    width,
-                    self.order,
-                );
-                dense::gemm(out_t, dense::Accumulate::Replace, 1.0, v_t, matrix.as_ref());
-            }
-        }
-        if let Some(outer) = &self.outer {
-            let mut coefficients = transposed_products(v, &outer.vectors);
-            for k in 0..outer.ids.len() {
-                let weight = slack.outer_weights[k];
-                coefficients.col_as_slice_mut(k).iter_mut().for_each(|value| *value *= weight);
-            }
-            let out_t = crate::linalg::MatMut::from_column_major_slice_mut(
-                &mut out.data,
-                width,
-                self.order,
-            );
-            dense::gemm(
-                out_t,
-                dense::Accumulate::Add,
-                1.0,
-                coefficients.as_ref(),
-                outer.vectors.transpose(),
-            );
-        }
-    }
-
-    /// Adds `scale * S` into a full dense matrix, both triangles.
-    pub fn add_slack_to(&self, slack: &Slack, scale: f64, target: &mut Mat<f64>) {
-        match &slack.store {
-            SlackStore::Sparse { pattern, values } => {
-                for (slot, (i, j)) in pattern.upper().enumerate() {
-                    add_both(target, i as u32, j as u32, scale * values[slot]);
-                }
-            }
-            SlackStore::Dense(matrix) => {
-                for j in 0..self.order {
-                    axpy(scale, matrix.col_as_slice(j), target.col_as_slice_mut(j));
-                }
-            }
-        }
-        if let Some(outer) = &self.outer {
-            let mut scaled = outer.vectors.clone();
-            for k in 0..outer.ids.len() {
-                let weight = scale * slack.outer_weights[k];
-                scaled.col_as_slice_mut(k).iter_mut().for_each(|value| *value *= weight);
-            }
-            dense::gemm(
-                target.as_mut(),
-                dense::Accumulate::Add,
-                1.0,
-                scaled.as_ref(),
-                outer.vectors.transpose(),
-            );
-        }
-    }
-
     /// Returns the flops of applying the operator and the slack to one column of a factor.
     pub fn flops_per_column(&self) -> u64 {
         let pattern = match &self.pattern {
@@ -470,117 +302,3 @@ fn transposed_products(v: &Factor, vectors: &Mat<f64>) -> Mat<f64> {
     out
 }
 
-fn is_long(term: &OuterTerm, order: usize) -> bool {
-    term.vector.len() * term.vector.len() > 2 * LONG_ENTRIES_PER_ROW * order.max(SMALL_ORDER)
-}
-
-fn split(coefficient: &Coefficient) -> (Option<SparseSymmetric>, Vec<&OuterTerm>) {
-    match coefficient {
-        Coefficient::Sparse(matrix) => (Some(matrix.clone()), Vec::new()),
-        Coefficient::Outer(sum) => {
-            let (long, short): (Vec<&OuterTerm>, Vec<&OuterTerm>) =
-                sum.terms.iter().partition(|term| is_long(term, sum.order));
-            let sparse = (!short.is_empty()).then(|| {
-                let terms = short.into_iter().cloned().collect();
-                Coefficient::Outer(super::OuterSum { order: sum.order, terms }).to_sparse()
-            });
-            (sparse, long)
-        }
-    }
-}
-
-fn compile_block(problem: &Problem, index: usize, storage: Storage) -> BlockOperator {
-    let order = problem.blocks()[index].order;
-    let mut entries = Entries::default();
-    let mut outer: Vec<(usize, &OuterTerm)> = Vec::new();
-    for (id, functional) in problem.constraints().iter().enumerate() {
-        let Some(part) = functional.part(index) else { continue };
-        let (sparse, long) = split(part);
-        if let Some(matrix) = sparse {
-            entries.push_group(id, &matrix);
-        }
-        outer.extend(long.into_iter().map(|term| (id, term)));
-    }
-    if entries.starts.is_empty() {
-        entries.starts.push(0);
-    }
-    let cost = cost_entries(problem.cost(), index, order);
-    let hold_dense = match storage {
-        Storage::Automatic => !outer.is_empty(),
-        Storage::Dense => true,
-        Storage::Factored => false,
-    };
-    let pattern = if hold_dense { None } else { aggregate(order, &entries, &cost) };
-    if let Some(pattern) = &pattern {
-        entries.slots = slots_of(pattern, &entries);
-    }
-    let cost = match &pattern {
-        Some(pattern) => {
-            let slots = slots_of(pattern, &cost);
-            CostPart::Sparse(Entries { slots, ..cost })
-        }
-        None if cost.values.len() as f64 > DENSE_SHARE * 0.5 * (order * order) as f64 => {
-            let mut matrix = Mat::zeros(order, order);
-            for k in 0..cost.values.len() {
-                add_both(&mut matrix, cost.rows[k], cost.columns[k], cost.values[k]);
-            }
-            CostPart::Dense(matrix)
-        }
-        None => CostPart::Sparse(cost),
-    };
-    BlockOperator { order, entries, outer: batch(order, &outer), cost, pattern }
-}
-
-fn cost_entries(cost: &Functional, index: usize, order: usize) -> Entries {
-    let mut entries = Entries::default();
-    match cost.part(index) {
-        Some(part) => entries.push_group(0, &part.to_sparse()),
-        None => entries.push_group(0, &SparseSymmetric::gather(order, Vec::new())),
-    }
-    entries
-}
-
-fn aggregate(order: usize, entries: &Entries, cost: &Entries) -> Option<Arc<Pattern>> {
-    if order <= SMALL_ORDER {
-        return None;
-    }
-    let positions = |list: &Entries| -> Vec<(u32, u32)> {
-        list.columns.iter().copied().zip(list.rows.iter().copied()).collect()
-    };
-    let mut all = positions(entries);
-    all.extend(positions(cost));
-    all.extend((0..order as u32).map(|i| (i, i)));
-    all.sort_unstable();
-    all.dedup();
-    let full = (2 * all.len() - order) as f64;
-    if full > DENSE_SHARE * (order * order) as f64 {
-        return None;
-    }
-    Some(Arc::new(Pattern::new(order, &all)))
-}
-
-fn slots_of(pattern: &Pattern, entries: &Entries) -> Vec<u32> {
-    entries
-        .rows
-        .iter()
-        .zip(&entries.columns)
-        .map(|(&i, &j)| pattern.slot(i as usize, j as usize).expect("entry of the aggregate") as u32)
-        .collect()
-}
-
-fn batch(order: usize, terms: &[(usize, &OuterTerm)]) -> Option<OuterBatch> {
-    if terms.is_empty() {
-        return None;
-    }
-    let mut vectors = Mat::zeros(order, terms.len());
-    for (k, (_, term)) in terms.iter().enumerate() {
-        for (i, value) in term.vector.iter() {
-            vectors[(i, k)] = value;
-        }
-    }
-    Some(OuterBatch {
-        ids: terms.iter().map(|(id, _)| *id as u32).collect(),
-        weights: terms.iter().map(|(_, term)| term.weight).collect(),
-        vectors,
-    })
-}
