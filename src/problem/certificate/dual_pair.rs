@@ -128,7 +128,7 @@ impl DualPair {
         for (k, (pair, block)) in self.blocks.iter().zip(problem.blocks()).enumerate() {
             let named = |what: &str| format!("{what} of block {}", k + 1);
             expect_size(&named("V"), block.order, pair.factor.order)?;
-            let entries = pair.factor.order * pair.factor.width;
+            let entries = pair.factor.order.saturating_mul(pair.factor.width);
             expect_size(&named("the entry list of V"), entries, pair.factor.rows.len())?;
             expect_size(&named("D"), pair.slack.len(), pair.weights.len())?;
             if block.rank.is_some_and(|rank| pair.factor.width > rank) {
