@@ -14,7 +14,9 @@
 
 pub mod budget;
 pub mod card;
+pub mod cli;
 pub mod families;
+pub mod formats;
 pub mod linalg;
 pub mod methods;
 pub mod problem;

@@ -19,7 +19,7 @@ pub struct PlanError {
     pub token: String,
     /// What is wrong.
     pub message: String,
-    /// What was expected.
+    /// What was expected; empty when the message says it.
     pub expected: String,
     /// Nearest valid word, if one is near.
     pub nearest: Option<String>,
@@ -47,7 +47,13 @@ impl PlanError {
         }
         let before = &text[..start];
         let line_start = before.rfind('\n').map_or(0, |at| at + 1);
-        let mut token: String = text[start..end].lines().next().unwrap_or("").chars().take(60).collect();
+        let mut token: String = text[start..end]
+            .lines()
+            .next()
+            .unwrap_or("")
+            .chars()
+            .take(60)
+            .collect();
         if token.len() < text[start..end].len() && !token.is_empty() {
             token.push_str("...");
         }
@@ -67,13 +73,18 @@ impl PlanError {
 
 impl fmt::Display for PlanError {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        write!(f, "{}:{}:{}: {}", self.file, self.line, self.column, self.message)?;
+        write!(
+            f,
+            "{}:{}:{}: {}",
+            self.file, self.line, self.column, self.message
+        )?;
+        if self.expected.is_empty() {
+            return Ok(());
+        }
         if !self.token.is_empty() {
             write!(f, ": found `{}`", self.token)?;
         }
-        if !self.expected.is_empty() {
-            write!(f, ", expected {}", self.expected)?;
-        }
+        write!(f, ", expected {}", self.expected)?;
         if let Some(word) = &self.nearest {
             write!(f, " (did you mean `{word}`?)")?;
         }
