@@ -24,7 +24,7 @@ const INPUT: u8 = 2;
 pub(super) struct Failure {
     code: u8,
     message: String,
-    snippet: Option<Snippet>,
+    snippet: Option<Box<Snippet>>,
 }
 
 /// One line of a file with the place of a token in it.
@@ -96,7 +96,7 @@ impl Diagnostic for Failure {
     fn source_code(&self) -> Option<&dyn SourceCode> {
         self.snippet
             .as_ref()
-            .map(|snippet| snippet as &dyn SourceCode)
+            .map(|snippet| &**snippet as &dyn SourceCode)
     }
 
     fn labels(&self) -> Option<Box<dyn Iterator<Item = LabeledSpan> + '_>> {
@@ -146,19 +146,21 @@ impl From<&PlanError> for Failure {
         Failure {
             code: INPUT,
             message: error.to_string(),
-            snippet: Some(snippet),
+            snippet: Some(Box::new(snippet)),
         }
     }
 }
 
 impl From<&FormatError> for Failure {
     fn from(error: &FormatError) -> Self {
-        let snippet = error.excerpt.as_ref().map(|excerpt| Snippet {
-            file: error.file.clone(),
-            line: error.line.saturating_sub(1),
-            text: excerpt.text.clone(),
-            token: SourceSpan::from(excerpt.start..excerpt.start + excerpt.length),
-            label: format!("expected {}", error.expected),
+        let snippet = error.excerpt.as_ref().map(|excerpt| {
+            Box::new(Snippet {
+                file: error.file.clone(),
+                line: error.line.saturating_sub(1),
+                text: excerpt.text.clone(),
+                token: SourceSpan::from(excerpt.start..excerpt.start + excerpt.length),
+                label: format!("expected {}", error.expected),
+            })
         });
         Failure {
             code: INPUT,
@@ -180,7 +182,7 @@ impl From<InputError> for Failure {
 impl From<RunError> for Failure {
     fn from(error: RunError) -> Self {
         match error {
-            RunError::Plan(error) => Failure::from(&*error),
+            RunError::Plan(error) => Failure::from(&error),
             RunError::Input(error) => Failure::from(*error),
             RunError::Internal { .. } => Failure::defect(error),
             other => Failure::input(other),

@@ -21,7 +21,7 @@ pub use folder::{FolderError, Target, latest_folder, write_files};
 pub use instance::{InputError, Instance, Knowledge, plant, read_instance};
 pub use journal::{Contents, JournalError};
 pub use merge::{MergeError, Merged, merge};
-pub use plan::{Entrant, Imported, Plan, PlanError, ReportedOptimum, Roster, Sown, Span};
+pub use plan::{Entrant, Imported, Located, Plan, PlanError, ReportedOptimum, Roster, Sown, Span};
 pub use selection::{Pattern, Selection, Shard};
 
 use std::path::PathBuf;
@@ -93,7 +93,7 @@ pub struct Outcome {
 pub enum RunError {
     /// The plan is wrong.
     #[error("{0}")]
-    Plan(Box<PlanError>),
+    Plan(PlanError),
     /// An imported file is wrong.
     #[error("{0}")]
     Input(Box<InputError>),
@@ -137,7 +137,7 @@ impl RunError {
 
 impl From<PlanError> for RunError {
     fn from(error: PlanError) -> Self {
-        RunError::Plan(Box::new(error))
+        RunError::Plan(error)
     }
 }
 

@@ -1,12 +1,25 @@
 //! What is wrong with a plan, and where.
 
 use std::fmt;
+use std::ops::Deref;
 
 use super::Span;
 
-/// An error in a plan: where it is, what stands there, and what was expected.
+/// An error in a plan. Its fields are those of [`Located`]; it is one pointer wide.
 #[derive(Clone, Debug, PartialEq, Eq)]
-pub struct PlanError {
+pub struct PlanError(Box<Located>);
+
+impl Deref for PlanError {
+    type Target = Located;
+
+    fn deref(&self) -> &Located {
+        &self.0
+    }
+}
+
+/// Where an error is, what stands there, and what was expected.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Located {
     /// Name of the plan file.
     pub file: String,
     /// Line, from 1.
@@ -57,7 +70,7 @@ impl PlanError {
         if token.len() < text[start..end].len() && !token.is_empty() {
             token.push_str("...");
         }
-        PlanError {
+        PlanError(Box::new(Located {
             file: file.to_owned(),
             line: before.matches('\n').count() + 1,
             column: before[line_start..].chars().count() + 1,
@@ -67,7 +80,7 @@ impl PlanError {
             expected: expected.to_owned(),
             nearest: nearest.map(str::to_owned),
             text: text.to_owned(),
-        }
+        }))
     }
 }
 

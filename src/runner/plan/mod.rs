@@ -10,7 +10,7 @@ mod quantity;
 mod reader;
 mod sections;
 
-pub use error::PlanError;
+pub use error::{Located, PlanError};
 
 use std::collections::BTreeMap;
 use std::path::PathBuf;

@@ -13,6 +13,9 @@ use crate::families::Family;
 use crate::methods::Method;
 use crate::referee::Tolerance;
 
+/// Where values stand, by the names of their settings.
+type Places = BTreeMap<String, Span>;
+
 /// Wall time of a trial when the plan gives none.
 const DEFAULT_WALL: Duration = Duration::from_secs(60);
 
@@ -163,7 +166,7 @@ pub(super) fn families<'a>(
 fn combinations(
     section: &Section<'_, '_>,
     specs: &[SettingSpec],
-) -> Result<Vec<(Settings, BTreeMap<String, Span>)>, PlanError> {
+) -> Result<Vec<(Settings, Places)>, PlanError> {
     let document = section.document;
     let mut axes: Vec<(String, Span, Vec<Placed<Setting>>)> = Vec::new();
     for entry in section.entries() {
