@@ -9,9 +9,9 @@ use serde::{Deserialize, Serialize};
 /// Version of the record layout. It changes when a column is added, dropped or changes its meaning.
 pub const SCHEMA: u32 = 1;
 
-/// Returns the value when it is finite, and nothing otherwise.
+/// Returns the value when it is finite, and nothing otherwise; a negative zero becomes zero.
 pub fn measured(value: f64) -> Option<f64> {
-    value.is_finite().then_some(value)
+    value.is_finite().then_some(value + 0.0)
 }
 
 /// The one-word outcome of a trial.
@@ -181,7 +181,10 @@ pub struct Work {
 /// One row of `trials.csv`. Columns are written in the order of the fields.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
-#[allow(missing_docs, reason = "each field is described where it is measured: Identity, Figures, Cost, Work")]
+#[allow(
+    missing_docs,
+    reason = "each field is described where it is measured: Identity, Figures, Cost, Work"
+)]
 pub struct Record {
     pub trial: String,
     pub instance: String,
@@ -284,7 +287,12 @@ impl Record {
 
     /// Returns the record without its time and memory figures: what two runs of one plan share.
     pub fn without_measurements(&self) -> Self {
-        Record { wall_s: None, cpu_s: None, peak_bytes: None, ..self.clone() }
+        Record {
+            wall_s: None,
+            cpu_s: None,
+            peak_bytes: None,
+            ..self.clone()
+        }
     }
 }
 
@@ -383,7 +391,10 @@ mod tests {
             ranks: Some([1, 2, 3]),
             ..Figures::default()
         };
-        let cost = Cost { wall_s: Some(f64::INFINITY), ..Cost::default() };
+        let cost = Cost {
+            wall_s: Some(f64::INFINITY),
+            ..Cost::default()
+        };
         let record = Record::assemble(
             Identity::default(),
             Verdict::Malformed,
@@ -393,8 +404,14 @@ mod tests {
             None,
             "two\nlines",
         );
-        assert_eq!((record.digits, record.objective, record.wall_s), (None, None, None));
-        assert_eq!((record.feasibility, record.rank_at_1e8), (Some(0.5), Some(3)));
+        assert_eq!(
+            (record.digits, record.objective, record.wall_s),
+            (None, None, None)
+        );
+        assert_eq!(
+            (record.feasibility, record.rank_at_1e8),
+            (Some(0.5), Some(3))
+        );
         assert_eq!(record.message, "two lines");
     }
 
@@ -423,7 +440,10 @@ mod tests {
     #[test]
     fn words_are_the_serialised_form() {
         for verdict in Verdict::ALL {
-            assert_eq!(serde_json::to_string(&verdict).unwrap(), format!("\"{}\"", verdict.word()));
+            assert_eq!(
+                serde_json::to_string(&verdict).unwrap(),
+                format!("\"{}\"", verdict.word())
+            );
         }
     }
 }

@@ -28,12 +28,21 @@ pub(super) struct Progress {
 
 impl Progress {
     pub(super) fn new(loudness: Loudness, bar: Bar) -> Self {
-        Progress { loudness, bar, running: Mutex::new(None) }
+        Progress {
+            loudness,
+            bar,
+            running: Mutex::new(None),
+        }
     }
 
     /// Takes the bar away.
     pub(super) fn end(&self) {
-        if let Some(bar) = self.running.lock().unwrap_or_else(PoisonError::into_inner).take() {
+        if let Some(bar) = self
+            .running
+            .lock()
+            .unwrap_or_else(PoisonError::into_inner)
+            .take()
+        {
             bar.finish_and_clear();
         }
     }
@@ -51,10 +60,16 @@ impl Observer for Progress {
         if self.loudness == Loudness::Quiet {
             return;
         }
-        let already = if recorded == 0 { String::new() } else { format!(", {recorded} are recorded already") };
+        let already = if recorded == 0 {
+            String::new()
+        } else {
+            format!(", {recorded} are recorded already")
+        };
         tell(&format!("{pending} trials to run{already}"));
         if self.bar == Bar::OnTerminals && std::io::stderr().is_terminal() {
-            let style = ProgressStyle::with_template("{bar:40} {pos}/{len} {elapsed} (about {eta} to go) {msg}");
+            let style = ProgressStyle::with_template(
+                "{bar:40} {pos}/{len} {elapsed} (about {eta} to go) {msg}",
+            );
             let bar = ProgressBar::new(pending as u64);
             bar.set_style(style.unwrap_or_else(|_| ProgressStyle::default_bar()));
             *self.running.lock().unwrap_or_else(PoisonError::into_inner) = Some(bar);
@@ -67,9 +82,19 @@ impl Observer for Progress {
 
     fn finished(&self, record: &Record) {
         if self.loudness == Loudness::Verbose {
-            let cpu = record.cpu_s.map_or(String::new(), |cpu| format!(" {cpu:.3} s"));
-            let message = if record.message.is_empty() { String::new() } else { format!(" ({})", record.message) };
-            self.line(&format!("{} {}{cpu}{message}", record.trial, record.verdict.word()));
+            let cpu = record
+                .cpu_s
+                .map_or(String::new(), |cpu| format!(" {cpu:.3} s"));
+            let message = if record.message.is_empty() {
+                String::new()
+            } else {
+                format!(" ({})", record.message)
+            };
+            self.line(&format!(
+                "{} {}{cpu}{message}",
+                record.trial,
+                record.verdict.word()
+            ));
         }
         if let Some(bar) = &*self.running.lock().unwrap_or_else(PoisonError::into_inner) {
             bar.inc(1);

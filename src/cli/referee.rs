@@ -32,12 +32,22 @@ pub(super) fn execute(command: &Referee) -> Ended {
     if let Some(rank) = command.rank {
         instance = instance.with_rank(rank as usize, &command.instance.display().to_string())?;
     }
-    let read = solution::read(&command.solution, &instance.problem).map_err(|error| Failure::from(&error))?;
+    let read = solution::read(&command.solution, &instance.problem)
+        .map_err(|error| Failure::from(&error))?;
     let known = instance.knowledge.known();
-    let judgement = judge(&instance.problem, &read.answer, &known, &Tolerance::default())
-        .map_err(|contradiction| Failure::defect(format!("internal error: {contradiction}")))?;
+    let judgement = judge(
+        &instance.problem,
+        &read.answer,
+        &known,
+        &Tolerance::default(),
+    )
+    .map_err(|contradiction| Failure::defect(format!("internal error: {contradiction}")))?;
     let optimum = instance.knowledge.optimum_value();
-    say_and_end(&if command.json { as_json(&judgement, optimum) } else { as_text(&judgement, optimum) })
+    say_and_end(&if command.json {
+        as_json(&judgement, optimum)
+    } else {
+        as_text(&judgement, optimum)
+    })
 }
 
 fn word(finding: Finding) -> &'static str {
@@ -67,7 +77,10 @@ fn figures(judgement: &Judgement, optimum: Option<f64>) -> Vec<(&'static str, Op
         ("rank_at_1e-8", rank(2)),
         ("tail_ratio", judgement.tail_ratio),
         ("restored_feasibility", judgement.restored_feasibility),
-        ("restored_objective_error", judgement.restored_objective_error),
+        (
+            "restored_objective_error",
+            judgement.restored_objective_error,
+        ),
         ("raw_feasibility", judgement.raw_feasibility),
         ("raw_objective", judgement.raw_objective),
         ("lower_bound", judgement.lower_bound),
@@ -80,7 +93,10 @@ fn as_json(judgement: &Judgement, optimum: Option<f64>) -> String {
         value[name] = json!(figure.and_then(measured));
     }
     value["dimacs"] = json!(judgement.dimacs);
-    format!("{}\n", serde_json::to_string_pretty(&value).expect("the figures are plain data"))
+    format!(
+        "{}\n",
+        serde_json::to_string_pretty(&value).expect("the figures are plain data")
+    )
 }
 
 fn as_text(judgement: &Judgement, optimum: Option<f64>) -> String {

@@ -5,8 +5,8 @@ use std::io::IsTerminal;
 use std::process::ExitCode;
 
 use miette::{
-    Diagnostic, GraphicalReportHandler, GraphicalTheme, LabeledSpan, MietteError, MietteSpanContents, SourceCode,
-    SourceSpan, SpanContents,
+    Diagnostic, GraphicalReportHandler, GraphicalTheme, LabeledSpan, MietteError,
+    MietteSpanContents, SourceCode, SourceSpan, SpanContents,
 };
 
 use super::output::tell;
@@ -24,7 +24,7 @@ const INPUT: u8 = 2;
 pub(super) struct Failure {
     code: u8,
     message: String,
-    snippet: Option<Snippet>,
+    snippet: Option<Box<Snippet>>,
 }
 
 /// One line of a file with the place of a token in it.
@@ -41,12 +41,20 @@ struct Snippet {
 impl Failure {
     /// Makes a failure by bad usage or bad input.
     pub(super) fn input(message: impl fmt::Display) -> Self {
-        Failure { code: INPUT, message: message.to_string(), snippet: None }
+        Failure {
+            code: INPUT,
+            message: message.to_string(),
+            snippet: None,
+        }
     }
 
     /// Makes a failure by a defect of this program.
     pub(super) fn defect(message: impl fmt::Display) -> Self {
-        Failure { code: DEFECT, message: message.to_string(), snippet: None }
+        Failure {
+            code: DEFECT,
+            message: message.to_string(),
+            snippet: None,
+        }
     }
 
     /// Tells it on standard error and returns the exit code.
@@ -54,12 +62,21 @@ impl Failure {
         tell(&format!("error: {}", self.message));
         if self.snippet.is_some() {
             let colours = std::io::stderr().is_terminal() && std::env::var_os("NO_COLOR").is_none();
-            let theme = if colours { GraphicalTheme::unicode() } else { GraphicalTheme::none() };
-            let handler = GraphicalReportHandler::new_themed(theme).with_wrap_lines(false).with_links(false);
+            let theme = if colours {
+                GraphicalTheme::unicode()
+            } else {
+                GraphicalTheme::none()
+            };
+            let handler = GraphicalReportHandler::new_themed(theme)
+                .with_wrap_lines(false)
+                .with_links(false);
             let mut drawn = String::new();
             if handler.render_report(&mut drawn, self).is_ok() {
                 // The message has been told in one line; what is wanted here is the snippet.
-                let lines: Vec<&str> = drawn.lines().skip_while(|line| !line.contains("-[") && !line.contains("─[")).collect();
+                let lines: Vec<&str> = drawn
+                    .lines()
+                    .skip_while(|line| !line.contains("-[") && !line.contains("─["))
+                    .collect();
                 tell(lines.join("\n").trim_end());
             }
         }
@@ -77,7 +94,9 @@ impl std::error::Error for Failure {}
 
 impl Diagnostic for Failure {
     fn source_code(&self) -> Option<&dyn SourceCode> {
-        self.snippet.as_ref().map(|snippet| snippet as &dyn SourceCode)
+        self.snippet
+            .as_ref()
+            .map(|snippet| &**snippet as &dyn SourceCode)
     }
 
     fn labels(&self) -> Option<Box<dyn Iterator<Item = LabeledSpan> + '_>> {
@@ -107,7 +126,9 @@ impl SourceCode for Snippet {
 
 impl From<&PlanError> for Failure {
     fn from(error: &PlanError) -> Self {
-        let start = error.text[..error.span.start].rfind('\n').map_or(0, |at| at + 1);
+        let start = error.text[..error.span.start]
+            .rfind('\n')
+            .map_or(0, |at| at + 1);
         let line = error.text[start..].lines().next().unwrap_or("");
         let from = error.span.start - start;
         let length = (error.span.end - error.span.start).min(line.len().saturating_sub(from));
@@ -116,22 +137,36 @@ impl From<&PlanError> for Failure {
             line: error.line - 1,
             text: line.to_owned(),
             token: SourceSpan::from(from..from + length),
-            label: format!("expected {}", error.expected),
+            label: if error.expected.is_empty() {
+                "here".to_owned()
+            } else {
+                format!("expected {}", error.expected)
+            },
         };
-        Failure { code: INPUT, message: error.to_string(), snippet: Some(snippet) }
+        Failure {
+            code: INPUT,
+            message: error.to_string(),
+            snippet: Some(Box::new(snippet)),
+        }
     }
 }
 
 impl From<&FormatError> for Failure {
     fn from(error: &FormatError) -> Self {
-        let snippet = error.excerpt.as_ref().map(|excerpt| Snippet {
-            file: error.file.clone(),
-            line: error.line.saturating_sub(1),
-            text: excerpt.text.clone(),
-            token: SourceSpan::from(excerpt.start..excerpt.start + excerpt.length),
-            label: format!("expected {}", error.expected),
+        let snippet = error.excerpt.as_ref().map(|excerpt| {
+            Box::new(Snippet {
+                file: error.file.clone(),
+                line: error.line.saturating_sub(1),
+                text: excerpt.text.clone(),
+                token: SourceSpan::from(excerpt.start..excerpt.start + excerpt.length),
+                label: format!("expected {}", error.expected),
+            })
         });
-        Failure { code: INPUT, message: error.to_string(), snippet }
+        Failure {
+            code: INPUT,
+            message: error.to_string(),
+            snippet,
+        }
     }
 }
 
@@ -147,7 +182,7 @@ impl From<InputError> for Failure {
 impl From<RunError> for Failure {
     fn from(error: RunError) -> Self {
         match error {
-            RunError::Plan(error) => Failure::from(&*error),
+            RunError::Plan(error) => Failure::from(&error),
             RunError::Input(error) => Failure::from(*error),
             RunError::Internal { .. } => Failure::defect(error),
             other => Failure::input(other),

@@ -1,6 +1,6 @@
 //! `rankassay roster`.
 
-use clap::{Args, ValueEnum};
+use clap::Args;
 use serde_json::{Value, json};
 
 use super::Ended;
@@ -9,7 +9,7 @@ use super::report::Failure;
 use crate::card::{FamilyCard, MethodCard, SettingSpec, nearest_word};
 use crate::{families, methods};
 
-#[derive(Clone, Copy, Debug, PartialEq, Eq, ValueEnum)]
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
 enum Kind {
     Families,
     Methods,
@@ -17,13 +17,25 @@ enum Kind {
 
 #[derive(Debug, Args)]
 pub(super) struct RosterCommand {
-    /// Lists only these
-    kind: Option<Kind>,
-    /// Shows the whole card of this one
-    name: Option<String>,
+    /// `families` or `methods` to list only these, a name to show its whole card, or both
+    #[arg(value_name = "families|methods|NAME", num_args = 0..=2)]
+    words: Vec<String>,
     /// Writes JSON
     #[arg(long)]
     json: bool,
+}
+
+impl RosterCommand {
+    /// Splits the words into what to list and whose card to show.
+    fn wanted(&self) -> (Option<Kind>, Option<&str>) {
+        let words: Vec<&str> = self.words.iter().map(String::as_str).collect();
+        match words.as_slice() {
+            [] => (None, None),
+            ["families", rest @ ..] => (Some(Kind::Families), rest.first().copied()),
+            ["methods", rest @ ..] => (Some(Kind::Methods), rest.first().copied()),
+            [.., name] => (None, Some(name)),
+        }
+    }
 }
 
 enum Card {
@@ -32,21 +44,37 @@ enum Card {
 }
 
 pub(super) fn execute(command: &RosterCommand) -> Ended {
+    let (kind, name) = command.wanted();
     let mut cards = Vec::new();
-    if command.kind != Some(Kind::Methods) {
-        cards.extend(families::registry().iter().map(|family| Card::Family(family.card())));
+    if kind != Some(Kind::Methods) {
+        cards.extend(
+            families::registry()
+                .iter()
+                .map(|family| Card::Family(family.card())),
+        );
     }
-    if command.kind != Some(Kind::Families) {
-        cards.extend(methods::registry().iter().map(|method| Card::Method(method.card())));
+    if kind != Some(Kind::Families) {
+        cards.extend(
+            methods::registry()
+                .iter()
+                .map(|method| Card::Method(method.card())),
+        );
     }
-    if let Some(name) = &command.name {
+    if let Some(name) = name {
         let known: Vec<&str> = cards.iter().map(Card::id).collect();
         let Some(card) = cards.iter().find(|card| card.id() == name) else {
             let hint = nearest_word(name, known.iter().copied());
             let hint = hint.map_or(String::new(), |word| format!(" (did you mean `{word}`?)"));
-            return Err(Failure::input(format!("unknown name `{name}`, expected one of {}{hint}", known.join(", "))));
+            return Err(Failure::input(format!(
+                "unknown name `{name}`, expected one of {}{hint}",
+                known.join(", ")
+            )));
         };
-        return if command.json { say_json(&card.json()) } else { say_and_end(&card.text()) };
+        return if command.json {
+            say_json(&card.json())
+        } else {
+            say_and_end(&card.text())
+        };
     }
     if command.json {
         return say_json(&Value::Array(cards.iter().map(Card::json).collect()));
@@ -63,11 +91,19 @@ fn list(cards: &[Card]) -> String {
     let width = cards.iter().map(|card| card.id().len()).max().unwrap_or(0);
     let mut out = String::new();
     for (heading, wanted) in [("Families", true), ("Methods", false)] {
-        let group: Vec<_> = cards.iter().filter(|card| matches!(card, Card::Family(_)) == wanted).collect();
+        let group: Vec<_> = cards
+            .iter()
+            .filter(|card| matches!(card, Card::Family(_)) == wanted)
+            .collect();
         if !group.is_empty() {
             out += &format!("{heading}\n");
             for card in group {
-                out += &format!("  {:<width$}  {} ({})\n", card.id(), card.title(), card.class());
+                out += &format!(
+                    "  {:<width$}  {} ({})\n",
+                    card.id(),
+                    card.title(),
+                    card.class()
+                );
             }
         }
     }
@@ -132,8 +168,11 @@ impl Card {
     }
 
     fn json(&self) -> Value {
-        let mut object: serde_json::Map<String, Value> =
-            self.lines().into_iter().map(|(name, text)| (name.to_owned(), json!(text))).collect();
+        let mut object: serde_json::Map<String, Value> = self
+            .lines()
+            .into_iter()
+            .map(|(name, text)| (name.to_owned(), json!(text)))
+            .collect();
         let (name, specs) = self.settings();
         let specs: Vec<Value> = specs
             .iter()
@@ -158,7 +197,12 @@ impl Card {
         let (name, specs) = self.settings();
         out += &format!("{name}:\n");
         for spec in specs {
-            let head = format!("{} ({}; default {})", spec.name, spec.kind, spec.default.setting());
+            let head = format!(
+                "{} ({}; default {})",
+                spec.name,
+                spec.kind,
+                spec.default.setting()
+            );
             out += &format!("  {head}\n{}", indented(spec.meaning).replace("  ", "    "));
         }
         if specs.is_empty() {

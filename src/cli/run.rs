@@ -12,7 +12,8 @@ use super::progress::{Bar, Progress};
 use super::report::Failure;
 use super::{Ended, Loudness, tabulate};
 use crate::runner::{
-    self, Ending, Outcome, Pattern, Plan, Roster, RunOptions, Selection, Shard, Target, latest_folder,
+    self, Ending, Outcome, Pattern, Plan, Roster, RunOptions, Selection, Shard, Target,
+    latest_folder,
 };
 use crate::tables;
 
@@ -50,15 +51,23 @@ pub(super) fn execute(command: &Run, loudness: Loudness, bar: Bar) -> Ended {
     let file_name = command.plan.display().to_string();
     let text = read_plan(&command.plan)?;
     let folder = command.plan.parent().unwrap_or(Path::new(""));
-    let plan = Plan::parse(&text, &file_name, folder, Roster::built_in()).map_err(|error| Failure::from(&error))?;
-    let shard = command.shard.as_ref().map(|text| text.parse::<Shard>()).transpose();
+    let plan = Plan::parse(&text, &file_name, folder, Roster::built_in())
+        .map_err(|error| Failure::from(&error))?;
+    let shard = command
+        .shard
+        .as_ref()
+        .map(|text| text.parse::<Shard>())
+        .transpose();
     let shard = shard.map_err(|reason| Failure::input(format!("--shard: {reason}")))?;
     let interrupt = Arc::new(AtomicBool::new(false));
     listen(&interrupt)?;
     let options = RunOptions {
         target: target(command)?,
         jobs: command.jobs.map(usize::from),
-        selection: Selection { only: command.only.as_deref().map(Pattern::new), shard },
+        selection: Selection {
+            only: command.only.as_deref().map(Pattern::new),
+            shard,
+        },
         interrupt,
     };
     let progress = Progress::new(loudness, bar);
@@ -73,23 +82,43 @@ pub(super) fn execute(command: &Run, loudness: Loudness, bar: Bar) -> Ended {
 }
 
 fn read_plan(path: &Path) -> Result<String, Failure> {
-    let bytes = std::fs::read(path).map_err(|error| Failure::input(format!("{}: {error}", path.display())))?;
+    let bytes = std::fs::read(path)
+        .map_err(|error| Failure::input(format!("{}: {error}", path.display())))?;
     String::from_utf8(bytes).map_err(|error| {
         let valid = error.utf8_error().valid_up_to();
-        let line = error.as_bytes()[..valid].iter().filter(|byte| **byte == b'\n').count() + 1;
-        Failure::input(format!("{}:{line}: the file is not text in UTF-8", path.display()))
+        let line = error.as_bytes()[..valid]
+            .iter()
+            .filter(|byte| **byte == b'\n')
+            .count()
+            + 1;
+        Failure::input(format!(
+            "{}:{line}: the file is not text in UTF-8",
+            path.display()
+        ))
     })
 }
 
 fn target(command: &Run) -> Result<Target, Failure> {
-    let stem = command.plan.file_stem().unwrap_or_default().to_string_lossy().into_owned();
+    let stem = command
+        .plan
+        .file_stem()
+        .unwrap_or_default()
+        .to_string_lossy()
+        .into_owned();
     match (&command.into, command.resume) {
         (Some(folder), false) => Ok(Target::New(folder.clone())),
         (Some(folder), true) => Ok(Target::Resume(folder.clone())),
-        (None, false) => Ok(Target::Numbered { parent: PathBuf::from(RUNS), stem }),
-        (None, true) => latest_folder(Path::new(RUNS), &stem).map(Target::Resume).ok_or_else(|| {
-            Failure::input(format!("there is no {RUNS}/{stem}-* to resume; name the run folder by --into"))
+        (None, false) => Ok(Target::Numbered {
+            parent: PathBuf::from(RUNS),
+            stem,
         }),
+        (None, true) => latest_folder(Path::new(RUNS), &stem)
+            .map(Target::Resume)
+            .ok_or_else(|| {
+                Failure::input(format!(
+                    "there is no {RUNS}/{stem}-* to resume; name the run folder by --into"
+                ))
+            }),
     }
 }
 
@@ -103,14 +132,24 @@ fn listen(interrupt: &Arc<AtomicBool>) -> Result<(), Failure> {
         }
         tell("interrupted: waiting for the running trials to notice (again to end at once)");
     };
-    ctrlc::set_handler(handler).map_err(|error| Failure::input(format!("signals cannot be handled: {error}")))
+    ctrlc::set_handler(handler)
+        .map_err(|error| Failure::input(format!("signals cannot be handled: {error}")))
 }
 
 /// Says how far the run came and how to go on.
 fn interrupted(command: &Run, outcome: &Outcome) -> String {
-    let mut words = vec![std::env::args().next().unwrap_or_else(|| "rankassay".to_owned()), "run".to_owned()];
+    let mut words = vec![
+        std::env::args()
+            .next()
+            .unwrap_or_else(|| "rankassay".to_owned()),
+        "run".to_owned(),
+    ];
     words.push(command.plan.display().to_string());
-    words.extend(["--into".to_owned(), outcome.folder.display().to_string(), "--resume".to_owned()]);
+    words.extend([
+        "--into".to_owned(),
+        outcome.folder.display().to_string(),
+        "--resume".to_owned(),
+    ]);
     let mut option = |name: &str, value: Option<String>| {
         if let Some(value) = value {
             words.extend([name.to_owned(), value]);
@@ -149,13 +188,24 @@ fn finish(outcome: &Outcome, loudness: Loudness) -> Ended {
         tolerance: outcome.header.tolerance,
     };
     tabulate::write_tables(&input, &outcome.folder)?;
-    let unjudged = outcome.records.iter().filter(|record| record.verdict.is_unjudged()).count();
+    let unjudged = outcome
+        .records
+        .iter()
+        .filter(|record| record.verdict.is_unjudged())
+        .count();
     if loudness != Loudness::Quiet {
-        say(&format!("{}\nRun folder: {}\n", tables::summary(&input), outcome.folder.display()))?;
+        say(&format!(
+            "{}\nRun folder: {}\n",
+            tables::summary(&input),
+            outcome.folder.display()
+        ))?;
     }
     if unjudged > 0 {
         let table = outcome.folder.join("tables").join("failures.md");
-        tell(&format!("{unjudged} trials crashed or gave a malformed answer; see {}", table.display()));
+        tell(&format!(
+            "{unjudged} trials crashed or gave a malformed answer; see {}",
+            table.display()
+        ));
         return Ok(ExitCode::from(UNJUDGED));
     }
     Ok(ExitCode::SUCCESS)

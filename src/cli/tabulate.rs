@@ -24,7 +24,11 @@ pub(super) fn execute(command: &Tabulate, loudness: Loudness) -> Ended {
     let into = match (&command.into, command.runs.as_slice()) {
         (Some(folder), _) => folder,
         (None, [only]) => only,
-        (None, _) => return Err(Failure::input("several runs need a folder for their tables: --into DIR")),
+        (None, _) => {
+            return Err(Failure::input(
+                "several runs need a folder for their tables: --into DIR",
+            ));
+        }
     };
     let mut runs = Vec::new();
     for folder in &command.runs {
@@ -51,7 +55,11 @@ pub(super) fn execute(command: &Tabulate, loudness: Loudness) -> Ended {
     if loudness == Loudness::Quiet {
         return say_and_end("");
     }
-    say_and_end(&format!("{}\nTables: {}\n", tables::summary(&input), into.join("tables").display()))
+    say_and_end(&format!(
+        "{}\nTables: {}\n",
+        tables::summary(&input),
+        into.join("tables").display()
+    ))
 }
 
 /// Writes every table into the folder `tables` of `folder`: Markdown, CSV, and CSV without times.
@@ -59,7 +67,10 @@ pub(super) fn write_tables(input: &Input<'_>, folder: &Path) -> Result<(), Failu
     let mut files = Vec::new();
     for table in tables::all(input) {
         files.push((format!("{}.csv", table.name), table.to_csv()));
-        files.push((format!("{}-stable.csv", table.name), table.stable().to_csv()));
+        files.push((
+            format!("{}-stable.csv", table.name),
+            table.stable().to_csv(),
+        ));
         files.push((format!("{}.md", table.name), table.to_markdown()));
     }
     write_files(&folder.join("tables"), &files).map_err(Failure::input)

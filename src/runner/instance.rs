@@ -2,8 +2,8 @@
 
 use std::path::Path;
 
-use crate::families::{Family, PlantError};
 use crate::card::Settings;
+use crate::families::{Family, PlantError};
 use crate::formats::{self, FormatError};
 use crate::problem::certificate::{Planted, Uniqueness};
 use crate::problem::{Factor, Problem, canonical};
@@ -25,7 +25,11 @@ pub struct Knowledge {
 impl Knowledge {
     /// Knows nothing.
     pub fn none() -> Self {
-        Knowledge { optimum: KnownOptimum::Unknown, dual: None, unique_point: None }
+        Knowledge {
+            optimum: KnownOptimum::Unknown,
+            dual: None,
+            unique_point: None,
+        }
     }
 
     /// Lends the knowledge to the referee.
@@ -73,6 +77,16 @@ pub enum InputError {
         /// What does not fit.
         reason: String,
     },
+    /// The optimum that the plan reports is not the one that the file's certificate proves.
+    #[error("{file}: its certificate proves the optimum {certified:?}, not {reported:?}")]
+    Optimum {
+        /// The file.
+        file: String,
+        /// The certified optimum.
+        certified: f64,
+        /// The reported one.
+        reported: f64,
+    },
     /// The certificate in the file does not prove its optimum.
     #[error("{file}: the certificate does not hold: {reason}")]
     Certificate {
@@ -86,7 +100,12 @@ pub enum InputError {
 /// Describes a problem for its record.
 fn describe(problem: &Problem) -> InstanceRecord {
     let bounded = problem.blocks().iter().filter_map(|block| block.rank).max();
-    let largest = problem.blocks().iter().map(|block| block.order).max().unwrap_or(0);
+    let largest = problem
+        .blocks()
+        .iter()
+        .map(|block| block.order)
+        .max()
+        .unwrap_or(0);
     InstanceRecord {
         instance: String::new(),
         family: String::new(),
@@ -128,13 +147,21 @@ impl Instance {
             dual: planted.dual,
             unique_point: unique.then_some(planted.point),
         };
-        Instance { problem: planted.problem, knowledge, record }
+        Instance {
+            problem: planted.problem,
+            knowledge,
+            record,
+        }
     }
 
     /// Wraps a problem of which nothing is known.
     pub fn from_problem(problem: Problem) -> Self {
         let record = describe(&problem);
-        Instance { problem, knowledge: Knowledge::none(), record }
+        Instance {
+            problem,
+            knowledge: Knowledge::none(),
+            record,
+        }
     }
 
     /// Puts a rank bound on every PSD block that is not smaller than it. A certificate was proved for
@@ -143,24 +170,53 @@ impl Instance {
     /// # Errors
     /// The rank does not fit.
     pub fn with_rank(self, rank: usize, file: &str) -> Result<Self, InputError> {
-        let refuse = |reason: String| InputError::Rank { file: file.to_owned(), rank, reason };
+        let refuse = |reason: String| InputError::Rank {
+            file: file.to_owned(),
+            rank,
+            reason,
+        };
         if self.problem.blocks().iter().all(|block| block.order < rank) {
             return Err(refuse("every block is smaller".to_owned()));
         }
-        let problem = formats::with_ranks(&self.problem, rank).map_err(|error| refuse(error.to_string()))?;
-        if problem == self.problem { Ok(self) } else { Ok(Instance::from_problem(problem)) }
+        let problem =
+            formats::with_ranks(&self.problem, rank).map_err(|error| refuse(error.to_string()))?;
+        if problem == self.problem {
+            Ok(self)
+        } else {
+            Ok(Instance::from_problem(problem))
+        }
     }
 
-    /// Adds an optimum that somebody reports, unless one is certified.
-    pub(super) fn with_reported(mut self, reported: &super::ReportedOptimum) -> Self {
-        if self.knowledge.optimum == KnownOptimum::Unknown {
-            self.knowledge.optimum =
-                KnownOptimum::Reported { value: reported.value, accuracy: reported.accuracy() };
-            self.record.optimum = crate::record::measured(reported.value);
-            self.record.optimum_known = "reported".to_owned();
-            self.record.source = format!("{} digits: {}", reported.digits, reported.source);
+    /// Adds an optimum that somebody reports; where one is certified, the two must agree and the
+    /// certified one stays.
+    ///
+    /// # Errors
+    /// The reported value is farther from the certified one than its digits allow.
+    pub(super) fn with_reported(
+        mut self,
+        reported: &super::ReportedOptimum,
+        file: &str,
+    ) -> Result<Self, InputError> {
+        let (value, accuracy) = (reported.value, reported.accuracy());
+        match self.knowledge.optimum {
+            KnownOptimum::Certified(certified) => {
+                if (certified - value).abs() > accuracy * (1.0 + value.abs()) {
+                    let file = file.to_owned();
+                    return Err(InputError::Optimum {
+                        file,
+                        certified,
+                        reported: value,
+                    });
+                }
+            }
+            _ => {
+                self.knowledge.optimum = KnownOptimum::Reported { value, accuracy };
+                self.record.optimum = crate::record::measured(value);
+                self.record.optimum_known = "reported".to_owned();
+                self.record.source = format!("{} digits: {}", reported.digits, reported.source);
+            }
         }
-        self
+        Ok(self)
     }
 }
 
@@ -168,8 +224,18 @@ impl Instance {
 ///
 /// # Errors
 /// See [`PlantError`].
-pub fn plant(family: &dyn Family, parameters: &Settings, seed: u64, index: u64) -> Result<Planted, PlantError> {
-    let labels = ["plant", family.card().id, &parameters.to_string(), &index.to_string()];
+pub fn plant(
+    family: &dyn Family,
+    parameters: &Settings,
+    seed: u64,
+    index: u64,
+) -> Result<Planted, PlantError> {
+    let labels = [
+        "plant",
+        family.card().id,
+        &parameters.to_string(),
+        &index.to_string(),
+    ];
     family.plant(parameters, &mut Stream::named(seed, &labels))
 }
 
@@ -178,15 +244,21 @@ pub fn plant(family: &dyn Family, parameters: &Settings, seed: u64, index: u64) 
 /// # Errors
 /// The file is unreadable or not in its format, or its certificate does not hold.
 pub fn read_instance(path: &Path) -> Result<Instance, InputError> {
-    if path.extension().is_some_and(|extension| extension == "dat-s") {
+    if path
+        .extension()
+        .is_some_and(|extension| extension == "dat-s")
+    {
         return Ok(Instance::from_problem(formats::sdpa::read(path)?.problem));
     }
     let read = formats::instance::read(path)?;
-    let Some(certificate) = read.certificate else { return Ok(Instance::from_problem(read.problem)) };
+    let Some(certificate) = read.certificate else {
+        return Ok(Instance::from_problem(read.problem));
+    };
     // A file proves nothing by itself: its certificate is checked anew.
-    let planted = Planted::prove(read.problem, certificate).map_err(|error| InputError::Certificate {
-        file: path.display().to_string(),
-        reason: error.to_string(),
-    })?;
+    let planted =
+        Planted::prove(read.problem, certificate).map_err(|error| InputError::Certificate {
+            file: path.display().to_string(),
+            reason: error.to_string(),
+        })?;
     Ok(Instance::from_planted(planted))
 }

@@ -87,7 +87,8 @@ impl Entry {
             (found == check(payload)).then_some(payload)
         });
         let payload = payload.ok_or("the line does not agree with its checksum")?;
-        serde_json::from_str(&format!("{{{payload}")).map_err(|error| format!("unreadable record: {error}"))
+        serde_json::from_str(&format!("{{{payload}"))
+            .map_err(|error| format!("unreadable record: {error}"))
     }
 }
 
@@ -114,7 +115,13 @@ pub struct Contents {
 
 impl Contents {
     pub(super) fn empty(header: &RunHeader) -> Self {
-        Contents { header: header.clone(), instances: Vec::new(), records: Vec::new(), whole: 0, torn: 0 }
+        Contents {
+            header: header.clone(),
+            instances: Vec::new(),
+            records: Vec::new(),
+            whole: 0,
+            torn: 0,
+        }
     }
 
     /// Says that the tail was torn, if it was.
@@ -129,9 +136,16 @@ impl Contents {
     }
 
     /// Refuses to go on when the journal is not of the run that `header` describes.
-    pub(super) fn check_same_run(&self, folder: &Path, header: &RunHeader) -> Result<(), JournalError> {
+    pub(super) fn check_same_run(
+        &self,
+        folder: &Path,
+        header: &RunHeader,
+    ) -> Result<(), JournalError> {
         let reason = if self.header.schema != header.schema {
-            format!("its record layout is {}, this program writes {}", self.header.schema, header.schema)
+            format!(
+                "its record layout is {}, this program writes {}",
+                self.header.schema, header.schema
+            )
         } else if self.header.plan_digest != header.plan_digest {
             let short = |digest: &str| digest.chars().take(12).collect::<String>();
             format!(
@@ -146,13 +160,21 @@ impl Contents {
         } else {
             return Ok(());
         };
-        Err(JournalError::OtherRun { path: folder.join(FILE).display().to_string(), reason })
+        Err(JournalError::OtherRun {
+            path: folder.join(FILE).display().to_string(),
+            reason,
+        })
     }
 
     fn parse(path: &Path, text: &[u8]) -> Result<Self, JournalError> {
-        let whole = text.iter().rposition(|byte| *byte == b'\n').map_or(0, |at| at + 1);
+        let whole = text
+            .iter()
+            .rposition(|byte| *byte == b'\n')
+            .map_or(0, |at| at + 1);
         if whole == 0 {
-            return Err(JournalError::Missing { path: path.display().to_string() });
+            return Err(JournalError::Missing {
+                path: path.display().to_string(),
+            });
         }
         let altered = |line: usize, reason: String| JournalError::Altered {
             path: path.display().to_string(),
@@ -161,15 +183,22 @@ impl Contents {
         };
         let mut contents: Option<Contents> = None;
         let mut seen = BTreeSet::new();
-        for (at, line) in text[..whole].split_inclusive(|byte| *byte == b'\n').enumerate() {
+        for (at, line) in text[..whole]
+            .split_inclusive(|byte| *byte == b'\n')
+            .enumerate()
+        {
             let line = std::str::from_utf8(&line[..line.len() - 1])
                 .map_err(|_| altered(at + 1, "the line is not text".to_owned()))?;
             let entry = Entry::read(line).map_err(|reason| altered(at + 1, reason))?;
             match (entry, &mut contents) {
                 (Entry::Run(header), None) => {
                     if header.schema != SCHEMA {
-                        let reason = format!("its record layout is {}, not {SCHEMA}", header.schema);
-                        return Err(JournalError::OtherRun { path: path.display().to_string(), reason });
+                        let reason =
+                            format!("its record layout is {}, not {SCHEMA}", header.schema);
+                        return Err(JournalError::OtherRun {
+                            path: path.display().to_string(),
+                            reason,
+                        });
                     }
                     contents = Some(Contents {
                         whole: whole as u64,
@@ -180,14 +209,24 @@ impl Contents {
                 (Entry::Instance(record), Some(contents)) => contents.instances.push(record),
                 (Entry::Trial(record), Some(contents)) => {
                     if !seen.insert(record.trial.clone()) {
-                        return Err(altered(at + 1, format!("trial {} is recorded twice", record.trial)));
+                        return Err(altered(
+                            at + 1,
+                            format!("trial {} is recorded twice", record.trial),
+                        ));
                     }
                     contents.records.push(*record);
                 }
-                _ => return Err(altered(at + 1, "the first line, and no other, says what run it is".to_owned())),
+                _ => {
+                    return Err(altered(
+                        at + 1,
+                        "the first line, and no other, says what run it is".to_owned(),
+                    ));
+                }
             }
         }
-        contents.ok_or_else(|| JournalError::Missing { path: path.display().to_string() })
+        contents.ok_or_else(|| JournalError::Missing {
+            path: path.display().to_string(),
+        })
     }
 }
 
@@ -210,7 +249,10 @@ fn failed(path: &Path, error: &std::io::Error) -> JournalError {
     let path = path.display().to_string();
     match error.kind() {
         std::io::ErrorKind::NotFound => JournalError::Missing { path },
-        _ => JournalError::System { path, reason: error.to_string() },
+        _ => JournalError::System {
+            path,
+            reason: error.to_string(),
+        },
     }
 }
 
@@ -238,7 +280,8 @@ impl Journal {
         let journal = Journal::locked(path.clone(), file.map_err(|error| failed(&path, &error))?)?;
         let mut text = Vec::new();
         let mut file = journal.file.lock().unwrap_or_else(PoisonError::into_inner);
-        file.read_to_end(&mut text).map_err(|error| failed(&path, &error))?;
+        file.read_to_end(&mut text)
+            .map_err(|error| failed(&path, &error))?;
         drop(file);
         let contents = Contents::parse(&path, &text)?;
         Ok((journal, contents))
@@ -246,10 +289,18 @@ impl Journal {
 
     fn locked(path: PathBuf, file: File) -> Result<Self, JournalError> {
         match file.try_lock() {
-            Ok(()) => Ok(Journal { path, file: Mutex::new(file) }),
-            Err(TryLockError::WouldBlock) => Err(JournalError::InUse { path: path.display().to_string() }),
+            Ok(()) => Ok(Journal {
+                path,
+                file: Mutex::new(file),
+            }),
+            Err(TryLockError::WouldBlock) => Err(JournalError::InUse {
+                path: path.display().to_string(),
+            }),
             // Some network file systems know no locks; a run there is not refused for that.
-            Err(TryLockError::Error(_)) => Ok(Journal { path, file: Mutex::new(file) }),
+            Err(TryLockError::Error(_)) => Ok(Journal {
+                path,
+                file: Mutex::new(file),
+            }),
         }
     }
 

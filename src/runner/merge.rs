@@ -61,7 +61,11 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
     let mut records: Vec<(usize, &Record)> = Vec::new();
     for (name, run) in runs {
         let conflict = |first: &str, reason: String| {
-            Err(MergeError::Conditions { first: first.to_owned(), second: name.clone(), reason })
+            Err(MergeError::Conditions {
+                first: first.to_owned(),
+                second: name.clone(),
+                reason,
+            })
         };
         if run.header.wall_limit_s != first.header.wall_limit_s
             || run.header.memory_limit != first.header.memory_limit
@@ -72,10 +76,16 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
             return conflict(first_name, "their tolerances differ".to_owned());
         }
         for method in &run.header.methods {
-            match methods.iter().find(|(_, known)| known.label == method.label) {
+            match methods
+                .iter()
+                .find(|(_, known)| known.label == method.label)
+            {
                 Some((_, known)) if *known == method => {}
                 Some((other, _)) => {
-                    return conflict(other, format!("label {} means different methods", method.label));
+                    return conflict(
+                        other,
+                        format!("label {} means different methods", method.label),
+                    );
                 }
                 None => methods.push((name, method)),
             }
@@ -84,22 +94,39 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
             match instances.get(instance.instance.as_str()) {
                 Some((_, known)) if known.digest == instance.digest => {}
                 Some((other, _)) => {
-                    return conflict(other, format!("instance {} is not the same", instance.instance));
+                    return conflict(
+                        other,
+                        format!("instance {} is not the same", instance.instance),
+                    );
                 }
                 None => {
                     instances.insert(&instance.instance, (name, instance));
                 }
             }
         }
-        let plan = plans.iter().position(|digest| *digest == run.header.plan_digest).unwrap_or_else(|| {
-            plans.push(&run.header.plan_digest);
-            plans.len() - 1
-        });
+        let plan = plans
+            .iter()
+            .position(|digest| *digest == run.header.plan_digest)
+            .unwrap_or_else(|| {
+                plans.push(&run.header.plan_digest);
+                plans.len() - 1
+            });
         for record in &run.records {
-            let key = (record.instance.as_str(), record.method.as_str(), record.repeat);
+            let key = (
+                record.instance.as_str(),
+                record.method.as_str(),
+                record.repeat,
+            );
             if let Some(other) = trials.insert(key, name) {
-                let what = format!("{} {} repeat {}", record.instance, record.method, record.repeat);
-                return Err(MergeError::Twice { first: other.to_owned(), second: name.clone(), what });
+                let what = format!(
+                    "{} {} repeat {}",
+                    record.instance, record.method, record.repeat
+                );
+                return Err(MergeError::Twice {
+                    first: other.to_owned(),
+                    second: name.clone(),
+                    what,
+                });
             }
             records.push((plan, record));
         }
@@ -112,9 +139,15 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
         }
     }
     Ok(Merged {
-        records: records.into_iter().map(|(_, record)| record.clone()).collect(),
+        records: records
+            .into_iter()
+            .map(|(_, record)| record.clone())
+            .collect(),
         instances: ordered,
-        methods: methods.into_iter().map(|(_, method)| method.clone()).collect(),
+        methods: methods
+            .into_iter()
+            .map(|(_, method)| method.clone())
+            .collect(),
         wall_limit_s: first.header.wall_limit_s,
         tolerance: first.header.tolerance,
     })
@@ -122,5 +155,9 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
 
 /// Returns the number that a trial's id starts with: its place in the plan.
 fn number(trial: &str) -> u64 {
-    trial.split('-').next().and_then(|head| head.parse().ok()).unwrap_or(u64::MAX)
+    trial
+        .split('-')
+        .next()
+        .and_then(|head| head.parse().ok())
+        .unwrap_or(u64::MAX)
 }

@@ -21,7 +21,7 @@ pub use folder::{FolderError, Target, latest_folder, write_files};
 pub use instance::{InputError, Instance, Knowledge, plant, read_instance};
 pub use journal::{Contents, JournalError};
 pub use merge::{MergeError, Merged, merge};
-pub use plan::{Entrant, Imported, Plan, PlanError, ReportedOptimum, Roster, Sown, Span};
+pub use plan::{Entrant, Imported, Located, Plan, PlanError, ReportedOptimum, Roster, Sown, Span};
 pub use selection::{Pattern, Selection, Shard};
 
 use std::path::PathBuf;
@@ -35,7 +35,10 @@ use expand::Expansion;
 
 /// Returns the SHA-256 of `bytes` in hexadecimal digits.
 pub(crate) fn hexadecimal_digest(bytes: &[u8]) -> String {
-    Sha256::digest(bytes).iter().map(|byte| format!("{byte:02x}")).collect()
+    Sha256::digest(bytes)
+        .iter()
+        .map(|byte| format!("{byte:02x}"))
+        .collect()
 }
 
 /// How a plan is run.
@@ -90,7 +93,7 @@ pub struct Outcome {
 pub enum RunError {
     /// The plan is wrong.
     #[error("{0}")]
-    Plan(Box<PlanError>),
+    Plan(PlanError),
     /// An imported file is wrong.
     #[error("{0}")]
     Input(Box<InputError>),
@@ -107,7 +110,7 @@ pub enum RunError {
     #[error("{0} threads cannot be started: {1}")]
     Threads(usize, String),
     /// A defect of this program: a certificate, a family or the referee is wrong.
-    #[error("internal error in trial {trial}: {detail}")]
+    #[error("internal error: a certificate, a family or the referee is wrong; {trial}: {detail}")]
     Internal {
         /// Id of the trial or of the instance.
         trial: String,
@@ -116,9 +119,25 @@ pub enum RunError {
     },
 }
 
+impl RunError {
+    /// Says of a defect where the records up to it are kept.
+    fn kept_in(self, folder: &std::path::Path) -> Self {
+        match self {
+            RunError::Internal { trial, detail } => {
+                let kept = folder.display();
+                RunError::Internal {
+                    trial,
+                    detail: format!("{detail}; the records so far are kept in {kept}"),
+                }
+            }
+            other => other,
+        }
+    }
+}
+
 impl From<PlanError> for RunError {
     fn from(error: PlanError) -> Self {
-        RunError::Plan(Box::new(error))
+        RunError::Plan(error)
     }
 }
 
@@ -136,7 +155,11 @@ impl From<InputError> for RunError {
 ///
 /// # Errors
 /// See [`RunError`]. After [`RunError::Internal`] the run folder keeps what was recorded.
-pub fn run(plan: &Plan<'_>, options: &RunOptions, observer: &dyn Observer) -> Result<Outcome, RunError> {
+pub fn run(
+    plan: &Plan<'_>,
+    options: &RunOptions,
+    observer: &dyn Observer,
+) -> Result<Outcome, RunError> {
     let jobs = options.jobs.unwrap_or_else(machine::cores).max(1);
     let pool = rayon::ThreadPoolBuilder::new()
         .num_threads(jobs)
@@ -146,7 +169,10 @@ pub fn run(plan: &Plan<'_>, options: &RunOptions, observer: &dyn Observer) -> Re
     let expansion = Expansion::new(plan);
     let selected = expansion.select(plan, &options.selection);
     if selected.is_empty() {
-        let example = expansion.trials.first().map_or(String::new(), |trial| expansion.describe(plan, trial));
+        let example = expansion
+            .trials
+            .first()
+            .map_or(String::new(), |trial| expansion.describe(plan, trial));
         let text = format!("no trial of the plan is selected; the first is `{example}`");
         return Err(RunError::Nothing(text));
     }
@@ -163,12 +189,22 @@ pub fn run(plan: &Plan<'_>, options: &RunOptions, observer: &dyn Observer) -> Re
         pool: &pool,
         interrupt: &options.interrupt,
         observer,
-    })?;
-    let ending =
-        if options.interrupt.load(Ordering::Relaxed) && !log.complete { Ending::Interrupted } else { Ending::Complete };
+    })
+    .map_err(|error| error.kept_in(&folder))?;
+    let ending = if options.interrupt.load(Ordering::Relaxed) && !log.complete {
+        Ending::Interrupted
+    } else {
+        Ending::Complete
+    };
     let (instances, records) = expansion.in_plan_order(before, log);
     folder::write_rows(&folder, "instances.csv", &instances)?;
     folder::write_rows(&folder, "trials.csv", &records)?;
     started.end(&folder)?;
-    Ok(Outcome { folder, header, instances, records, ending })
+    Ok(Outcome {
+        folder,
+        header,
+        instances,
+        records,
+        ending,
+    })
 }

@@ -18,7 +18,8 @@ impl Pattern {
     /// Returns whether `text` matches.
     pub fn matches(&self, text: &str) -> bool {
         if self.0.contains(['*', '?']) {
-            let (pattern, text): (Vec<char>, Vec<char>) = (self.0.chars().collect(), text.chars().collect());
+            let (pattern, text): (Vec<char>, Vec<char>) =
+                (self.0.chars().collect(), text.chars().collect());
             matches_whole(&pattern, &text)
         } else {
             text.contains(&self.0)
@@ -93,7 +94,10 @@ impl Selection {
     /// Returns whether a trial is selected.
     pub fn takes(&self, instance: &str, method: &str) -> bool {
         self.shard.is_none_or(|shard| shard.takes(instance))
-            && self.only.as_ref().is_none_or(|only| only.matches(&format!("{instance} {method}")))
+            && self
+                .only
+                .as_ref()
+                .is_none_or(|only| only.matches(&format!("{instance} {method}")))
     }
 }
 
@@ -122,7 +126,9 @@ mod tests {
 
     #[test]
     fn every_instance_falls_into_one_part() {
-        let shards: Vec<Shard> = (1..=3).map(|part| format!("{part}/3").parse().unwrap()).collect();
+        let shards: Vec<Shard> = (1..=3)
+            .map(|part| format!("{part}/3").parse().unwrap())
+            .collect();
         let mut counts = [0; 3];
         for number in 0..300 {
             let id = format!("instance-{number}");

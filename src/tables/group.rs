@@ -42,14 +42,19 @@ pub(super) fn in_order<'a>(words: impl IntoIterator<Item = &'a str>) -> Vec<&'a 
 pub(super) fn groups<'a>(input: &Input<'a>) -> Vec<Group<'a>> {
     let families = in_order(input.records.iter().map(|record| record.family.as_str()));
     let planned = input.methods.iter().map(|method| method.label.as_str());
-    let methods = in_order(planned.chain(input.records.iter().map(|record| record.method.as_str())));
+    let methods =
+        in_order(planned.chain(input.records.iter().map(|record| record.method.as_str())));
     let mut groups = Vec::new();
     let mut add = |family: &'a str, of_family: &dyn Fn(&Record) -> bool| {
         for &method in &methods {
             let pass = |record: &&Record| record.method == method && of_family(record);
             let records: Vec<_> = input.records.iter().filter(pass).collect();
             if !records.is_empty() {
-                groups.push(Group { family, method, records });
+                groups.push(Group {
+                    family,
+                    method,
+                    records,
+                });
             }
         }
     };

@@ -34,17 +34,30 @@ pub struct Column {
 impl Column {
     /// Makes a column that is the same in every run and stands everywhere.
     pub(super) fn stable(name: &'static str, heading: &'static str) -> Self {
-        Column { name, heading, nature: Nature::Stable, reach: Reach::Everywhere }
+        Column {
+            name,
+            heading,
+            nature: Nature::Stable,
+            reach: Reach::Everywhere,
+        }
     }
 
     /// Makes a column of time or memory figures that stands everywhere.
     pub(super) fn measured(name: &'static str, heading: &'static str) -> Self {
-        Column { name, heading, nature: Nature::Measured, reach: Reach::Everywhere }
+        Column {
+            name,
+            heading,
+            nature: Nature::Measured,
+            reach: Reach::Everywhere,
+        }
     }
 
     /// Leaves the column out of the summary on the terminal.
     pub(super) fn in_files(self) -> Self {
-        Column { reach: Reach::Files, ..self }
+        Column {
+            reach: Reach::Files,
+            ..self
+        }
     }
 }
 
@@ -77,12 +90,18 @@ pub enum Cell {
 impl Cell {
     /// Makes a number, or a missing cell.
     pub fn real(value: Option<f64>, style: Style) -> Self {
-        value.filter(|value| value.is_finite()).map_or(Cell::Missing, |value| Cell::Real(value, style))
+        value
+            .filter(|value| value.is_finite())
+            .map_or(Cell::Missing, |value| Cell::Real(value, style))
     }
 
     /// Makes a share, missing when there is nothing to share.
     pub fn share(part: usize, whole: usize) -> Self {
-        if whole == 0 { Cell::Missing } else { Cell::Real(part as f64 / whole as f64, Style::Percent) }
+        if whole == 0 {
+            Cell::Missing
+        } else {
+            Cell::Real(part as f64 / whole as f64, Style::Percent)
+        }
     }
 
     /// Makes a word.
@@ -114,14 +133,23 @@ pub struct Table {
 impl Table {
     /// Returns the table without its measured columns.
     pub fn stable(&self) -> Table {
-        let keep: Vec<bool> = self.columns.iter().map(|column| column.nature == Nature::Stable).collect();
+        let keep: Vec<bool> = self
+            .columns
+            .iter()
+            .map(|column| column.nature == Nature::Stable)
+            .collect();
         self.keeping(&keep)
     }
 
     /// Returns the table with the flagged columns only.
     pub(super) fn keeping(&self, keep: &[bool]) -> Table {
         fn pick<T: Clone>(items: &[T], keep: &[bool]) -> Vec<T> {
-            items.iter().zip(keep).filter(|(_, keep)| **keep).map(|(item, _)| item.clone()).collect()
+            items
+                .iter()
+                .zip(keep)
+                .filter(|(_, keep)| **keep)
+                .map(|(item, _)| item.clone())
+                .collect()
         }
         Table {
             columns: pick(&self.columns, keep),

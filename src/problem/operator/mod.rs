@@ -11,8 +11,8 @@ mod slack;
 pub use slack::{Slack, SlackStore};
 
 use super::pattern::Pattern;
-use super::{Coefficient, Factor, Functional, OuterTerm, Problem, SparseSymmetric};
-use crate::linalg::vector::{axpy, dot};
+use super::{Factor, Problem, SparseSymmetric};
+use crate::linalg::vector::dot;
 use crate::linalg::{Mat, MatRef, dense};
 use std::sync::Arc;
 

@@ -1,8 +1,8 @@
 //! The plan: what a run is made of, read from a TOML file.
 //!
-//! Reading has two phases. [`reader`](self) walks the parsed document with the position of every key
-//! and value at hand; what leaves this module is a [`Plan`] in which every name, option and number
-//! has been resolved and checked. Every error says where it is, what stands there, what was expected,
+//! Reading has two phases. The reader walks the parsed document with the position of every key and
+//! value at hand; the sections make a [`Plan`] of it, in which every name, option and number has
+//! been resolved and checked. Every error says where it is, what stands there, what was expected,
 //! and the nearest valid word. Files named by the plan are not read here, see `runner::instance`.
 
 mod error;
@@ -10,8 +10,9 @@ mod quantity;
 mod reader;
 mod sections;
 
-pub use error::PlanError;
+pub use error::{Located, PlanError};
 
+use std::collections::BTreeMap;
 use std::path::PathBuf;
 
 use crate::budget::Budget;
@@ -35,15 +36,25 @@ pub struct Roster<'a> {
 impl Roster<'static> {
     /// Returns the built-in families and methods.
     pub fn built_in() -> Self {
-        Roster { families: crate::families::registry(), methods: crate::methods::registry() }
+        Roster {
+            families: crate::families::registry(),
+            methods: crate::methods::registry(),
+        }
     }
 }
 
 impl std::fmt::Debug for Roster<'_> {
     fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
-        let families: Vec<_> = self.families.iter().map(|family| family.card().id).collect();
+        let families: Vec<_> = self
+            .families
+            .iter()
+            .map(|family| family.card().id)
+            .collect();
         let methods: Vec<_> = self.methods.iter().map(|method| method.card().id).collect();
-        f.debug_struct("Roster").field("families", &families).field("methods", &methods).finish()
+        f.debug_struct("Roster")
+            .field("families", &families)
+            .field("methods", &methods)
+            .finish()
     }
 }
 
@@ -61,6 +72,17 @@ pub struct Sown<'a> {
     pub count: u64,
     /// Where the combination's section names its family.
     pub span: Span,
+    /// Where the values of the parameters that the section gives stand, by name.
+    pub places: BTreeMap<String, Span>,
+}
+
+impl Sown<'_> {
+    /// Returns the place of the first parameter that `reason` speaks of, or of the family's name.
+    pub(super) fn place_of(&self, reason: &str) -> Span {
+        let word = |c: char| !(c.is_alphanumeric() || c == '-' || c == '_');
+        let spoken = reason.split(word).find_map(|name| self.places.get(name));
+        spoken.unwrap_or(&self.span).clone()
+    }
 }
 
 /// A published or computed optimum of an imported instance.
@@ -151,7 +173,10 @@ pub struct Plan<'a> {
 impl std::fmt::Debug for Plan<'_> {
     fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
         let labels: Vec<_> = self.entrants.iter().map(|entrant| &entrant.label).collect();
-        f.debug_struct("Plan").field("file_name", &self.file_name).field("methods", &labels).finish_non_exhaustive()
+        f.debug_struct("Plan")
+            .field("file_name", &self.file_name)
+            .field("methods", &labels)
+            .finish_non_exhaustive()
     }
 }
 
@@ -170,15 +195,28 @@ impl<'a> Plan<'a> {
         let document = Document::new(text, file_name);
         let table = document.parse()?;
         let top = Section::top(&document, &table);
-        top.only(&["title", "seed", "repeats", "budget", "tolerance", "family", "import", "method"])?;
+        top.only(&[
+            "title",
+            "seed",
+            "repeats",
+            "budget",
+            "tolerance",
+            "family",
+            "import",
+            "method",
+        ])?;
         let stem = file_name.strip_suffix(".toml").unwrap_or(file_name);
         let plan = Plan {
-            title: top.text("title")?.map_or_else(|| stem.to_owned(), |title| title.value),
+            title: top
+                .text("title")?
+                .map_or_else(|| stem.to_owned(), |title| title.value),
             file_name: file_name.to_owned(),
             text: text.to_owned(),
             digest: super::hexadecimal_digest(text.as_bytes()),
             seed: sections::seed(&top)?,
-            repeats: top.whole("repeats", 1, 1000)?.map_or(1, |repeats| repeats.value),
+            repeats: top
+                .whole("repeats", 1, 1000)?
+                .map_or(1, |repeats| repeats.value),
             budget: sections::budget(&top)?,
             tolerance: sections::tolerance(&top)?,
             sown: sections::families(&top, roster.families)?,
@@ -186,7 +224,10 @@ impl<'a> Plan<'a> {
             entrants: sections::methods(&top, roster.methods)?,
         };
         if plan.sown.is_empty() && plan.imported.is_empty() {
-            return Err(document.missing("a plan without instances", "at least one [[family]] or [[import]]"));
+            return Err(document.missing(
+                "a plan without instances",
+                "at least one [[family]] or [[import]]",
+            ));
         }
         if plan.entrants.is_empty() {
             return Err(document.missing("a plan without methods", "at least one [[method]]"));
@@ -195,9 +236,9 @@ impl<'a> Plan<'a> {
         Ok(plan)
     }
 
-    /// Returns an error at a place in the plan's text.
-    pub fn error_at(&self, span: Span, message: &str, expected: &str) -> PlanError {
-        Document::new(&self.text, &self.file_name).error(span, message, expected, None)
+    /// Returns an error at a place in the plan's text; the message says what was expected.
+    pub fn error_at(&self, span: Span, message: &str) -> PlanError {
+        Document::new(&self.text, &self.file_name).error(span, message, "", None)
     }
 
     /// Returns the number of trials of the whole plan.
@@ -208,8 +249,12 @@ impl<'a> Plan<'a> {
 
     fn check_size(&self, document: &Document<'_>) -> Result<(), PlanError> {
         const MOST: u128 = 10_000_000;
-        let instances: u128 =
-            self.sown.iter().map(|sown| u128::from(sown.count)).sum::<u128>() + self.imported.len() as u128;
+        let instances: u128 = self
+            .sown
+            .iter()
+            .map(|sown| u128::from(sown.count))
+            .sum::<u128>()
+            + self.imported.len() as u128;
         let trials = instances * self.entrants.len() as u128 * u128::from(self.repeats);
         if trials > MOST {
             let message = format!("a plan of {trials} trials");

@@ -3,14 +3,17 @@
 use std::time::Duration;
 
 /// What a duration looks like, for messages.
-pub(super) const DURATION: &str = "a duration above zero such as \"20s\", \"500ms\", \"2min\" or \"1h\"";
+pub(super) const DURATION: &str =
+    "a duration above zero such as \"20s\", \"500ms\", \"2min\" or \"1h\"";
 
 /// What a size looks like, for messages.
 pub(super) const SIZE: &str = "a size above zero such as \"2 GiB\", \"512 MiB\" or \"64 MB\"";
 
 fn split(text: &str) -> Option<(f64, &str)> {
     let text = text.trim();
-    let end = text.find(|c: char| !(c.is_ascii_digit() || c == '.')).unwrap_or(text.len());
+    let end = text
+        .find(|c: char| !(c.is_ascii_digit() || c == '.'))
+        .unwrap_or(text.len());
     let number: f64 = text[..end].parse().ok()?;
     (number.is_finite() && number > 0.0).then_some((number, text[end..].trim_start()))
 }
@@ -25,7 +28,9 @@ pub(super) fn duration(text: &str) -> Option<Duration> {
         "h" => number * 3600.0,
         _ => return None,
     };
-    (1e-3..=3.6e6).contains(&seconds).then(|| Duration::from_secs_f64(seconds))
+    (1e-3..=3.6e6)
+        .contains(&seconds)
+        .then(|| Duration::from_secs_f64(seconds))
 }
 
 /// Reads a size in bytes: a number and one of `B`, `kB`, `MB`, `GB`, `KiB`, `MiB`, `GiB`, `TiB`.
@@ -44,7 +49,9 @@ pub(super) fn size(text: &str) -> Option<u64> {
     };
     let bytes = number * factor;
     // 2^53 bytes is the last size that a double counts exactly.
-    (1.0..=9_007_199_254_740_992.0).contains(&bytes).then_some(bytes as u64)
+    (1.0..=9_007_199_254_740_992.0)
+        .contains(&bytes)
+        .then_some(bytes as u64)
 }
 
 #[cfg(test)]
@@ -56,7 +63,9 @@ mod tests {
         assert_eq!(duration("20s"), Some(Duration::from_secs(20)));
         assert_eq!(duration("500 ms"), Some(Duration::from_millis(500)));
         assert_eq!(duration("1.5min"), Some(Duration::from_secs(90)));
-        for bad in ["", "20", "s", "-3s", "0s", "20 sec", "1..5s", "infs", "99999h"] {
+        for bad in [
+            "", "20", "s", "-3s", "0s", "20 sec", "1..5s", "infs", "99999h",
+        ] {
             assert_eq!(duration(bad), None, "{bad}");
         }
     }
@@ -66,7 +75,16 @@ mod tests {
         assert_eq!(size("2 GiB"), Some(2 << 30));
         assert_eq!(size("1.5MiB"), Some(3 << 19));
         assert_eq!(size("64 MB"), Some(64_000_000));
-        for bad in ["", "2", "GiB", "2 gib", "0 B", "-1 MB", "1e3 B", "99999999 TiB"] {
+        for bad in [
+            "",
+            "2",
+            "GiB",
+            "2 gib",
+            "0 B",
+            "-1 MB",
+            "1e3 B",
+            "99999999 TiB",
+        ] {
             assert_eq!(size(bad), None, "{bad}");
         }
     }

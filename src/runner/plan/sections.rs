@@ -13,6 +13,9 @@ use crate::families::Family;
 use crate::methods::Method;
 use crate::referee::Tolerance;
 
+/// Where values stand, by the names of their settings.
+type Places = BTreeMap<String, Span>;
+
 /// Wall time of a trial when the plan gives none.
 const DEFAULT_WALL: Duration = Duration::from_secs(60);
 
@@ -20,13 +23,21 @@ pub(super) fn seed(top: &Section<'_, '_>) -> Result<u64, PlanError> {
     const MOST: u64 = i64::MAX as u64;
     match top.whole("seed", 0, MOST)? {
         Some(seed) => Ok(seed.value),
-        None => Err(top.lacks("seed", "a line such as `seed = 1`: every random draw comes from it")),
+        None => Err(top.lacks(
+            "seed",
+            "a line such as `seed = 1`: every random draw comes from it",
+        )),
     }
 }
 
 pub(super) fn budget(top: &Section<'_, '_>) -> Result<Budget, PlanError> {
-    let mut budget = Budget { wall: DEFAULT_WALL, memory: None };
-    let Some(section) = top.table("budget", "[budget]")? else { return Ok(budget) };
+    let mut budget = Budget {
+        wall: DEFAULT_WALL,
+        memory: None,
+    };
+    let Some(section) = top.table("budget", "[budget]")? else {
+        return Ok(budget);
+    };
     section.only(&["wall", "memory"])?;
     if let Some(entry) = section.get("wall") {
         let read = entry.value.get_ref().as_str().and_then(quantity::duration);
@@ -42,7 +53,9 @@ pub(super) fn budget(top: &Section<'_, '_>) -> Result<Budget, PlanError> {
 pub(super) fn tolerance(top: &Section<'_, '_>) -> Result<Tolerance, PlanError> {
     const EXPECTED: &str = "a number above 0 and below 1, such as 1e-6";
     let mut tolerance = Tolerance::default();
-    let Some(section) = top.table("tolerance", "[tolerance]")? else { return Ok(tolerance) };
+    let Some(section) = top.table("tolerance", "[tolerance]")? else {
+        return Ok(tolerance);
+    };
     section.only(&["feasibility", "objective", "rank"])?;
     for (key, place) in [
         ("feasibility", &mut tolerance.feasibility),
@@ -68,15 +81,19 @@ fn look_up<T: Copy>(
     known: &[T],
     id: impl Fn(T) -> &'static str,
 ) -> Result<T, PlanError> {
-    known.iter().copied().find(|candidate| id(*candidate) == named.value).ok_or_else(|| {
-        let ids: Vec<_> = known.iter().map(|candidate| id(*candidate)).collect();
-        document.error(
-            named.span.clone(),
-            &format!("unknown {what}"),
-            &format!("one of {}", ids.join(", ")),
-            nearest_word(&named.value, ids.iter().copied()),
-        )
-    })
+    known
+        .iter()
+        .copied()
+        .find(|candidate| id(*candidate) == named.value)
+        .ok_or_else(|| {
+            let ids: Vec<_> = known.iter().map(|candidate| id(*candidate)).collect();
+            document.error(
+                named.span.clone(),
+                &format!("unknown {what}"),
+                &format!("one of {}", ids.join(", ")),
+                nearest_word(&named.value, ids.iter().copied()),
+            )
+        })
 }
 
 /// Places a setting error: at the key when it is unknown, at the value otherwise.
@@ -91,12 +108,24 @@ fn place_setting_error(
         SettingError::Unknown { nearest, known, .. } => document.error(
             key_span,
             &format!("unknown {what}"),
-            &if known.is_empty() { "none: it takes none".to_owned() } else { format!("one of {}", known.join(", ")) },
+            &if known.is_empty() {
+                "none: it takes none".to_owned()
+            } else {
+                format!("one of {}", known.join(", "))
+            },
             nearest.as_deref(),
         ),
-        SettingError::Value { name, expected, nearest, .. } => {
-            document.error(value_span, &format!("`{name}` has an impossible value"), expected, nearest.as_deref())
-        }
+        SettingError::Value {
+            name,
+            expected,
+            nearest,
+            ..
+        } => document.error(
+            value_span,
+            &format!("`{name}` has an impossible value"),
+            expected,
+            nearest.as_deref(),
+        ),
     }
 }
 
@@ -112,20 +141,32 @@ pub(super) fn families<'a>(
             .text("name")?
             .ok_or_else(|| section.lacks("name", "a line such as `name = \"tight-unique\"`"))?;
         let family = look_up(document, "family", &named, known, |family| family.card().id)?;
-        let count = section.whole("count", 1, 1_000_000)?.map_or(1, |count| count.value);
-        for parameters in combinations(&section, family.card().parameters)? {
+        let count = section
+            .whole("count", 1, 1_000_000)?
+            .map_or(1, |count| count.value);
+        for (parameters, places) in combinations(&section, family.card().parameters)? {
             if !seen.insert((family.card().id, parameters.clone())) {
-                let message = format!("family with the parameters {parameters} stands in the plan twice");
+                let message =
+                    format!("family with the parameters {parameters} stands in the plan twice");
                 return Err(document.error(named.span, &message, "each combination once", None));
             }
-            sown.push(Sown { family, parameters, count, span: named.span.clone() });
+            sown.push(Sown {
+                family,
+                parameters,
+                count,
+                span: named.span.clone(),
+                places,
+            });
         }
     }
     Ok(sown)
 }
 
 /// Crosses the lists of a family's parameters; the first parameter of the file varies slowest.
-fn combinations(section: &Section<'_, '_>, specs: &[SettingSpec]) -> Result<Vec<Settings>, PlanError> {
+fn combinations(
+    section: &Section<'_, '_>,
+    specs: &[SettingSpec],
+) -> Result<Vec<(Settings, Places)>, PlanError> {
     let document = section.document;
     let mut axes: Vec<(String, Span, Vec<Placed<Setting>>)> = Vec::new();
     for entry in section.entries() {
@@ -144,7 +185,9 @@ fn combinations(section: &Section<'_, '_>, specs: &[SettingSpec]) -> Result<Vec<
             axes.push((entry.key.to_owned(), entry.key_span, values));
         }
     }
-    let total = axes.iter().try_fold(1usize, |product, axis| product.checked_mul(axis.2.len()));
+    let total = axes
+        .iter()
+        .try_fold(1usize, |product, axis| product.checked_mul(axis.2.len()));
     let Some(total) = total.filter(|total| *total <= 1_000_000) else {
         return Err(section.lacks("end", "at most 1000000 combinations of parameters"));
     };
@@ -161,7 +204,13 @@ fn combinations(section: &Section<'_, '_>, specs: &[SettingSpec]) -> Result<Vec<
         }
         let settings = Settings::resolve(specs, &given)
             .map_err(|error| place_setting_error(document, "parameter", &error, &places))?;
-        resolved.push(settings);
+        resolved.push((
+            settings,
+            places
+                .into_iter()
+                .map(|(name, (_, span))| (name, span))
+                .collect(),
+        ));
     }
     Ok(resolved)
 }
@@ -173,10 +222,20 @@ pub(super) fn imports(top: &Section<'_, '_>, folder: &Path) -> Result<Vec<Import
         let path = section
             .text("path")?
             .ok_or_else(|| section.lacks("path", "a line such as `path = \"example.dat-s\"`"))?;
-        let rank = section.whole("rank", 1, u64::from(u32::MAX))?.map(|rank| rank.value as usize);
-        if imported.iter().any(|before| before.path == path.value && before.rank == rank) {
+        let rank = section
+            .whole("rank", 1, u64::from(u32::MAX))?
+            .map(|rank| rank.value as usize);
+        if imported
+            .iter()
+            .any(|before| before.path == path.value && before.rank == rank)
+        {
             let message = "file with this rank stands in the plan twice";
-            return Err(section.document.error(path.span, message, "each file once for each rank", None));
+            return Err(section.document.error(
+                path.span,
+                message,
+                "each file once for each rank",
+                None,
+            ));
         }
         imported.push(Imported {
             resolved: folder.join(&path.value),
@@ -191,12 +250,24 @@ pub(super) fn imports(top: &Section<'_, '_>, folder: &Path) -> Result<Vec<Import
 
 fn optimum(import: &Section<'_, '_>) -> Result<Option<ReportedOptimum>, PlanError> {
     const EXPECTED: &str = "optimum = { value = 226.157, digits = 6, source = \"who reports it\" }";
-    let Some(section) = import.table("optimum", "`optimum`")? else { return Ok(None) };
+    let Some(section) = import.table("optimum", "`optimum`")? else {
+        return Ok(None);
+    };
     section.only(&["value", "digits", "source"])?;
-    let value = section.number("value", "a finite number")?.ok_or_else(|| section.lacks("value", EXPECTED))?;
-    let digits = section.whole("digits", 1, 15)?.ok_or_else(|| section.lacks("digits", EXPECTED))?;
-    let source = section.text("source")?.ok_or_else(|| section.lacks("source", EXPECTED))?;
-    Ok(Some(ReportedOptimum { value: value.value, digits: digits.value as u32, source: source.value }))
+    let value = section
+        .number("value", "a finite number")?
+        .ok_or_else(|| section.lacks("value", EXPECTED))?;
+    let digits = section
+        .whole("digits", 1, 15)?
+        .ok_or_else(|| section.lacks("digits", EXPECTED))?;
+    let source = section
+        .text("source")?
+        .ok_or_else(|| section.lacks("source", EXPECTED))?;
+    Ok(Some(ReportedOptimum {
+        value: value.value,
+        digits: digits.value as u32,
+        source: source.value,
+    }))
 }
 
 pub(super) fn methods<'a>(
@@ -208,7 +279,12 @@ pub(super) fn methods<'a>(
         let document = section.document;
         if let Some(entry) = section.get("command") {
             let message = "methods that are other programs do not exist in this version";
-            return Err(document.error(entry.key_span, message, "the `name` of a built-in method", None));
+            return Err(document.error(
+                entry.key_span,
+                message,
+                "the `name` of a built-in method",
+                None,
+            ));
         }
         section.only(&["name", "label", "options"])?;
         let named = section
@@ -218,14 +294,21 @@ pub(super) fn methods<'a>(
         let options = options(&section, method.card().options)?;
         let label = match section.text("label")? {
             Some(label) => checked_label(document, label)?,
-            None => Placed { value: default_label(method, &options), span: named.span },
+            None => Placed {
+                value: default_label(method, &options),
+                span: named.span,
+            },
         };
         if entrants.iter().any(|before| before.label == label.value) {
             let message = format!("label {} stands in the plan twice", label.value);
             let expected = "another `label` for each method with the same name and options";
             return Err(document.error(label.span, &message, expected, None));
         }
-        entrants.push(Entrant { label: label.value, method, options });
+        entrants.push(Entrant {
+            label: label.value,
+            method,
+            options,
+        });
     }
     Ok(entrants)
 }
@@ -239,7 +322,10 @@ fn options(method: &Section<'_, '_>, specs: &[SettingSpec]) -> Result<Settings, 
                 setting(method.document, entry.key, entry.value)?
             } else {
                 // The name is wrong already; resolving says so.
-                Placed { value: Setting::Integer(0), span: entry.value.span() }
+                Placed {
+                    value: Setting::Integer(0),
+                    span: entry.value.span(),
+                }
             };
             places.insert(entry.key.to_owned(), (entry.key_span, value.span));
             given.insert(entry.key.to_owned(), value.value);
@@ -264,11 +350,19 @@ fn default_label(method: &dyn Method, options: &Settings) -> String {
 }
 
 /// Refuses a label that could not stand in a file name.
-fn checked_label(document: &Document<'_>, label: Placed<String>) -> Result<Placed<String>, PlanError> {
+fn checked_label(
+    document: &Document<'_>,
+    label: Placed<String>,
+) -> Result<Placed<String>, PlanError> {
     let fits = |c: char| c.is_ascii_alphanumeric() || "-_.+=".contains(c);
     if label.value.len() > 60 || !label.value.chars().all(fits) {
         let expected = "at most 60 letters, digits and the signs - _ . + =";
-        return Err(document.error(label.span, "`label` cannot stand in a file name", expected, None));
+        return Err(document.error(
+            label.span,
+            "`label` cannot stand in a file name",
+            expected,
+            None,
+        ));
     }
     Ok(label)
 }
