@@ -3,5 +3,6 @@
 
 pub mod affine;
 pub mod alm;
+pub mod anderson;
 pub mod lbfgs;
 pub mod newton;
