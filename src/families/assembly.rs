@@ -1,6 +1,8 @@
 //! What the families share: whole-number draws of factors and slacks, and the assembly of a problem
 //! from a dual pair. No family lives here.
 
+use std::collections::BTreeMap;
+
 use super::PlantError;
 use crate::problem::certificate::{
     BlockPair, Certificate, CertificateError, DualPair, IntegerColumn, IntegerFactor, Planted,
@@ -67,6 +69,53 @@ impl IntegerCoefficient {
         }
     }
 
+    /// Returns the upper triangle of V'A V, packed by columns. The coefficient is sparse.
+    pub(super) fn compressed(&self, factor: &IntegerFactor) -> Vec<i64> {
+        let IntegerCoefficient::Sparse(entries) = self else {
+            unreachable!("only sparse coefficients are compressed");
+        };
+        let mut packed = Vec::with_capacity(factor.width * (factor.width + 1) / 2);
+        for q in 0..factor.width {
+            for p in 0..=q {
+                let term = |&(i, j, value): &(usize, usize, i64)| {
+                    let (left, right) = (factor.row(i), factor.row(j));
+                    let mirrored = if i == j { 0 } else { right[p] * left[q] };
+                    value * (left[p] * right[q] + mirrored)
+                };
+                packed.push(entries.iter().map(term).sum());
+            }
+        }
+        packed
+    }
+
+    /// Returns whether A V = 0.
+    pub(super) fn annihilates(&self, factor: &IntegerFactor) -> bool {
+        let image = match self {
+            IntegerCoefficient::Sparse(entries) => {
+                let mut terms = Vec::with_capacity(2 * entries.len());
+                for &(i, j, value) in entries {
+                    terms.push((i, j, value));
+                    if i != j {
+                        terms.push((j, i, value));
+                    }
+                }
+                terms
+            }
+            // a a'V = 0 if and only if V'a = 0: one row suffices.
+            IntegerCoefficient::Outer(vector) => {
+                vector.iter().map(|&(j, value)| (0, j, value)).collect()
+            }
+        };
+        let mut rows: BTreeMap<usize, Vec<i64>> = BTreeMap::new();
+        for (i, j, value) in image {
+            let row = rows.entry(i).or_insert_with(|| vec![0; factor.width]);
+            for (sum, v) in row.iter_mut().zip(factor.row(j)) {
+                *sum += value * v;
+            }
+        }
+        rows.values().flatten().all(|&value| value == 0)
+    }
+
     /// Visits the entries of the upper triangle as `(i, j, value)`.
     fn visit(&self, visit: &mut impl FnMut(usize, usize, i128)) {
         match self {
@@ -94,17 +143,16 @@ impl IntegerCoefficient {
                     floats.push((i as u32, float(i128::from(value))?));
                 }
                 let vector = SparseVector::gather(floats);
-                Coefficient::Outer(OuterSum { order, terms: vec![OuterTerm { weight: 1.0, vector }] })
+                Coefficient::Outer(OuterSum {
+                    order,
+                    terms: vec![OuterTerm { weight: 1.0, vector }],
+                })
             }
         })
     }
 }
 
-fn visit_outer(
-    vector: &[(usize, i64)],
-    weight: i64,
-    visit: &mut impl FnMut(usize, usize, i128),
-) {
+fn visit_outer(vector: &[(usize, i64)], weight: i64, visit: &mut impl FnMut(usize, usize, i128)) {
     for (position, &(j, right)) in vector.iter().enumerate() {
         for &(i, left) in &vector[..=position] {
             visit(i, j, i128::from(left) * i128::from(right) * i128::from(weight));
@@ -226,7 +274,8 @@ impl TriangleSum {
             while position < self.list.len() {
                 let (i, j, mut value) = self.list[position];
                 position += 1;
-                while position < self.list.len() && (self.list[position].0, self.list[position].1) == (i, j)
+                while position < self.list.len()
+                    && (self.list[position].0, self.list[position].1) == (i, j)
                 {
                     value += self.list[position].2;
                     position += 1;

@@ -4,9 +4,22 @@
 
 mod assembly;
 mod balanced_graph;
+mod cycles;
+mod face;
+mod flat_face;
+mod frustrated_loops;
+mod hadamard;
+mod ky_fan_gap;
+mod lattice_tiles;
+mod sign_trap;
 mod tight_unique;
 
 pub use balanced_graph::BalancedGraph;
+pub use flat_face::FlatFace;
+pub use frustrated_loops::FrustratedLoops;
+pub use ky_fan_gap::KyFanGap;
+pub use lattice_tiles::LatticeTiles;
+pub use sign_trap::SignTrap;
 pub use tight_unique::TightUnique;
 
 use crate::card::{FamilyCard, Settings};
@@ -41,7 +54,15 @@ pub trait Family: Sync {
 
 /// Lists every family, in alphabetical order of id.
 pub fn registry() -> &'static [&'static dyn Family] {
-    &[&BalancedGraph, &TightUnique]
+    &[
+        &BalancedGraph,
+        &FlatFace,
+        &FrustratedLoops,
+        &KyFanGap,
+        &LatticeTiles,
+        &SignTrap,
+        &TightUnique,
+    ]
 }
 
 /// Finds a family by its id.

@@ -148,6 +148,7 @@ fn draw(sizes: &Sizes<'_>, stream: &mut Stream) -> PairDraft {
         })
         .collect();
     let weights = (rank..order).map(|_| stream.between(1, 3)).collect();
+    let factor = multiply(&base.range, &transform);
     let mut constraints = vec![IntegerCoefficient::identity(order)];
     while constraints.len() < sizes.constraints {
         let drawn = match sizes.measurements {
@@ -155,10 +156,12 @@ fn draw(sizes: &Sizes<'_>, stream: &mut Stream) -> PairDraft {
             "rank-one" => draw_outer(stream, order),
             _ => draw_sparse(stream, order, SPARSE_ENTRIES),
         };
-        constraints.push(drawn);
+        // One constraint that does not see the planted point makes the whole instance degenerate.
+        if !drawn.annihilates(&factor) {
+            constraints.push(drawn);
+        }
     }
     let multipliers = constraints.iter().map(|_| draw_nonzero(stream, 2)).collect();
-    let factor = multiply(&base.range, &transform);
     PairDraft { rank, factor, slack: base.slack, weights, constraints, multipliers }
 }
 

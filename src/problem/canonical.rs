@@ -121,8 +121,10 @@ mod tests {
         let cost =
             Coefficient::Sparse(SparseSymmetric::gather(2, vec![(0, 1, 3.0), (1, 1, weight)]));
         let vector = SparseVector::gather(vec![(0, 1.0), (1, -2.0)]);
-        let outer =
-            Coefficient::Outer(OuterSum { order: 2, terms: vec![OuterTerm { weight: 1.0, vector }] });
+        let outer = Coefficient::Outer(OuterSum {
+            order: 2,
+            terms: vec![OuterTerm { weight: 1.0, vector }],
+        });
         let mut constraint = Functional::on_block(0, outer);
         constraint.orthant = SparseVector::gather(vec![(0, 5.0)]);
         let blocks = vec![Block { order: 2, rank }];

@@ -17,6 +17,7 @@ mod shared_minimiser;
 use serde::{Deserialize, Serialize};
 
 pub use dual_pair::{BlockPair, DualPair, IntegerColumn, IntegerFactor};
+pub use nondegeneracy::{compressed_rank, image_rank};
 pub use rank_bound::RankBound;
 pub use shared_minimiser::{SharedMinimiser, SignedCycle};
 
@@ -213,16 +214,7 @@ impl Planted {
             Certificate::RankBound(bound) => (bound.point(), Vec::new(), None),
         };
         let uniqueness = proof.uniqueness;
-        Ok(Planted {
-            problem,
-            certificate,
-            optimum,
-            point,
-            orthant_point,
-            uniqueness,
-            dual,
-            proof,
-        })
+        Ok(Planted { problem, certificate, optimum, point, orthant_point, uniqueness, dual, proof })
     }
 }
 

@@ -11,7 +11,7 @@ use num_bigint::BigInt;
 use num_traits::{FromPrimitive, ToPrimitive, Zero};
 
 pub use modular::{PRIME, add, inverse, multiply, residue, residue_of_f64, subtract};
-pub use rank::ResidueColumns;
+pub use rank::{Echelon, ResidueColumns};
 
 /// Says that an `i128` computation left its range; the caller repeats it in big integers.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, thiserror::Error)]

@@ -128,7 +128,7 @@ impl DualPair {
         for (k, (pair, block)) in self.blocks.iter().zip(problem.blocks()).enumerate() {
             let named = |what: &str| format!("{what} of block {}", k + 1);
             expect_size(&named("V"), block.order, pair.factor.order)?;
-            let entries = pair.factor.order * pair.factor.width;
+            let entries = pair.factor.order.saturating_mul(pair.factor.width);
             expect_size(&named("the entry list of V"), entries, pair.factor.rows.len())?;
             expect_size(&named("D"), pair.slack.len(), pair.weights.len())?;
             if block.rank.is_some_and(|rank| pair.factor.width > rank) {
@@ -277,4 +277,122 @@ fn check_orthogonality<W: Whole>(k: usize, pair: &BlockPair) -> Result<(), Stop>
 fn unequal<W: Whole>(identity: &'static str, place: String, left: &W, right: &W) -> Stop {
     let (left, right) = (left.to_string(), right.to_string());
     Stop::Fails(CertificateError::Identity { identity, place, left, right })
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::problem::{
+        Block, Coefficient, Functional, OuterSum, OuterTerm, SparseSymmetric, SparseVector,
+    };
+
+    fn sparse(entries: &[(usize, usize, f64)]) -> Coefficient {
+        Coefficient::Sparse(SparseSymmetric::gather(2, entries.to_vec()))
+    }
+
+    fn with_orthant(part: Coefficient, orthant: &[(u32, f64)]) -> Functional {
+        let mut functional = Functional::on_block(0, part);
+        functional.orthant = SparseVector::gather(orthant.to_vec());
+        functional
+    }
+
+    fn pair(v: i64, multipliers: Vec<i64>, orthant: Vec<i64>, orthant_slack: Vec<i64>) -> DualPair {
+        let slack = vec![IntegerColumn { indices: vec![0, 1], values: vec![1, -1] }];
+        let factor = IntegerFactor { order: 2, width: 1, rows: vec![v, v] };
+        let blocks = vec![BlockPair { factor, slack, weights: vec![4] }];
+        DualPair { blocks, multipliers, orthant, orthant_slack }
+    }
+
+    fn blocks() -> Vec<Block> {
+        vec![Block { order: 2, rank: Some(1) }]
+    }
+
+    /// X* = 11', x* = (2, 0, 0), y = (1, -2), S* = 4 (1,-1)'(1,-1), z = (0, 3, 1), worked by hand.
+    fn mixed() -> (Problem, DualPair) {
+        let outer = Coefficient::Outer(OuterSum {
+            order: 2,
+            terms: vec![OuterTerm { weight: 1.0, vector: SparseVector::gather(vec![(1, 1.0)]) }],
+        });
+        let constraints = vec![
+            with_orthant(sparse(&[(0, 0, 1.0)]), &[(0, 1.0)]),
+            with_orthant(outer, &[(0, 2.0), (1, -1.0)]),
+        ];
+        let cost = with_orthant(
+            sparse(&[(0, 0, 5.0), (0, 1, -4.0), (1, 1, 2.0)]),
+            &[(0, -3.0), (1, 5.0), (2, 1.0)],
+        );
+        let problem = Problem::new(blocks(), 3, cost, constraints, vec![3.0, 5.0]).unwrap();
+        (problem, pair(1, vec![1, -2], vec![2, 0, 0], vec![0, 3, 1]))
+    }
+
+    #[test]
+    fn a_pair_with_a_nonnegative_part_is_proved() {
+        let (problem, pair) = mixed();
+        let proof = pair.check(&problem).unwrap();
+        assert_eq!(proof.optimum, -7);
+        assert_eq!(proof.uniqueness, Uniqueness::Proved);
+        assert_eq!(proof.dual_uniqueness, Uniqueness::Proved);
+    }
+
+    #[test]
+    fn a_unit_in_the_nonnegative_part_is_rejected() {
+        let (problem, pair) = mixed();
+        for i in 0..3 {
+            for step in [-1, 1] {
+                let mut other = pair.clone();
+                other.orthant[i] += step;
+                // x_3 meets no constraint, so only z_3 > 0 keeps it at zero.
+                assert!(other.check(&problem).is_err(), "x_{} {step:+}", i + 1);
+                let mut other = pair.clone();
+                other.orthant_slack[i] += step;
+                assert!(other.check(&problem).is_err(), "z_{} {step:+}", i + 1);
+            }
+        }
+    }
+
+    #[test]
+    fn a_scalar_that_may_move_takes_uniqueness_away() {
+        let (problem, mut pair) = mixed();
+        // Without its slack the third scalar may grow at no cost.
+        let mut cost = problem.cost().clone();
+        cost.orthant = SparseVector::gather(vec![(0, -3.0), (1, 5.0)]);
+        pair.orthant_slack[2] = 0;
+        let constraints = problem.constraints().to_vec();
+        let problem = Problem::new(blocks(), 3, cost, constraints, vec![3.0, 5.0]).unwrap();
+        assert_eq!(pair.check(&problem).unwrap().uniqueness, Uniqueness::NotProved);
+    }
+
+    #[test]
+    fn failures_name_the_identity_and_the_place() {
+        let (problem, pair) = mixed();
+        let mut other = pair.clone();
+        other.blocks[0].weights[0] = 5;
+        let message = other.check(&problem).unwrap_err().to_string();
+        assert_eq!(message, "A*(y) + W D W' - C = 0 fails at block 1, entry (1, 1): 1 against 0");
+        let mut other = pair.clone();
+        other.blocks[0].slack[0].values[1] = 1;
+        let message = other.check(&problem).unwrap_err().to_string();
+        assert_eq!(message, "V'W = 0 fails at block 1, columns 1 of V and 1 of W: 2 against 0");
+        let rhs = vec![3.0, 5.5];
+        let constraints = problem.constraints().to_vec();
+        let half = Problem::new(blocks(), 3, problem.cost().clone(), constraints, rhs).unwrap();
+        let message = pair.check(&half).unwrap_err().to_string();
+        assert_eq!(message, "right side 2 holds 5.5, which is no whole number");
+    }
+
+    #[test]
+    fn big_integers_take_over_after_an_overflow() {
+        let big = (1u64 << 50) as f64;
+        let problem = |last: f64| {
+            let constraint = Functional::on_block(0, sparse(&[(0, 0, big), (1, 1, last)]));
+            let cost = sparse(&[(0, 0, big + 4.0), (0, 1, -4.0), (1, 1, last + 4.0)]);
+            let cost = Functional::on_block(0, cost);
+            Problem::new(blocks(), 0, cost, vec![constraint], vec![0.0]).unwrap()
+        };
+        let pair = pair(1 << 50, vec![1], Vec::new(), Vec::new());
+        assert!(matches!(pair.identities::<i128>(&problem(-big)), Err(Stop::Overflow)));
+        assert_eq!(pair.check(&problem(-big)).unwrap().optimum, 0);
+        let error = pair.check(&problem(1.0 - big)).unwrap_err();
+        assert!(matches!(error, CertificateError::Identity { .. }), "{error}");
+    }
 }

@@ -17,8 +17,8 @@
 //! Both ranks are lower bounds modulo 2^61 - 1; reaching full rank proves full rank over the
 //! rationals. Missing it proves nothing, and the answer is then `NotProved`.
 
-use super::dual_pair::{DualPair, IntegerFactor};
 use super::Uniqueness;
+use super::dual_pair::{DualPair, IntegerFactor};
 use crate::problem::exact::{ResidueColumns, add, multiply, residue, residue_of_f64};
 use crate::problem::{Coefficient, Functional, Problem};
 
@@ -47,8 +47,7 @@ impl DualPair {
         }
         let mut images = ResidueColumns::new(unknowns);
         for constraint in problem.constraints() {
-            let mut entries =
-                orthant_entries(constraint, &places.0, starts[self.blocks.len()]);
+            let mut entries = orthant_entries(constraint, &places.0, starts[self.blocks.len()]);
             for (k, part) in &constraint.parts {
                 let factor = &self.blocks[*k].factor;
                 compress(part, factor, starts[*k], &mut entries);
@@ -60,8 +59,7 @@ impl DualPair {
 
     /// Tests dual uniqueness; the pair has been checked against `problem`.
     pub(super) fn dual_uniqueness(&self, problem: &Problem) -> Uniqueness {
-        let starts =
-            offsets(self.blocks.iter().map(|pair| pair.factor.order * pair.factor.width));
+        let starts = offsets(self.blocks.iter().map(|pair| pair.factor.order * pair.factor.width));
         let positive = (0..self.orthant.len()).filter(|&j| self.orthant[j] > 0);
         let places = scatter(self.orthant.len(), positive);
         let coordinates = starts[self.blocks.len()] + places.1;
@@ -71,8 +69,7 @@ impl DualPair {
         }
         let mut images = ResidueColumns::new(coordinates);
         for constraint in problem.constraints() {
-            let mut entries =
-                orthant_entries(constraint, &places.0, starts[self.blocks.len()]);
+            let mut entries = orthant_entries(constraint, &places.0, starts[self.blocks.len()]);
             for (k, part) in &constraint.parts {
                 let factor = &self.blocks[*k].factor;
                 product(part, factor, &mut |i, p, value| {
@@ -83,6 +80,37 @@ impl DualPair {
         }
         verdict(images.rank_up_to(count) == count)
     }
+}
+
+/// Returns a proved lower bound, at most `enough`, of the rank of the matrices V'A_i V over the first
+/// block (their upper triangles as vectors). With r columns in V it is at most r(r+1)/2; what is
+/// missing to that is the dimension of the symmetric U with `<V'A_iV, U> = 0` for all i.
+///
+/// Panics when a constraint holds a number that is not whole.
+pub fn compressed_rank(constraints: &[Functional], factor: &IntegerFactor, enough: usize) -> usize {
+    let mut images = ResidueColumns::new(triangle(factor.width));
+    for constraint in constraints {
+        let mut entries = Vec::new();
+        if let Some(part) = constraint.part(0) {
+            compress(part, factor, 0, &mut entries);
+        }
+        images.push(entries);
+    }
+    images.rank_up_to(enough)
+}
+
+/// Returns a proved lower bound, at most `enough`, of the rank of the matrices A_i V over the first
+/// block. Panics when a constraint holds a number that is not whole.
+pub fn image_rank(constraints: &[Functional], factor: &IntegerFactor, enough: usize) -> usize {
+    let mut images = ResidueColumns::new(factor.order * factor.width);
+    for constraint in constraints {
+        let mut entries = Vec::new();
+        if let Some(part) = constraint.part(0) {
+            product(part, factor, &mut |i, p, value| entries.push((i * factor.width + p, value)));
+        }
+        images.push(entries);
+    }
+    images.rank_up_to(enough)
 }
 
 fn verdict(proved: bool) -> Uniqueness {

@@ -126,10 +126,7 @@ impl RankBound {
         }
         for (index, constraint) in problem.constraints()[..couplings].iter().enumerate() {
             if !matches!(constraint.parts.as_slice(), [(0, _)]) {
-                return form(format!(
-                    "constraint {} must act on the first block only",
-                    index + 1
-                ));
+                return form(format!("constraint {} must act on the first block only", index + 1));
             }
         }
         let mut places = (0..n).flat_map(|j| (0..=j).map(move |i| (i, j)));

@@ -242,6 +242,50 @@ fn eliminate(mut dense: Vec<u64>, height: usize, enough: usize) -> usize {
     rank
 }
 
+/// A growing set of linearly independent vectors modulo the prime.
+#[derive(Clone, Debug)]
+pub struct Echelon {
+    length: usize,
+    /// Reduced vectors, each with 1 at its lead and 0 at the leads before it.
+    vectors: Vec<(usize, Vec<u64>)>,
+}
+
+impl Echelon {
+    /// Makes the empty set of vectors of one length.
+    pub fn new(length: usize) -> Self {
+        Echelon { length, vectors: Vec::new() }
+    }
+
+    /// Returns the number of vectors, which is their rank.
+    pub fn rank(&self) -> usize {
+        self.vectors.len()
+    }
+
+    /// Takes a vector of residues in and returns true if it is independent of the set modulo the
+    /// prime; leaves the set alone and returns false otherwise.
+    #[track_caller]
+    pub fn admit(&mut self, mut vector: Vec<u64>) -> bool {
+        assert_eq!(vector.len(), self.length, "the vectors of a set have one length");
+        for (lead, known) in &self.vectors {
+            if vector[*lead] != 0 {
+                let factor = subtract(0, vector[*lead]);
+                for (target, &source) in vector.iter_mut().zip(known) {
+                    *target = add(*target, multiply(factor, source));
+                }
+            }
+        }
+        let Some(lead) = vector.iter().position(|&value| value != 0) else {
+            return false;
+        };
+        let scale = inverse(vector[lead]);
+        for value in &mut vector {
+            *value = multiply(*value, scale);
+        }
+        self.vectors.push((lead, vector));
+        true
+    }
+}
+
 /// A union-find structure whose vertices carry ratios: `x_i = gain_i * x_root`.
 struct GainForest {
     parent: Vec<u32>,
@@ -390,6 +434,21 @@ mod tests {
         }
 
         #[test]
+        fn an_echelon_admits_as_many_columns_as_the_rank(columns in columns(8, 5, 0..12)) {
+            let mut set = Echelon::new(8);
+            for (count, column) in columns.iter().enumerate() {
+                let mut dense = vec![0u64; 8];
+                for (i, value) in column {
+                    dense[*i] = add(dense[*i], residue(*value));
+                }
+                let before = rational_rank(8, &columns[..count]);
+                let after = rational_rank(8, &columns[..=count]);
+                prop_assert_eq!(set.admit(dense), after > before);
+                prop_assert_eq!(set.rank(), after);
+            }
+        }
+
+        #[test]
         fn a_bound_stops_the_count(columns in columns(8, 4, 0..12), enough in 0usize..6) {
             let rank = rational_rank(8, &columns);
             prop_assert_eq!(residues(8, &columns).rank_up_to(enough), rank.min(enough));
@@ -398,9 +457,8 @@ mod tests {
 
     #[test]
     fn a_signed_cycle_loses_one_rank_only_when_it_is_balanced() {
-        let cycle = |last: i64| {
-            vec![vec![(0, 1), (1, -1)], vec![(1, 3), (2, -3)], vec![(0, last), (2, 2)]]
-        };
+        let cycle =
+            |last: i64| vec![vec![(0, 1), (1, -1)], vec![(1, 3), (2, -3)], vec![(0, last), (2, 2)]];
         assert_eq!(residues(3, &cycle(-2)).rank(), 2);
         assert_eq!(residues(3, &cycle(2)).rank(), 3);
     }

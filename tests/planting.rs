@@ -1,0 +1,541 @@
+//! Planting: every family at small sizes, with its certificate, its digest and its structure.
+
+use std::collections::BTreeMap;
+
+use rankassay::card::{Setting, Settings};
+use rankassay::families::{find, registry};
+use rankassay::problem::certificate::{Certificate, RelaxationFact};
+use rankassay::problem::exact::f64_of_i128;
+use rankassay::problem::{Coefficient, Functional, Planted, Problem, SparseSymmetric, Uniqueness};
+use rankassay::problem::{Factor, canonical};
+use rankassay::seed::Stream;
+
+type Pairs<'a> = &'a [(&'a str, Setting)];
+
+fn settings(id: &str, pairs: Pairs<'_>) -> Settings {
+    let given: BTreeMap<String, Setting> =
+        pairs.iter().map(|(name, value)| ((*name).to_owned(), value.clone())).collect();
+    Settings::resolve(find(id).unwrap().card().parameters, &given).unwrap()
+}
+
+fn try_plant(id: &str, seed: u64, pairs: Pairs<'_>) -> Result<Planted, String> {
+    let settings = settings(id, pairs);
+    let mut stream = Stream::named(seed, &["test", id, &settings.to_string()]);
+    find(id).unwrap().plant(&settings, &mut stream).map_err(|error| error.to_string())
+}
+
+fn plant(id: &str, seed: u64, pairs: Pairs<'_>) -> Planted {
+    try_plant(id, seed, pairs).unwrap_or_else(|error| panic!("{id}, seed {seed}: {error}"))
+}
+
+fn integer(value: i64) -> Setting {
+    Setting::Integer(value)
+}
+
+fn word(value: &str) -> Setting {
+    Setting::Word(value.to_owned())
+}
+
+/// Three sizes of every family.
+fn sizes() -> Vec<(&'static str, Vec<(&'static str, Setting)>)> {
+    let order = |n: i64| vec![("order", integer(n))];
+    let mut all = Vec::new();
+    for n in [10, 100, 2000] {
+        all.push(("balanced-graph", order(n)));
+    }
+    for (n, face, rank) in [(8, 3, 1), (20, 4, 2), (50, 7, 3)] {
+        let mut pairs = order(n);
+        pairs.extend([("face", integer(face)), ("rank", integer(rank))]);
+        all.push(("flat-face", pairs));
+    }
+    for n in [12, 24, 200] {
+        all.push(("frustrated-loops", order(n)));
+    }
+    for (n, rank) in [(8, 1), (12, 2), (28, 3)] {
+        all.push(("ky-fan-gap", vec![("order", integer(n)), ("rank", integer(rank))]));
+    }
+    for n in [16, 36, 400] {
+        all.push(("lattice-tiles", order(n)));
+    }
+    for (n, face) in [(6, 3), (20, 4), (60, 6)] {
+        all.push(("sign-trap", vec![("order", integer(n)), ("face", integer(face))]));
+    }
+    for (n, rank, form) in [(10, 1, "rank-one"), (20, 2, "sparse"), (40, 3, "dense")] {
+        let mut pairs = order(n);
+        pairs.extend([("rank", integer(rank)), ("measurements", word(form))]);
+        all.push(("tight-unique", pairs));
+    }
+    all
+}
+
+#[test]
+fn the_registry_is_sorted_and_every_family_plants_without_parameters() {
+    let ids: Vec<&str> = registry().iter().map(|family| family.card().id).collect();
+    assert!(ids.windows(2).all(|pair| pair[0] < pair[1]), "{ids:?}");
+    assert_eq!(ids.len(), 7);
+    for id in ids {
+        let planted = plant(id, 1, &[]);
+        assert_eq!(planted.certificate.check(&planted.problem).unwrap(), planted.proof);
+    }
+}
+
+#[test]
+fn two_hundred_seeds_plant_at_default_size() {
+    for id in registry().iter().map(|family| family.card().id) {
+        let mut digests: Vec<String> =
+            (0..200).map(|seed| canonical::digest(&plant(id, seed, &[]).problem)).collect();
+        digests.sort_unstable();
+        digests.dedup();
+        assert_eq!(digests.len(), 200, "{id}: seeds must give different instances");
+    }
+}
+
+/// Compares the digests of three sizes of every family with `golden/digests.csv`. Run with
+/// `RANKASSAY_WRITE_GOLDEN=1` to write the table anew after a deliberate change of a generator.
+#[test]
+fn digests_are_golden_and_certificates_exact() {
+    let path = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/golden/digests.csv");
+    let mut table = String::from("family,parameters,seed,optimum,digest\n");
+    for (id, pairs) in sizes() {
+        let parameters = settings(id, &pairs).to_string();
+        let planted = plant(id, 1, &pairs);
+        let proof = planted.certificate.check(&planted.problem).unwrap();
+        assert_eq!(f64_of_i128(proof.optimum), Some(planted.optimum));
+        let digest = canonical::digest(&planted.problem);
+        table.push_str(&format!("{id},{parameters},1,{},{digest}\n", proof.optimum));
+    }
+    if std::env::var_os("RANKASSAY_WRITE_GOLDEN").is_some() {
+        std::fs::write(path, &table).unwrap();
+    }
+    let golden = std::fs::read_to_string(path).unwrap();
+    for (found, expected) in table.lines().zip(golden.lines()) {
+        assert_eq!(found, expected);
+    }
+    assert_eq!(table.lines().count(), golden.lines().count());
+}
+
+/// Evaluates `<F, V V'>` over all blocks in floats; exact here, since all partial sums are whole and
+/// below 2^53.
+fn value(functional: &Functional, point: &[Factor]) -> f64 {
+    let mut sum = 0.0;
+    for (block, part) in &functional.parts {
+        let factor = &point[*block];
+        for (i, j, entry) in part.to_sparse().iter() {
+            let dot: f64 = factor.row(i).iter().zip(factor.row(j)).map(|(a, b)| a * b).sum();
+            sum += if i == j { entry * dot } else { 2.0 * entry * dot };
+        }
+    }
+    sum
+}
+
+#[test]
+fn planted_points_are_feasible_and_attain_the_optimum() {
+    for (id, pairs) in sizes() {
+        let planted = plant(id, 2, &pairs);
+        let problem = &planted.problem;
+        for (constraint, rhs) in problem.constraints().iter().zip(problem.rhs()) {
+            assert_eq!(value(constraint, &planted.point), *rhs, "{id}");
+        }
+        assert_eq!(value(problem.cost(), &planted.point), planted.optimum, "{id}");
+        for (block, factor) in problem.blocks().iter().zip(&planted.point) {
+            assert_eq!(factor.order, block.order);
+            assert!(block.rank.is_none_or(|rank| factor.width == rank), "{id}");
+        }
+    }
+}
+
+#[test]
+fn certificates_survive_being_written_and_read() {
+    for (id, pairs) in sizes() {
+        let planted = plant(id, 3, &pairs);
+        let text = serde_json::to_string(&planted.certificate).unwrap();
+        let read: Certificate = serde_json::from_str(&text).unwrap();
+        assert_eq!(read, planted.certificate, "{id}");
+        assert!(text.contains(planted.certificate.kind()));
+    }
+}
+
+#[test]
+fn what_each_family_promises_is_proved() {
+    for seed in 0..20 {
+        for id in ["tight-unique", "balanced-graph"] {
+            let planted = plant(id, seed, &[]);
+            assert_eq!(planted.uniqueness, Uniqueness::Proved, "{id}");
+            assert_eq!(planted.proof.dual_uniqueness, Uniqueness::Proved, "{id}");
+            assert_eq!(planted.proof.relaxation, RelaxationFact::SameOptimum, "{id}");
+            assert_eq!(planted.dual.as_ref().unwrap().len(), planted.problem.constraints().len());
+        }
+        for id in ["flat-face", "sign-trap"] {
+            let planted = plant(id, seed, &[]);
+            assert_eq!(planted.uniqueness, Uniqueness::NotProved, "{id}");
+            assert_eq!(planted.proof.relaxation, RelaxationFact::SameOptimum, "{id}");
+        }
+        let planted = plant("ky-fan-gap", seed, &[]);
+        assert_eq!(planted.uniqueness, Uniqueness::Proved);
+        assert_eq!(planted.proof.relaxation, RelaxationFact::StrictlyLower);
+    }
+}
+
+/// Returns every certificate that differs from `certificate` by one unit in one number.
+fn corruptions(certificate: &Certificate) -> Vec<(String, Certificate)> {
+    let mut out = Vec::new();
+    let mut spoil = |field: String, change: &mut dyn FnMut(&mut Certificate, i64)| {
+        for step in [-1, 1] {
+            let mut copy = certificate.clone();
+            change(&mut copy, step);
+            out.push((format!("{field} {step:+}"), copy));
+        }
+    };
+    macro_rules! pick {
+        ($variant:ident, $copy:ident) => {
+            match $copy {
+                Certificate::$variant(inner) => inner,
+                _ => unreachable!("the copy is of the same kind"),
+            }
+        };
+    }
+    match certificate {
+        Certificate::DualPair(pair) => {
+            for (k, block) in pair.blocks.iter().enumerate() {
+                for e in 0..block.factor.rows.len() {
+                    spoil(format!("V {e}"), &mut |c, s| {
+                        pick!(DualPair, c).blocks[k].factor.rows[e] += s
+                    });
+                }
+                for (j, column) in block.slack.iter().enumerate() {
+                    spoil(format!("D {j}"), &mut |c, s| {
+                        pick!(DualPair, c).blocks[k].weights[j] += s
+                    });
+                    for e in 0..column.values.len() {
+                        spoil(format!("W {j} {e}"), &mut |c, s| {
+                            pick!(DualPair, c).blocks[k].slack[j].values[e] += s;
+                        });
+                        spoil(format!("W index {j} {e}"), &mut |c, s| {
+                            let index = &mut pick!(DualPair, c).blocks[k].slack[j].indices[e];
+                            *index = index.wrapping_add_signed(s as i32);
+                        });
+                    }
+                }
+                spoil(format!("width {k}"), &mut |c, s| {
+                    let width = &mut pick!(DualPair, c).blocks[k].factor.width;
+                    *width = width.wrapping_add_signed(s as isize);
+                });
+            }
+            for i in 0..pair.multipliers.len() {
+                spoil(format!("y {i}"), &mut |c, s| pick!(DualPair, c).multipliers[i] += s);
+            }
+            for i in 0..pair.orthant.len() {
+                spoil(format!("x {i}"), &mut |c, s| pick!(DualPair, c).orthant[i] += s);
+                spoil(format!("z {i}"), &mut |c, s| pick!(DualPair, c).orthant_slack[i] += s);
+            }
+        }
+        Certificate::SharedMinimiser(shared) => {
+            for i in 0..shared.signs.len() {
+                spoil(format!("t {i}"), &mut |c, s| pick!(SharedMinimiser, c).signs[i] += s);
+            }
+            for (k, cycle) in shared.cycles.iter().enumerate() {
+                for e in 0..cycle.vertices.len() {
+                    spoil(format!("J {k} {e}"), &mut |c, s| {
+                        pick!(SharedMinimiser, c).cycles[k].couplings[e] += s;
+                    });
+                    spoil(format!("vertex {k} {e}"), &mut |c, s| {
+                        let vertex = &mut pick!(SharedMinimiser, c).cycles[k].vertices[e];
+                        *vertex = vertex.wrapping_add_signed(s as i32);
+                    });
+                }
+            }
+        }
+        Certificate::RankBound(bound) => {
+            for j in 0..bound.columns.len() {
+                spoil(format!("l {j}"), &mut |c, s| pick!(RankBound, c).spectrum[j] += s);
+                for e in 0..bound.columns[j].len() {
+                    spoil(format!("H {j} {e}"), &mut |c, s| pick!(RankBound, c).columns[j][e] += s);
+                }
+            }
+            for i in 0..bound.multipliers.len() {
+                spoil(format!("y {i}"), &mut |c, s| pick!(RankBound, c).multipliers[i] += s);
+            }
+            spoil("rank".to_owned(), &mut |c, s| {
+                let rank = &mut pick!(RankBound, c).rank;
+                *rank = rank.wrapping_add_signed(s as isize);
+            });
+        }
+    }
+    out
+}
+
+/// Returns every functional that differs by one unit in one stored number.
+fn changed(functional: &Functional) -> Vec<Functional> {
+    let mut out = Vec::new();
+    for (position, (block, part)) in functional.parts.iter().enumerate() {
+        let entries: Vec<(usize, usize, f64)> = part.to_sparse().iter().collect();
+        for spot in 0..entries.len() {
+            let mut copy = entries.clone();
+            copy[spot].2 += 1.0;
+            let matrix = Coefficient::Sparse(SparseSymmetric::gather(part.order(), copy));
+            let mut other = functional.clone();
+            other.parts[position] = (*block, matrix);
+            out.push(other);
+        }
+    }
+    for spot in 0..functional.orthant.values.len() {
+        let mut other = functional.clone();
+        other.orthant.values[spot] += 1.0;
+        out.push(other);
+    }
+    out
+}
+
+/// Returns every problem that differs by one unit in one number of C, A or b.
+fn changed_problems(problem: &Problem) -> Vec<Problem> {
+    let make = |cost: Functional, constraints: Vec<Functional>, rhs: Vec<f64>| {
+        Problem::new(problem.blocks().to_vec(), problem.orthant(), cost, constraints, rhs).unwrap()
+    };
+    let mut out = Vec::new();
+    let (cost, constraints, rhs) =
+        (problem.cost().clone(), problem.constraints().to_vec(), problem.rhs().to_vec());
+    for other in changed(&cost) {
+        out.push(make(other, constraints.clone(), rhs.clone()));
+    }
+    for i in 0..constraints.len() {
+        for other in changed(&constraints[i]) {
+            let mut copy = constraints.clone();
+            copy[i] = other;
+            out.push(make(cost.clone(), copy, rhs.clone()));
+        }
+        let mut copy = rhs.clone();
+        copy[i] += 1.0;
+        out.push(make(cost.clone(), constraints.clone(), copy));
+    }
+    out
+}
+
+#[test]
+fn a_change_of_one_unit_anywhere_is_rejected() {
+    let order = |n: i64| ("order", integer(n));
+    let cases: Vec<(&str, Vec<(&str, Setting)>)> = vec![
+        ("balanced-graph", vec![order(9)]),
+        ("balanced-graph", vec![order(9), ("cost", word("adjacency"))]),
+        ("flat-face", vec![order(8), ("face", integer(3)), ("rank", integer(2))]),
+        ("frustrated-loops", vec![order(9), ("weight", integer(3))]),
+        ("ky-fan-gap", vec![order(8)]),
+        ("lattice-tiles", vec![order(16)]),
+        ("lattice-tiles", vec![order(16), ("weights", word("mixed"))]),
+        ("sign-trap", vec![order(8)]),
+        ("tight-unique", vec![order(7)]),
+        ("tight-unique", vec![order(6), ("measurements", word("dense"))]),
+        ("tight-unique", vec![order(6), ("measurements", word("rank-one"))]),
+    ];
+    for (id, pairs) in cases {
+        let planted = plant(id, 4, &pairs);
+        let spoiled = corruptions(&planted.certificate);
+        assert!(spoiled.len() > 40, "{id}: only {} corruptions", spoiled.len());
+        for (field, certificate) in spoiled {
+            assert!(certificate.check(&planted.problem).is_err(), "{id}: {field} went through");
+        }
+        for (position, problem) in changed_problems(&planted.problem).iter().enumerate() {
+            assert!(
+                planted.certificate.check(problem).is_err(),
+                "{id}: change {position} of the problem went through"
+            );
+        }
+    }
+}
+
+/// Returns the least `<C, x x'>` over all sign vectors, by a Gray code over 2^(n-1) vectors.
+fn least_energy(problem: &Problem) -> f64 {
+    let n = problem.blocks()[0].order;
+    let mut matrix = vec![vec![0.0; n]; n];
+    for (i, j, entry) in problem.cost().part(0).unwrap().to_sparse().iter() {
+        matrix[i][j] = entry;
+        matrix[j][i] = entry;
+    }
+    let mut x = vec![1.0; n];
+    let mut energy: f64 = matrix.iter().flatten().sum();
+    let mut least = energy;
+    for step in 1u64..1 << (n - 1) {
+        let flip = step.trailing_zeros() as usize;
+        let field: f64 = (0..n).filter(|&j| j != flip).map(|j| matrix[flip][j] * x[j]).sum();
+        energy -= 4.0 * x[flip] * field;
+        x[flip] = -x[flip];
+        least = least.min(energy);
+    }
+    least
+}
+
+#[test]
+fn shared_minimisers_agree_with_enumeration() {
+    for seed in 0..6 {
+        for n in [5, 9, 13, 16] {
+            for density in [500, 1000, 3000] {
+                let pairs = [
+                    ("order", integer(n)),
+                    ("density", integer(density)),
+                    ("longest", integer(5)),
+                    ("weight", integer(3)),
+                ];
+                let planted = plant("frustrated-loops", seed, &pairs);
+                assert_eq!(least_energy(&planted.problem), planted.optimum);
+            }
+        }
+        for weights in ["equal", "mixed"] {
+            let pairs = [("order", integer(16)), ("weights", word(weights))];
+            let planted = plant("lattice-tiles", seed, &pairs);
+            assert_eq!(least_energy(&planted.problem), planted.optimum);
+        }
+    }
+}
+
+/// A single frustrated cycle of length l has the spin minimum -(l - 2): reference notes, closed forms.
+#[test]
+fn a_single_frustrated_cycle_has_the_known_minimum() {
+    for length in [3, 5, 7] {
+        let pairs = [
+            ("order", integer(length)),
+            ("density", integer(1)),
+            ("shortest", integer(length)),
+            ("longest", integer(length)),
+        ];
+        let planted = plant("frustrated-loops", 1, &pairs);
+        assert_eq!(planted.optimum, -2.0 * (length as f64 - 2.0));
+        assert_eq!(least_energy(&planted.problem), planted.optimum);
+    }
+}
+
+/// Returns `-z'Sz > 0` for a whole vector z if 3000 power steps find one, with S the only slack that could prove
+/// t t' optimal for the relaxation: S_ij = C_ij, S t = 0. If z'Sz < 0, the relaxation's optimum is
+/// strictly lower, since X_ii = 1 has a Slater point and S t = 0 determines the multipliers.
+fn descent(planted: &Planted) -> Option<i128> {
+    let n = planted.problem.blocks()[0].order;
+    let t: Vec<i64> = planted.point[0].data.iter().map(|value| *value as i64).collect();
+    let entries: Vec<(usize, usize, i64)> = planted
+        .problem
+        .cost()
+        .part(0)
+        .unwrap()
+        .to_sparse()
+        .iter()
+        .map(|(i, j, entry)| (i, j, entry as i64))
+        .collect();
+    let mut diagonal = vec![0i64; n];
+    for &(i, j, entry) in &entries {
+        diagonal[i] -= entry * t[i] * t[j];
+        diagonal[j] -= entry * t[i] * t[j];
+    }
+    let shift = 2.0 * diagonal.iter().map(|d| d.abs()).max().unwrap() as f64 + 20.0;
+    let mut z: Vec<f64> = (0..n).map(|i| ((i * i + 3 * i) % 7) as f64 - 3.0).collect();
+    for _ in 0..3000 {
+        let mut image: Vec<f64> = (0..n).map(|i| (shift - diagonal[i] as f64) * z[i]).collect();
+        for &(i, j, entry) in &entries {
+            image[i] -= entry as f64 * z[j];
+            image[j] -= entry as f64 * z[i];
+        }
+        let norm = image.iter().map(|v| v * v).sum::<f64>().sqrt();
+        z = image.into_iter().map(|v| v / norm).collect();
+    }
+    let whole: Vec<i128> = z.iter().map(|v| (v * 1e6).round() as i128).collect();
+    let mut form: i128 = (0..n).map(|i| i128::from(diagonal[i]) * whole[i] * whole[i]).sum();
+    for &(i, j, entry) in &entries {
+        form += 2 * i128::from(entry) * whole[i] * whole[j];
+    }
+    (form < 0).then_some(-form)
+}
+
+#[test]
+fn the_gap_families_have_a_strictly_lower_relaxation() {
+    for seed in 0..10 {
+        for (id, pairs) in [
+            ("lattice-tiles", vec![]),
+            ("lattice-tiles", vec![("weights", word("mixed"))]),
+            ("frustrated-loops", vec![]),
+        ] {
+            let planted = plant(id, seed, &pairs);
+            assert!(descent(&planted).is_some(), "{id}, seed {seed}");
+        }
+    }
+}
+
+#[test]
+fn many_loops_close_the_gap() {
+    let closed = (0..10)
+        .filter(|&seed| {
+            let planted = plant("frustrated-loops", seed, &[("density", integer(20_000))]);
+            descent(&planted).is_none()
+        })
+        .count();
+    assert_eq!(closed, 10);
+}
+
+#[test]
+fn balanced_graph_plants_twenty_thousand_vertices() {
+    let start = std::time::Instant::now();
+    let planted = plant("balanced-graph", 1, &[("order", integer(20_000))]);
+    assert_eq!(planted.uniqueness, Uniqueness::Proved);
+    let cost = planted.problem.cost().part(0).unwrap().to_sparse();
+    // Edges and diagonal only: nothing of size n x n.
+    assert_eq!(cost.stored(), 30_000 + 20_000);
+    // Every planting test together takes seconds; this bound only catches a quadratic algorithm.
+    assert!(start.elapsed().as_secs_f64() < 20.0);
+}
+
+#[test]
+fn the_whole_window_of_constraints_plants() {
+    for (n, r) in [(8, 1), (12, 2), (10, 4)] {
+        let most = n * r - r * (r - 1) / 2;
+        for m in [r * (r + 1) / 2, most] {
+            for form in ["sparse", "dense", "rank-one"] {
+                let pairs = [
+                    ("order", integer(n)),
+                    ("rank", integer(r)),
+                    ("constraints", integer(m)),
+                    ("measurements", word(form)),
+                ];
+                let planted = plant("tight-unique", 1, &pairs);
+                assert_eq!(planted.problem.constraints().len(), m as usize);
+            }
+        }
+    }
+}
+
+/// Family, impossible parameters, the parameter the message names, its nearest possible value.
+type Refusal = (&'static str, Vec<(&'static str, Setting)>, &'static str, i64);
+
+#[test]
+fn impossible_parameters_are_refused_with_the_nearest_possible_value() {
+    let n = |value: i64| ("order", integer(value));
+    let cases: Vec<Refusal> = vec![
+        ("tight-unique", vec![n(6), ("rank", integer(6))], "rank", 5),
+        ("tight-unique", vec![n(20), ("constraints", integer(2))], "constraints", 3),
+        ("tight-unique", vec![n(20), ("constraints", integer(99))], "constraints", 39),
+        ("flat-face", vec![n(6), ("face", integer(9))], "face", 5),
+        ("flat-face", vec![n(9), ("rank", integer(5))], "rank", 3),
+        ("flat-face", vec![n(9), ("constraints", integer(500))], "constraints", 29),
+        ("sign-trap", vec![n(9), ("face", integer(9))], "face", 5),
+        ("sign-trap", vec![n(4), ("face", integer(4))], "face", 3),
+        ("balanced-graph", vec![n(5), ("degree", integer(9))], "degree", 4),
+        ("frustrated-loops", vec![n(24), ("density", integer(1))], "density", 209),
+        ("frustrated-loops", vec![n(8), ("longest", integer(9))], "longest", 8),
+        ("frustrated-loops", vec![("shortest", integer(9))], "longest", 9),
+        ("lattice-tiles", vec![n(30)], "order", 36),
+        ("ky-fan-gap", vec![n(13)], "order", 12),
+        ("ky-fan-gap", vec![n(8), ("rank", integer(9))], "rank", 6),
+        ("ky-fan-gap", vec![n(8), ("negatives", integer(9))], "negatives", 6),
+        ("ky-fan-gap", vec![n(8), ("couplings", integer(99))], "couplings", 12),
+    ];
+    for (id, mut pairs, name, nearest) in cases {
+        let message = try_plant(id, 1, &pairs).unwrap_err();
+        assert!(message.ends_with(&format!(" is {nearest}")), "{id}: {message}");
+        assert!(message.contains(name), "{id}: {message}");
+        // The named value is possible.
+        pairs.retain(|pair| pair.0 != name);
+        pairs.push((name, integer(nearest)));
+        try_plant(id, 1, &pairs).unwrap_or_else(|error| panic!("{id}, {name}: {error}"));
+    }
+}
+
+#[test]
+fn a_dense_instance_too_large_names_the_sparse_form() {
+    let pairs = [("order", integer(2000)), ("rank", integer(9)), ("measurements", word("dense"))];
+    let message = try_plant("tight-unique", 1, &pairs).unwrap_err();
+    assert!(message.ends_with("the nearest possible value is sparse"), "{message}");
+}
