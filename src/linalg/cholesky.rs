@@ -193,7 +193,7 @@ impl WithSimd for BackwardSolve<'_> {
         let n = x.len();
         let mut next = n;
         while next > 0 {
-            let width = if next % PANEL == 0 {
+            let width = if next.is_multiple_of(PANEL) {
                 PANEL
             } else {
                 next % PANEL

@@ -218,7 +218,7 @@ impl std::fmt::Debug for SymmetricEigen {
 }
 
 /// Multiplies by 2^exponent in two steps, as the whole power may lie outside the range of numbers.
-fn times_power_of_two(value: f64, exponent: i32) -> f64 {
+pub(super) fn times_power_of_two(value: f64, exponent: i32) -> f64 {
     let half = exponent / 2;
     value * 2f64.powi(half) * 2f64.powi(exponent - half)
 }

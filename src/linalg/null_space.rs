@@ -2,7 +2,9 @@
 //!
 //! Direct methods for matrices that fit in memory, at a cost of the order m k min(m, k). They allocate; they are not for inner loops.
 
-use super::dense::{Accumulate, column, column_mut, gemm};
+use super::dense::{Accumulate, column, column_mut, fill, gemm};
+use super::eigen::times_power_of_two;
+use super::norms::max_abs;
 use super::workspace::Workspace;
 use faer::diag::DiagMut;
 use faer::linalg::qr::col_pivoting::factor as pivoted;
@@ -66,6 +68,12 @@ pub fn null_space(a: MatRef<'_, f64>, tau: f64) -> Result<NullSpace, NullSpaceEr
         return Ok(NullSpace {
             basis: Mat::identity(k, k),
             singular_values: Vec::new(),
+        });
+    }
+    if max_abs(a) == 0.0 {
+        return Ok(NullSpace {
+            basis: Mat::identity(k, k),
+            singular_values: vec![0.0; m.min(k)],
         });
     }
     let mut ws = Workspace::new();
@@ -217,6 +225,7 @@ enum Vectors<'a> {
     Thin(&'a mut Mat<f64>, &'a mut Mat<f64>),
 }
 
+/// Computes singular values and vectors, with the scaling that the iteration needs: it fails on zeros, and squares may leave the range.
 fn decompose(
     a: MatRef<'_, f64>,
     values: &mut [f64],
@@ -224,7 +233,7 @@ fn decompose(
     ws: &mut Workspace,
 ) -> Result<(), NullSpaceError> {
     let (m, k) = (a.nrows(), a.ncols());
-    let (compute_left, compute_right, left, right) = match vectors {
+    let (compute_left, compute_right, mut left, mut right) = match vectors {
         Vectors::Neither => (ComputeSvdVectors::No, ComputeSvdVectors::No, None, None),
         Vectors::Right(v) => (
             ComputeSvdVectors::No,
@@ -239,6 +248,30 @@ fn decompose(
             Some(v.as_mut()),
         ),
     };
+    let largest = max_abs(a);
+    if largest == 0.0 {
+        values.fill(0.0);
+        for vectors in [left.as_mut(), right.as_mut()].into_iter().flatten() {
+            let mut vectors = vectors.as_mut();
+            fill(0.0, vectors.as_mut());
+            for j in 0..vectors.ncols() {
+                vectors[(j, j)] = 1.0;
+            }
+        }
+        return Ok(());
+    }
+    let exponent = if (1e-100..=1e100).contains(&largest) {
+        0
+    } else {
+        largest.log2() as i32
+    };
+    let scaled;
+    let input = if exponent == 0 {
+        a
+    } else {
+        scaled = Mat::from_fn(m, k, |i, j| times_power_of_two(a[(i, j)], -exponent));
+        scaled.as_ref()
+    };
     let request = svd_scratch::<f64>(
         m,
         k,
@@ -247,20 +280,26 @@ fn decompose(
         Par::Seq,
         Default::default(),
     );
-    let values = DiagMut::from_slice_mut(values);
+    let stack = ws.stack(request);
     svd(
-        a,
-        values,
+        input,
+        DiagMut::from_slice_mut(values),
         left,
         right,
         Par::Seq,
-        ws.stack(request),
+        stack,
         Default::default(),
     )
     .map_err(|SvdError::NoConvergence| NullSpaceError::NoConvergence {
         rows: m,
         columns: k,
-    })
+    })?;
+    if exponent != 0 {
+        values
+            .iter_mut()
+            .for_each(|v| *v = times_power_of_two(*v, exponent));
+    }
+    Ok(())
 }
 
 fn check_finite(a: MatRef<'_, f64>) -> Result<(), NullSpaceError> {

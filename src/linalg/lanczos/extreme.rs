@@ -3,15 +3,13 @@
 //! Source: Wu and Simon, SIAM J. Matrix Anal. Appl. 22:602-616 (2000). Every new vector is orthogonalised against the whole basis, the
 //! projected matrix is the measured one (not the assumed tridiagonal), and convergence is accepted on a residual computed anew.
 
+use super::deflation::{fill_deflated, remove_components};
 use super::{LanczosWorkspace, LinearOperator};
 use crate::linalg::dense::{Accumulate, column, gemm, gemv};
 use crate::linalg::vector::{axpy, dot, fill_pseudo_random, norm2, normalise, scale};
 use faer::diag::DiagMut;
 use faer::linalg::evd::{ComputeEigenvectors, self_adjoint_evd, self_adjoint_evd_scratch};
 use faer::{Mat, MatMut, MatRef, Par};
-
-/// Weight of pseudo-random noise in a given start vector: a start that is an exact eigenvector must not hide the others.
-const START_NOISE: f64 = 1e-3;
 
 /// Least steps before convergence is believed, again for starts near a wrong eigenvector.
 const LEAST_STEPS: usize = 8;
@@ -27,12 +25,17 @@ const ROW_BLOCK: usize = 256;
 pub struct ExtremeParams<'a> {
     /// Accepts (theta, y) when ||A y - theta y||_2 <= max(tolerance, 4 eps) * max(1, norm), norm being the largest |Ritz value| met.
     pub tolerance: f64,
-    /// Most applications of the operator.
+    /// Most applications of the operator, but for the one that measures the residual at the end.
     pub max_steps: usize,
     /// Most basis vectors held at once, at least 4 (smaller is taken as 4); 40 to 60 suit hard spectra.
     pub basis: usize,
     /// Known vectors (columns, not necessarily orthonormal) to whose orthogonal complement the operator is confined.
     pub deflate: Option<MatRef<'a, f64>>,
+    /// Norm of the pseudo-random vector that is added to a given start of norm 1.
+    ///
+    /// A start at or near a wrong eigenvector hides a lower eigenvalue whose distance times noise / sqrt n is below the residual
+    /// allowed. The default 1 is safe; smaller values keep more of a good start.
+    pub start_noise: f64,
     /// Number that chooses the pseudo-random parts.
     pub seed: u64,
 }
@@ -44,6 +47,7 @@ impl Default for ExtremeParams<'_> {
             max_steps: 5_000,
             basis: 48,
             deflate: None,
+            start_noise: 1.0,
             seed: 0,
         }
     }
@@ -79,7 +83,8 @@ pub struct Extreme {
 
 /// Computes the smallest eigenvalue of `op` and its vector, starting from `start` (empty, zero or deflated altogether: pseudo-random).
 ///
-/// Memory: (basis + 4) vectors of length n. Usable from n = 1 on. Panics when `start` is neither empty nor of length n, when the
+/// Memory: (basis + 4) vectors of length n. The number of steps grows with sqrt(spread / gap) at the lower end: a spectrum graded over
+/// eight decades is out of reach at tight tolerances unless the basis holds the whole space. Usable from n = 1 on. Panics when `start` is neither empty nor of length n, when the
 /// order is 0, when the deflated vectors have another length, or when nothing is left beside them.
 #[track_caller]
 pub fn smallest_eigenpair<A: LinearOperator + ?Sized>(
@@ -123,37 +128,6 @@ impl<A: LinearOperator + ?Sized> LinearOperator for Negated<'_, A> {
     fn apply(&mut self, x: &[f64], y: &mut [f64]) {
         self.0.apply(x, y);
         scale(-1.0, y);
-    }
-}
-
-/// Stores an orthonormal basis of the given vectors and returns its size; vectors that depend on earlier ones are dropped.
-#[track_caller]
-fn fill_deflated(vectors: Option<MatRef<'_, f64>>, n: usize, store: &mut Vec<f64>) -> usize {
-    store.clear();
-    let Some(vectors) = vectors else { return 0 };
-    assert_eq!(vectors.nrows(), n, "length of the deflated vectors");
-    let mut count = 0;
-    for j in 0..vectors.ncols() {
-        store.extend_from_slice(column(vectors, j));
-        let (known, new) = store.split_at_mut(count * n);
-        let before = normalise(new);
-        for _ in 0..2 {
-            remove_components(known, n, new);
-        }
-        if before > 0.0 && norm2(new) > 1e-10 {
-            normalise(new);
-            count += 1;
-        } else {
-            store.truncate(count * n);
-        }
-    }
-    count
-}
-
-fn remove_components(known: &[f64], n: usize, x: &mut [f64]) {
-    for vector in known.chunks_exact(n) {
-        let c = dot(vector, x);
-        axpy(-c, vector, x);
     }
 }
 
@@ -248,18 +222,20 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
         self.params.tolerance.max(4.0 * f64::EPSILON) * self.norm_estimate.max(1.0)
     }
 
-    /// Sets the first basis vector: the given start with a little noise, outside the deflated space.
+    /// Sets the first basis vector: the given start with the noise asked for, outside the deflated space.
     fn place_start(&mut self, start: &[f64]) {
         let n = self.n;
         self.place_random(0);
         let given = if start.is_empty() { 0.0 } else { norm2(start) };
         if given > 0.0 && given.is_finite() {
             let first = &mut self.ws.basis[..n];
-            scale(START_NOISE, first);
+            scale(self.params.start_noise, first);
             axpy(given.recip(), start, first);
             remove_components(&self.ws.deflated, n, &mut self.ws.basis[..n]);
             remove_components(&self.ws.deflated, n, &mut self.ws.basis[..n]);
-            normalise(&mut self.ws.basis[..n]);
+            if normalise(&mut self.ws.basis[..n]) <= 1e-10 {
+                self.place_random(0);
+            }
         }
     }
 
@@ -317,7 +293,7 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
             let remainder = if closed { 0.0 } else { remainder };
             let full = self.size == self.capacity;
             let limit = self.steps >= self.params.max_steps;
-            if full || limit || self.size % TEST_EVERY == 0 {
+            if full || limit || self.size.is_multiple_of(TEST_EVERY) {
                 if !self.solve_projected() {
                     return Expansion::Failed;
                 }
@@ -348,6 +324,12 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
         let (total, pass) = self.ws.coefficients.split_at_mut(self.capacity + 1);
         let (total, pass) = (&mut total[..count], &mut pass[..count]);
         total.fill(0.0);
+        // The two newest vectors carry nearly all of it; without them one pass over the whole basis is usually enough.
+        for i in (j.saturating_sub(1)..=j).rev() {
+            let vector = &known[i * n..(i + 1) * n];
+            total[i] = dot(vector, next);
+            axpy(-total[i], vector, next);
+        }
         let mut norm = norm2(next);
         for _ in 0..3 {
             let before = norm;
@@ -421,7 +403,7 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
     /// Replaces the basis by the Ritz vectors of the smallest values, followed by the remainder.
     fn restart(&mut self, remainder: f64) {
         let (n, k) = (self.n, self.size);
-        let keep = (2 * k / 5).max(1);
+        let keep = (k / 2).max(1);
         let mut block = std::mem::take(&mut self.ws.small);
         block.resize(ROW_BLOCK * keep, 0.0);
         let weights = self.ws.ritz_vectors.as_ref().submatrix(0, 0, k, keep);

@@ -4,6 +4,7 @@
 //! [`smallest_eigenpair`] and [`largest_eigenpair`] iterate to a residual tolerance with thick restarts. Neither proves that no
 //! eigenvalue lies beyond the one found: a Krylov space sees only what its start vector contains.
 
+mod deflation;
 mod extreme;
 mod step;
 mod tridiagonal;
