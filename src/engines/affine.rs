@@ -33,7 +33,9 @@ const CONSTANT_COST: f64 = 1e-10;
 #[derive(Clone, Copy, Debug, PartialEq, thiserror::Error)]
 pub enum AffineError {
     /// AA* could not be factored although it was shifted.
-    #[error("the matrix of inner products of the {constraints} constraints is not positive: pivot {pivot}")]
+    #[error(
+        "the matrix of inner products of the {constraints} constraints is not positive: pivot {pivot}"
+    )]
     NotPositive {
         /// Number of constraints.
         constraints: usize,
@@ -167,7 +169,8 @@ impl<'a> AffineProjector<'a> {
         self.op.apply_dense(points, x, &mut self.residual);
         axpy(-1.0, self.rhs, &mut self.residual);
         meter.effort.operator_products += 1;
-        meter.effort.flops += self.op.blocks.iter().map(|block| block.flops_per_column()).sum::<u64>();
+        meter.effort.flops +=
+            self.op.blocks.iter().map(|block| block.flops_per_column()).sum::<u64>();
     }
 
     /// Solves AA* w = residual.
@@ -190,8 +193,12 @@ impl<'a> AffineProjector<'a> {
                 meter.effort.flops += (REFINEMENTS as u64 + 1) * 4 * m * m;
             }
             Solver::Iterative { diagonal, images, workspace } => {
-                let mut product =
-                    Product { op: self.op, slacks: &mut self.slacks, images, x: &mut self.orthant_slack };
+                let mut product = Product {
+                    op: self.op,
+                    slacks: &mut self.slacks,
+                    images,
+                    x: &mut self.orthant_slack,
+                };
                 self.weights.fill(0.0);
                 let params = cg::Params { tolerance: CG_TOLERANCE, max_steps: 2000 };
                 let info = cg::solve_preconditioned(
@@ -277,7 +284,9 @@ fn gram_matrix(problem: &Problem, op: &Operator) -> Mat<f64> {
         let mut places: Vec<(u32, u32, u32, f64)> = Vec::with_capacity(entries.values.len());
         for (g, &id) in entries.ids.iter().enumerate() {
             places.extend(
-                entries.range(g).map(|k| (entries.columns[k], entries.rows[k], id, entries.values[k])),
+                entries
+                    .range(g)
+                    .map(|k| (entries.columns[k], entries.rows[k], id, entries.values[k])),
             );
         }
         places.sort_by_key(|place| (place.0, place.1, place.2));
@@ -297,7 +306,8 @@ fn gram_matrix(problem: &Problem, op: &Operator) -> Mat<f64> {
             let id = outer.ids[k] as usize;
             for l in 0..count {
                 let inner = dot(a, outer.vectors.col_as_slice(l));
-                gram[(id, outer.ids[l] as usize)] += outer.weights[k] * outer.weights[l] * inner * inner;
+                gram[(id, outer.ids[l] as usize)] +=
+                    outer.weights[k] * outer.weights[l] * inner * inner;
             }
             for (g, &other) in entries.ids.iter().enumerate() {
                 let sum: f64 = entries

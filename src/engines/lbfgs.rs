@@ -120,7 +120,8 @@ mod tests {
         // Nocedal: with exact line searches BFGS on a quadratic in n variables ends after n steps.
         let curvature = [1.0, 3.0, 10.0, 40.0];
         let mut x = vec![1.0, -2.0, 0.5, 3.0];
-        let gradient = |x: &[f64]| -> Vec<f64> { x.iter().zip(curvature).map(|(x, c)| c * x).collect() };
+        let gradient =
+            |x: &[f64]| -> Vec<f64> { x.iter().zip(curvature).map(|(x, c)| c * x).collect() };
         let mut memory = Lbfgs::new(4, 4);
         let mut d = vec![0.0; 4];
         let mut g = gradient(&x);

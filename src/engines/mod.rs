@@ -3,6 +3,7 @@
 
 pub mod affine;
 pub mod alm;
+pub mod anderson;
 pub mod ipm;
 pub mod lbfgs;
 pub mod newton;

@@ -45,7 +45,13 @@ pub struct NewtonParams {
 
 impl Default for NewtonParams {
     fn default() -> Self {
-        NewtonParams { tolerance: 1e-13, steps: 30, dense_order: 3000, krylov_steps: 1000, levenberg: 1e-3 }
+        NewtonParams {
+            tolerance: 1e-13,
+            steps: 30,
+            dense_order: 3000,
+            krylov_steps: 1000,
+            levenberg: 1e-3,
+        }
     }
 }
 
@@ -190,3 +196,6 @@ enum Solver {
     Dense(DenseSolver),
     Krylov(Minres),
 }
+
+#[cfg(test)]
+mod tests;

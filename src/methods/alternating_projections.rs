@@ -4,6 +4,7 @@ use super::{Method, Trial};
 use crate::budget::{Halt, Meter, TracePoint};
 use crate::card::{DefaultSetting, Kind, MethodCard, MethodClass, SettingSpec};
 use crate::engines::affine::{AffineProjector, Cut};
+use crate::engines::anderson::Anderson;
 use crate::engines::newton::{NewtonParams, polish};
 use crate::linalg::eigen::{SymmetricEigen, flops_full};
 use crate::linalg::project::{factor_of_rank, psd_projection, rank_projection};
@@ -11,6 +12,7 @@ use crate::linalg::vector::norm2;
 use crate::linalg::workspace::Workspace;
 use crate::linalg::{Mat, dense};
 use crate::problem::{Answer, BlockPoint, Factor, Operator, Point, Problem, StopReason};
+use crate::seed::Stream;
 
 /// The method.
 #[derive(Clone, Copy, Debug)]
@@ -23,12 +25,12 @@ static CARD: MethodCard = MethodCard {
     reference: "K. Grigoriadis and R. Skelton, Low-order control design for LMI problems using alternating \
 projection methods, Automatica 32:1117-1125, 1996, 10.1016/0005-1098(96)00057-X; A. Lewis and J. Malick, \
 Alternating projections on manifolds, Mathematics of Operations Research 33:216-234, 2008, \
-10.1287/moor.1070.0291. The cut, its bisection and the extrapolation are our own. Bibliographic data from \
-memory.",
-    needs: "Any problem whose blocks fit in memory densely (four matrices a block). Blocks without a rank bound \
+10.1287/moor.1070.0291. Anderson acceleration: H. Walker and P. Ni, SIAM J. Numer. Anal. 49:1715-1735, 2011, \
+10.1137/10078356X. The cut and its bisection are our own. Bibliographic data from memory.",
+    needs: "Any problem whose blocks fit in memory densely (about 25 matrices a block). Blocks without a rank bound \
 are projected on the cone.",
     cost: "One step: one full eigendecomposition of each block (9 n^3) and one projection on the affine set \
-(O(m^2) with the factor of AA*, m <= 1500; conjugate gradients beyond). An extrapolation costs one step more.",
+(O(m^2) with the factor of AA*, m <= 1500; conjugate gradients beyond).",
     guarantees: "Local linear convergence of one bisection stage where the sets meet transversally; none \
 globally. Residual and rank are exact up to the tolerance reached; the objective is only bisected.",
     failures: "Stalls at a positive distance; sublinear where the cut touches the rank set at its optimum, so \
@@ -40,6 +42,13 @@ that the objective is rarely better than a few digits; knows no multipliers and 
             default: DefaultSetting::Integer(300),
             meaning: "Most projection pairs for one value of the cut; ten times as many for the first, uncut \
 stage.",
+        },
+        SettingSpec {
+            name: "starts",
+            kind: Kind::Integer { least: 1, most: 1000 },
+            default: DefaultSetting::Integer(3),
+            meaning: "Most random starting points of the first stage: X = GG' with G Gaussian of the target \
+width (the order, where the rank is free), scaled to the right side, projected on the affine set.",
         },
         SettingSpec {
             name: "stages",
@@ -62,10 +71,10 @@ between the failed and the best value, until they differ by 1e-8 (1 + |f|).",
 const CLOSE: f64 = 1e-9;
 /// A stage fails early when the distance fell by less than a thousandth over this many steps.
 const WINDOW: usize = 50;
-/// Steps between two extrapolations.
-const EXTRAPOLATE_EVERY: usize = 6;
-/// Largest ratio of successive changes that is extrapolated.
-const LARGEST_RATIO: f64 = 0.99;
+/// Differences that the acceleration combines.
+const MEMORY: usize = 8;
+/// An accelerated point is taken back when its distance is more than this times the last one.
+const WORSE: f64 = 1.5;
 /// The bisection ends at this relative width.
 const WIDTH: f64 = 1e-8;
 
@@ -77,16 +86,17 @@ impl Method for AlternatingProjections {
     fn solve(&self, problem: &Problem, trial: &mut Trial) -> Result<Answer, Halt> {
         let squares: usize = problem.blocks().iter().map(|block| block.order * block.order).sum();
         let system = problem.constraints().len().min(1500).pow(2);
-        trial.meter.check_room(8 * (6 * squares + 2 * system) as u64)?;
+        trial.meter.check_room(8 * (25 * squares + 2 * system) as u64)?;
         let op = Operator::new(problem);
         let projector = AffineProjector::new(problem, &op, &mut trial.meter)
             .map_err(|error| Halt::Failed(error.to_string()))?;
         let mut run = Run::new(problem, &op, projector);
-        let outcome = run.bisect(
-            trial.options.size("stages"),
-            trial.options.size("steps"),
-            &mut trial.meter,
-        );
+        let limits = Limits {
+            starts: trial.options.size("starts"),
+            stages: trial.options.size("stages"),
+            steps: trial.options.size("steps"),
+        };
+        let outcome = run.bisect(limits, &mut trial.stream, &mut trial.meter);
         let stop = match outcome {
             Ok(stop) => stop,
             Err(Halt::TimeLimit) => StopReason::TimeLimit,
@@ -96,6 +106,14 @@ impl Method for AlternatingProjections {
         let newton = trial.options.word("polish") == "newton";
         run.answer(stop, newton, &mut trial.meter)
     }
+}
+
+/// Limits of the bisection, as on the card.
+#[derive(Clone, Copy, Debug)]
+struct Limits {
+    starts: usize,
+    stages: usize,
+    steps: usize,
 }
 
 /// A dense point.
@@ -130,19 +148,31 @@ impl Dense {
         (blocks + norm2(&self.x).powi(2)).sqrt()
     }
 
-    /// Sets self to `a + factor (a - b)`.
-    fn extrapolate(&mut self, factor: f64, a: &Dense, b: &Dense) {
-        for ((to, a), b) in self.blocks.iter_mut().zip(&a.blocks).zip(&b.blocks) {
-            for j in 0..to.ncols() {
-                let pairs = a.col_as_slice(j).iter().zip(b.col_as_slice(j));
-                for (t, (x, y)) in to.col_as_slice_mut(j).iter_mut().zip(pairs) {
-                    *t = x + factor * (x - y);
-                }
+    /// Writes all numbers one after another.
+    fn write_flat(&self, out: &mut [f64]) {
+        let mut place = 0;
+        let columns = self.blocks.iter().flat_map(|b| (0..b.ncols()).map(|j| b.col_as_slice(j)));
+        for column in columns.chain(std::iter::once(self.x.as_slice())) {
+            out[place..place + column.len()].copy_from_slice(column);
+            place += column.len();
+        }
+    }
+
+    /// Reads what [`Self::write_flat`] wrote.
+    fn read_flat(&mut self, from: &[f64]) {
+        let mut place = 0;
+        for block in &mut self.blocks {
+            for j in 0..block.ncols() {
+                let column = block.col_as_slice_mut(j);
+                column.copy_from_slice(&from[place..place + column.len()]);
+                place += column.len();
             }
         }
-        for (t, (x, y)) in self.x.iter_mut().zip(a.x.iter().zip(&b.x)) {
-            *t = x + factor * (x - y);
-        }
+        self.x.copy_from_slice(&from[place..]);
+    }
+
+    fn length(&self) -> usize {
+        self.blocks.iter().map(|b| b.nrows() * b.ncols()).sum::<usize>() + self.x.len()
     }
 }
 
@@ -154,8 +184,12 @@ struct Run<'a> {
     workspace: Workspace,
     /// Point of the affine set.
     point: Dense,
-    previous: Dense,
-    trial: Dense,
+    /// Plain next point.
+    plain: Dense,
+    memory: Anderson,
+    flat: Vec<f64>,
+    flat_change: Vec<f64>,
+    flat_next: Vec<f64>,
     /// Nearest point of bounded rank.
     low: Dense,
     /// Best point of bounded rank, with its objective and distance to the affine set.
@@ -179,8 +213,11 @@ impl<'a> Run<'a> {
             eigen: problem.blocks().iter().map(|b| SymmetricEigen::new(b.order)).collect(),
             workspace: Workspace::new(),
             point: zero.clone(),
-            previous: zero.clone(),
-            trial: zero.clone(),
+            plain: zero.clone(),
+            memory: Anderson::new(zero.length(), MEMORY),
+            flat: vec![0.0; zero.length()],
+            flat_change: vec![0.0; zero.length()],
+            flat_next: vec![0.0; zero.length()],
             low: zero.clone(),
             best: zero,
             best_value: f64::INFINITY,
@@ -191,13 +228,22 @@ impl<'a> Run<'a> {
     }
 
     /// Bisects the cut; says how it ended.
-    fn bisect(&mut self, stages: usize, steps: usize, meter: &mut Meter) -> Result<StopReason, Halt> {
-        // 1. Without a cut, from the identity: the least-norm point is often the worst start for the rank set.
-        for block in &mut self.point.blocks {
-            (0..block.nrows()).for_each(|i| block[(i, i)] = 1.0);
+    fn bisect(
+        &mut self,
+        limits: Limits,
+        stream: &mut Stream,
+        meter: &mut Meter,
+    ) -> Result<StopReason, Halt> {
+        // 1. Without a cut, from random points.
+        let mut met = false;
+        for _ in 0..limits.starts {
+            self.draw(stream);
+            met = self.stage(f64::INFINITY, 10 * limits.steps, meter)?;
+            if met {
+                break;
+            }
         }
-        self.point.x.fill(1.0);
-        if !self.stage(f64::INFINITY, 10 * steps, meter)? {
+        if !met {
             return Ok(StopReason::Stalled);
         }
         if self.projector.cut() == Cut::Constant {
@@ -206,7 +252,7 @@ impl<'a> Run<'a> {
         // 2. Downwards while it works, then bisection.
         let mut drop = 0.1 * (1.0 + self.best_value.abs());
         let mut failed: Option<f64> = None;
-        for _ in 0..stages {
+        for _ in 0..limits.stages {
             let gamma = match failed {
                 Some(low) if self.best_value - low <= WIDTH * (1.0 + self.best_value.abs()) => {
                     return Ok(StopReason::Converged);
@@ -215,7 +261,7 @@ impl<'a> Run<'a> {
                 None => self.best_value - drop,
             };
             self.point.copy_from(&self.best);
-            if self.stage(gamma, steps, meter)? {
+            if self.stage(gamma, limits.steps, meter)? {
                 drop *= 2.0;
             } else {
                 failed = Some(gamma);
@@ -224,27 +270,56 @@ impl<'a> Run<'a> {
         Ok(StopReason::IterationLimit)
     }
 
+    /// Draws a point of bounded rank whose image has the norm of the right side.
+    fn draw(&mut self, stream: &mut Stream) {
+        for (block, point) in self.problem.blocks().iter().zip(&mut self.point.blocks) {
+            let width = block.rank.unwrap_or(block.order);
+            let mut g = Mat::zeros(block.order, width);
+            for j in 0..width {
+                g.col_as_slice_mut(j).iter_mut().for_each(|value| *value = stream.normal());
+            }
+            let (replace, g_t) = (dense::Accumulate::Replace, g.as_ref().transpose());
+            dense::gemm(point.as_mut(), replace, 1.0, g.as_ref(), g_t);
+        }
+        self.point.x.iter_mut().for_each(|value| *value = stream.normal().abs());
+        let mut image = vec![0.0; self.op.constraints()];
+        self.op.apply_dense(&self.point.blocks, &self.point.x, &mut image);
+        let factor = norm2(self.problem.rhs()) / norm2(&image);
+        if factor.is_finite() && factor > 0.0 {
+            self.point.blocks.iter_mut().for_each(|block| dense::scale(factor, block.as_mut()));
+            self.point.x.iter_mut().for_each(|value| *value *= factor);
+        }
+    }
+
     /// Alternates at one value of the cut from `self.point`; true when the sets were met.
     fn stage(&mut self, gamma: f64, limit: usize, meter: &mut Meter) -> Result<bool, Halt> {
         self.stages += 1;
+        self.memory.clear();
         self.onto_affine(gamma, meter);
-        let mut marked = f64::INFINITY;
-        let (mut change, mut last_change) = (f64::INFINITY, f64::INFINITY);
+        let (mut marked, mut nearest) = (f64::INFINITY, f64::INFINITY);
+        let mut last = f64::INFINITY;
         for step in 0..limit {
             meter.check()?;
-            // 1. Nearest point of bounded rank.
-            let distance = self.onto_rank(meter)?;
+            // 1. Nearest point of bounded rank; an accelerated point that is much worse is taken back.
+            let mut distance = self.onto_rank(meter)?;
+            if distance > WORSE * last {
+                self.memory.clear();
+                self.point.copy_from(&self.plain);
+                distance = self.onto_rank(meter)?;
+            }
+            last = distance;
             self.steps += 1;
             meter.effort.inner_steps += 1;
             self.record(distance, gamma);
             if distance <= CLOSE * (1.0 + self.point.norm()) {
                 return Ok(true);
             }
-            if step % WINDOW == 0 {
-                if distance > 0.999 * marked {
+            nearest = nearest.min(distance);
+            if step % WINDOW == WINDOW - 1 {
+                if nearest > 0.999 * marked {
                     return Ok(false);
                 }
-                marked = distance;
+                marked = nearest;
                 meter.trace(TracePoint {
                     flops: 0,
                     objective: Some(self.op.cost_dense(&self.low.blocks, &self.low.x)),
@@ -253,24 +328,18 @@ impl<'a> Run<'a> {
                 });
             }
             // 2. Nearest point of the cut affine set.
-            self.previous.copy_from(&self.point);
+            self.point.write_flat(&mut self.flat);
             self.point.copy_from(&self.low);
             self.onto_affine(gamma, meter);
-            last_change = std::mem::replace(&mut change, self.point.distance(&self.previous)).min(last_change);
-            // 3. Extrapolation along the last change, kept when it lowers the distance.
-            let ratio = change / last_change;
-            if step % EXTRAPOLATE_EVERY == EXTRAPOLATE_EVERY - 1 && ratio > 0.3 && ratio < LARGEST_RATIO {
-                let factor = ratio / (1.0 - ratio);
-                self.trial.extrapolate(factor, &self.point, &self.previous);
-                self.previous.copy_from(&self.point);
-                self.point.copy_from(&self.trial);
-                self.onto_affine(gamma, meter);
-                let reached = self.onto_rank(meter)?;
-                if !(reached < distance) {
-                    self.point.copy_from(&self.previous);
-                }
-                (change, last_change) = (f64::INFINITY, f64::INFINITY);
+            self.plain.copy_from(&self.point);
+            // 3. Acceleration; combinations stay in the affine set, the cut is applied again.
+            self.plain.write_flat(&mut self.flat_change);
+            for (change, x) in self.flat_change.iter_mut().zip(&self.flat) {
+                *change -= x;
             }
+            self.memory.step(&self.flat, &self.flat_change, &mut self.flat_next);
+            self.point.read_flat(&self.flat_next);
+            self.onto_affine(gamma, meter);
         }
         Ok(false)
     }
@@ -311,7 +380,11 @@ impl<'a> Run<'a> {
         let close = CLOSE * (1.0 + self.point.norm());
         let met = distance <= close;
         let had_met = self.best_value.is_finite();
-        let better = if met { true } else { !had_met && gamma.is_infinite() && distance < self.best_distance };
+        let better = if met {
+            true
+        } else {
+            !had_met && gamma.is_infinite() && distance < self.best_distance
+        };
         if !better {
             return;
         }
@@ -326,9 +399,17 @@ impl<'a> Run<'a> {
         self.best.copy_from(&self.low);
     }
 
-    fn answer(&mut self, stop: StopReason, newton: bool, meter: &mut Meter) -> Result<Answer, Halt> {
+    fn answer(
+        &mut self,
+        stop: StopReason,
+        newton: bool,
+        meter: &mut Meter,
+    ) -> Result<Answer, Halt> {
         if !self.best_distance.is_finite() {
-            return Err(Halt::TimeLimit);
+            return Err(match stop {
+                StopReason::MemoryLimit => Halt::MemoryLimit,
+                _ => Halt::TimeLimit,
+            });
         }
         let mut note = format!(
             "{} stages, {} steps, distance of the sets {:.1e}",
@@ -349,8 +430,7 @@ impl<'a> Run<'a> {
         if newton {
             let mut y = vec![0.0; self.op.constraints()];
             let params = NewtonParams::default();
-            let info =
-                polish(self.op, self.problem, &mut factors, &mut x, &mut y, &params, meter);
+            let info = polish(self.op, self.problem, &mut factors, &mut x, &mut y, &params, meter);
             note.push_str(&format!("; {} Newton steps, merit {:.1e}", info.steps, info.merit));
             multipliers = Some(y);
         }
@@ -376,7 +456,7 @@ mod tests {
         let op = Operator::new(&problem);
         let mut meter = Meter::unlimited();
         let mut run = run(&problem, &op, &mut meter);
-        run.point.x.fill(1.0);
+        run.draw(&mut Stream::named(1, &["fall"]));
         run.onto_affine(f64::INFINITY, &mut meter);
         let mut last = f64::INFINITY;
         let mut first = 0.0;
@@ -399,9 +479,12 @@ mod tests {
         let op = Operator::new(&problem);
         let mut meter = Meter::unlimited();
         let mut run = run(&problem, &op, &mut meter);
-        assert!(run.stage(f64::INFINITY, 1000, &mut meter).is_ok());
+        let mut stream = Stream::named(1, &["cut"]);
+        let uncut = Limits { starts: 5, stages: 0, steps: 300 };
+        run.bisect(uncut, &mut stream.clone(), &mut meter).unwrap();
+        assert!(run.best_distance <= 1e-8, "{}", run.best_distance);
         let mut cut = super::tests::run(&problem, &op, &mut meter);
-        cut.bisect(40, 300, &mut meter).unwrap();
+        cut.bisect(Limits { stages: 40, ..uncut }, &mut stream, &mut meter).unwrap();
         assert!(cut.best_distance <= 1e-8, "{}", cut.best_distance);
         assert!(cut.best_value <= run.best_value, "{} {}", cut.best_value, run.best_value);
         // Every point of the rank set that is feasible is a sign vector, whose objective is at least 0.

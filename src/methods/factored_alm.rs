@@ -81,10 +81,12 @@ impl Method for FactoredAlm {
             _ => Lift::WhenNeeded,
         };
         params.finish = Finish::Newton;
-        let solution = solve(problem, &op, &params, &mut trial.stream, &mut trial.meter)
-            .map_err(|error| match error {
-                AlmError::Halted(halt) => halt,
-                other => Halt::Failed(other.to_string()),
+        let solution =
+            solve(problem, &op, &params, &mut trial.stream, &mut trial.meter).map_err(|error| {
+                match error {
+                    AlmError::Halted(halt) => halt,
+                    other => Halt::Failed(other.to_string()),
+                }
             })?;
         let note = describe(&solution.info, params.certificate);
         Ok(Answer {
@@ -121,14 +123,19 @@ fn describe(info: &AlmInfo, tolerance: f64) -> String {
     let ways = format!("starts {}, widest {}", info.starts, info.widest);
     match (&info.certificate, info.bound) {
         (Some(c), _) if c.gap <= tolerance && info.feasibility <= 1e-6 => {
-            format!("certified: lambda_min(S) >= {:.2e}, relative gap {:.1e}; {ways}", c.least, c.gap)
+            format!(
+                "certified: lambda_min(S) >= {:.2e}, relative gap {:.1e}; {ways}",
+                c.least, c.gap
+            )
         }
         (Some(c), Some(bound)) => format!(
             "not certified: lambda_min(S) {:.2e}, relative gap {:.1e}, relaxation bound {bound:.9e} at the \
 point's trace; {ways}",
             c.least, c.gap
         ),
-        (None, Some(bound)) => format!("no certificate in time, relaxation bound {bound:.9e}; {ways}"),
+        (None, Some(bound)) => {
+            format!("no certificate in time, relaxation bound {bound:.9e}; {ways}")
+        }
         _ => format!("no certificate in time; {ways}"),
     }
 }

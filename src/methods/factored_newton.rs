@@ -67,8 +67,11 @@ impl Method for FactoredNewton {
     fn solve(&self, problem: &Problem, trial: &mut Trial) -> Result<Answer, Halt> {
         let op = Operator::new(problem);
         let bound = problem.rank_bound() + 1;
-        let widths =
-            problem.blocks().iter().map(|b| b.rank.unwrap_or(bound.min(b.order))).collect::<Vec<_>>();
+        let widths = problem
+            .blocks()
+            .iter()
+            .map(|b| b.rank.unwrap_or(bound.min(b.order)))
+            .collect::<Vec<_>>();
         let mut params = AlmParams::with_widths(widths);
         params.starts = 1;
         params.lift = Lift::Never;
@@ -156,10 +159,16 @@ fn answer(best: Candidate, trial: &Trial) -> Result<Answer, Halt> {
     let steps = format!("{} Newton steps, merit {:.1e}", newton.steps, newton.merit);
     let note = match &best.certificate {
         Some(c) if c.gap <= CERTIFIED && newton.feasibility <= FEASIBLE => {
-            format!("certified: lambda_min(S) >= {:.2e}, relative gap {:.1e}; {steps}", c.least, c.gap)
+            format!(
+                "certified: lambda_min(S) >= {:.2e}, relative gap {:.1e}; {steps}",
+                c.least, c.gap
+            )
         }
         Some(c) => {
-            format!("not certified: lambda_min(S) {:.2e}, relative gap {:.1e}; {steps}", c.least, c.gap)
+            format!(
+                "not certified: lambda_min(S) {:.2e}, relative gap {:.1e}; {steps}",
+                c.least, c.gap
+            )
         }
         None => format!("no certificate in time; {steps}"),
     };

@@ -57,3 +57,6 @@ pub fn registry() -> &'static [&'static dyn Method] {
 pub fn find(id: &str) -> Option<&'static dyn Method> {
     registry().iter().copied().find(|method| method.card().id == id)
 }
+
+#[cfg(test)]
+mod factored_tests;

@@ -19,7 +19,10 @@ impl Pattern {
         let mut column_starts = vec![0u32; order + 1];
         let mut counts = vec![0u32; order];
         for &(j, i) in positions {
-            assert!(i <= j && (j as usize) < order, "position ({i}, {j}) is not in the upper triangle");
+            assert!(
+                i <= j && (j as usize) < order,
+                "position ({i}, {j}) is not in the upper triangle"
+            );
             column_starts[j as usize + 1] += 1;
             counts[i as usize] += 1;
             counts[j as usize] += u32::from(i != j);

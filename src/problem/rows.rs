@@ -73,7 +73,8 @@ impl Pattern {
     ) {
         let range = self.full_starts[i] as usize..self.full_starts[i + 1] as usize;
         let mut sum = [0.0; W];
-        for (&column, &slot) in self.full_columns[range.clone()].iter().zip(&self.full_slots[range]) {
+        for (&column, &slot) in self.full_columns[range.clone()].iter().zip(&self.full_slots[range])
+        {
             let value = values[slot as usize];
             let source = &v[column as usize * width + first..][..W];
             for k in 0..W {
@@ -221,7 +222,18 @@ mod tests {
     fn pattern() -> Pattern {
         // Upper triangle by (column, row): a path of six with one chord, whole diagonal.
         let positions = [
-            (0, 0), (1, 0), (1, 1), (2, 1), (2, 2), (3, 2), (3, 3), (4, 0), (4, 3), (4, 4), (5, 4), (5, 5),
+            (0, 0),
+            (1, 0),
+            (1, 1),
+            (2, 1),
+            (2, 2),
+            (3, 2),
+            (3, 3),
+            (4, 0),
+            (4, 3),
+            (4, 4),
+            (5, 4),
+            (5, 5),
         ];
         Pattern::new(6, &positions)
     }

@@ -95,11 +95,13 @@ pub fn certify(
     let mut workspace = LanczosWorkspace::new();
     for (k, block) in op.blocks.iter().enumerate() {
         let mut scratch = LineScratch::new(block, factors[k].width);
-        objective += block.add_square(&factors[k].data, factors[k].width, &mut scratch, &mut values);
+        objective +=
+            block.add_square(&factors[k].data, factors[k].width, &mut scratch, &mut values);
         trace += dot(&factors[k].data, &factors[k].data);
         let mut slack = block.slack();
         block.fill_slack(y, 1.0, &mut slack);
-        let (value, vector) = least_eigenpair(block, &slack, &factors[k], params, &mut workspace, meter);
+        let (value, vector) =
+            least_eigenpair(block, &slack, &factors[k], params, &mut workspace, meter);
         if value < least {
             least = value;
             escape = (value < 0.0).then_some((k, vector));
@@ -191,13 +193,7 @@ fn range_basis(block: &BlockOperator, slack: &Slack, factor: &Factor) -> (Mat<f6
         }
     }
     let mut basis = Mat::zeros(n, count);
-    dense::gemm(
-        basis.as_mut(),
-        dense::Accumulate::Replace,
-        1.0,
-        rows.transpose(),
-        turn.as_ref(),
-    );
+    dense::gemm(basis.as_mut(), dense::Accumulate::Replace, 1.0, rows.transpose(), turn.as_ref());
     let mut scratch = LineScratch::new(block, 1);
     let mut image = vec![0.0; n];
     let mut square = 0.0;

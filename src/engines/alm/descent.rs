@@ -128,7 +128,11 @@ fn minimise(
         let Some(alpha) = least_step(q) else {
             if ws.memory.pairs() == 0 {
                 let unbounded = q[0] < 0.0 && q[3] <= 0.0;
-                return if unbounded || !q[0].is_finite() { InnerEnd::Diverged } else { InnerEnd::Limit };
+                return if unbounded || !q[0].is_finite() {
+                    InnerEnd::Diverged
+                } else {
+                    InnerEnd::Limit
+                };
             }
             ws.memory.clear();
             continue;

@@ -13,6 +13,9 @@ use crate::seed::Stream;
 
 /// Residual and gradient at which Newton steps take over.
 const HAND_OVER: f64 = 1e-5;
+/// Newton steps are tried when residual and gradient are at most this: farther away the point is a stationary
+/// one that violates the constraints, and no step leads on.
+const PROMISING: f64 = 1e-3;
 /// A point is feasible for the choice between points when its residual is at most this.
 const FEASIBLE: f64 = 1e-7;
 /// Most escapes along a negative eigenvector at one width.
@@ -64,17 +67,8 @@ pub fn solve(
     meter: &mut Meter,
 ) -> Result<AlmSolution, AlmError> {
     let widest = params.widths.iter().copied().max().unwrap_or(0);
-    let mut run = Run {
-        problem,
-        op,
-        params,
-        meter,
-        halt: None,
-        best: None,
-        bound: None,
-        starts: 0,
-        widest,
-    };
+    let mut run =
+        Run { problem, op, params, meter, halt: None, best: None, bound: None, starts: 0, widest };
     // 1. One random start at the widths asked for.
     run.starts = 1;
     let mut certified = run.from_random(&params.widths, stream);
@@ -96,7 +90,9 @@ impl Run<'_, '_> {
         let mut l = Lagrangian::new(self.problem, self.op, widths);
         random(&mut l, stream);
         l.sigma = super::descent::FIRST_SIGMA;
-        let Some(candidate) = self.descend(l) else { return false };
+        let Some(candidate) = self.descend(l) else {
+            return false;
+        };
         self.judge(candidate, widths)
     }
 
@@ -122,7 +118,8 @@ impl Run<'_, '_> {
                 DescentEnd::Converged | DescentEnd::Limit => {}
             }
             converged = info.end == DescentEnd::Converged && !loose;
-            if self.halt.is_some() || !loose {
+            let promising = info.feasibility <= PROMISING && info.stationarity <= PROMISING;
+            if self.halt.is_some() || !loose || !promising {
                 break;
             }
             let (mut factors, mut orthant, mut y) = l.export();
@@ -188,11 +185,15 @@ impl Run<'_, '_> {
                 self.keep(candidate, widths);
                 return true;
             }
-            let Some((block, vector)) = found.escape else { break };
+            let Some((block, vector)) = found.escape else {
+                break;
+            };
             if escape == ESCAPES {
                 break;
             }
-            let Some(next) = self.escape(&candidate, block, &vector, widths) else { break };
+            let Some(next) = self.escape(&candidate, block, &vector, widths) else {
+                break;
+            };
             // An escape that ends no lower leads nowhere.
             let gain = candidate.objective - next.objective;
             let worthwhile = gain > 1e-9 * (1.0 + candidate.objective.abs());
@@ -259,7 +260,9 @@ impl Run<'_, '_> {
             let mut l = Lagrangian::new(self.problem, self.op, &widths);
             random(&mut l, stream);
             l.sigma = super::descent::FIRST_SIGMA;
-            let Some(mut wide) = self.descend(l) else { continue };
+            let Some(mut wide) = self.descend(l) else {
+                continue;
+            };
             let mut certified = false;
             for _ in 0..ESCAPES {
                 if self.halt.is_some() {
@@ -267,8 +270,12 @@ impl Run<'_, '_> {
                 }
                 let found = self.certify(&wide);
                 certified = wide.feasibility <= FEASIBLE && found.gap <= self.params.certificate;
-                let Some((block, vector)) = found.escape.filter(|_| !certified) else { break };
-                let Some(next) = self.escape(&wide, block, &vector, &widths) else { break };
+                let Some((block, vector)) = found.escape.filter(|_| !certified) else {
+                    break;
+                };
+                let Some(next) = self.escape(&wide, block, &vector, &widths) else {
+                    break;
+                };
                 if !next.better_than(&wide) {
                     break;
                 }
@@ -286,8 +293,12 @@ impl Run<'_, '_> {
     /// Truncates a wide point to the widths asked for and descends; true when the result is certified.
     fn truncated(&mut self, wide: &Candidate) -> bool {
         let asked = self.params.widths.clone();
-        let factors: Vec<Factor> =
-            wide.factors.iter().zip(&asked).map(|(factor, &width)| resized(factor, width)).collect();
+        let factors: Vec<Factor> = wide
+            .factors
+            .iter()
+            .zip(&asked)
+            .map(|(factor, &width)| resized(factor, width))
+            .collect();
         let mut l = Lagrangian::new(self.problem, self.op, &asked);
         l.import(&factors, &wide.orthant, &wide.y);
         l.sigma = super::descent::FIRST_SIGMA;

@@ -35,8 +35,12 @@ impl Layout {
     #[track_caller]
     pub fn new(problem: &Problem, widths: &[usize]) -> Self {
         assert_eq!(widths.len(), problem.blocks().len(), "one width a block");
-        let shapes: Vec<(usize, usize)> =
-            problem.blocks().iter().zip(widths).map(|(block, &width)| (block.order, width)).collect();
+        let shapes: Vec<(usize, usize)> = problem
+            .blocks()
+            .iter()
+            .zip(widths)
+            .map(|(block, &width)| (block.order, width))
+            .collect();
         let mut end = 0;
         let ranges = shapes
             .iter()
@@ -176,7 +180,9 @@ impl<'a> Lagrangian<'a> {
         }
         let range = self.layout.orthant.clone();
         self.op.orthant_slack(&self.weights, self.scaling.cost, &mut self.orthant_slack);
-        for ((g, u), s) in self.gradient[range.clone()].iter_mut().zip(&self.z[range]).zip(&self.orthant_slack) {
+        for ((g, u), s) in
+            self.gradient[range.clone()].iter_mut().zip(&self.z[range]).zip(&self.orthant_slack)
+        {
             *g = 2.0 * s * u;
         }
     }
@@ -261,8 +267,12 @@ impl<'a> Lagrangian<'a> {
     /// Returns ||A(X) - b||_2 / (1 + ||b||_2) in the problem's own units.
     pub fn feasibility(&self, problem: &Problem) -> f64 {
         let variable = self.scaling.variable;
-        let squares: f64 =
-            self.residual.iter().zip(&self.scaling.rows).map(|(v, d)| (v * variable / d).powi(2)).sum();
+        let squares: f64 = self
+            .residual
+            .iter()
+            .zip(&self.scaling.rows)
+            .map(|(v, d)| (v * variable / d).powi(2))
+            .sum();
         squares.sqrt() / (1.0 + norm2(problem.rhs()))
     }
 
@@ -284,7 +294,8 @@ impl<'a> Lagrangian<'a> {
             .iter()
             .map(|u| self.scaling.variable * u * u)
             .collect();
-        let y = self.y.iter().zip(&self.scaling.rows).map(|(y, d)| y * d / self.scaling.cost).collect();
+        let y =
+            self.y.iter().zip(&self.scaling.rows).map(|(y, d)| y * d / self.scaling.cost).collect();
         (factors, orthant, y)
     }
 

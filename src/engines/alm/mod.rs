@@ -18,6 +18,7 @@ pub mod start;
 pub(crate) mod tests;
 
 use crate::budget::{Halt, Meter};
+use crate::linalg::vector::{distance, dot, norm2};
 use crate::problem::{Factor, Operator, Problem, StopReason};
 use crate::seed::Stream;
 use certificate::{Certificate, CertificateParams, certify};
@@ -168,6 +169,7 @@ fn solve_spheres(
         widest: 0,
         stop: StopReason::Converged,
     };
+    let mut least = Some(f64::INFINITY);
     for (k, block) in blocks.iter().enumerate() {
         let width = params.widths[k];
         let outcome = spheres::solve_block(block, &op.blocks[k], width, params, stream, meter);
@@ -175,6 +177,7 @@ fn solve_spheres(
             multipliers[id] = value;
         }
         info.objective += outcome.objective;
+        least = least.zip(outcome.least).map(|(a, b)| a.min(b));
         info.starts = info.starts.max(outcome.tried.max(1));
         info.widest = info.widest.max(outcome.widest);
         if !outcome.settled {
@@ -185,7 +188,16 @@ fn solve_spheres(
         }
         factors.push(outcome.factor);
     }
-    finish_info(problem, op, &factors, &[], &multipliers, meter, &mut info);
+    info.feasibility = relative_residual(problem, op, &factors, &[]);
+    info.certificate = least.map(|least| {
+        // The slack depends on the multipliers alone, so the eigenvalues found on the way are those of the end.
+        let dual = dot(problem.rhs(), &multipliers);
+        let trace: f64 = factors.iter().map(|factor| dot(&factor.data, &factor.data)).sum();
+        let drop = trace * least.min(0.0);
+        let gap = ((info.objective - dual).abs() - drop) / (1.0 + info.objective.abs());
+        Certificate { least, escape: None, gap, bound: dual + drop }
+    });
+    info.bound = info.certificate.as_ref().map(|found| found.bound);
     Ok(AlmSolution { factors, orthant: Vec::new(), multipliers, info })
 }
 
@@ -208,14 +220,18 @@ fn finish_info(
     meter: &mut Meter,
     info: &mut AlmInfo,
 ) {
-    let mut values = vec![0.0; op.constraints()];
-    op.apply_factors(factors, orthant, &mut values);
-    let distance = crate::linalg::vector::distance(&values, problem.rhs());
-    info.feasibility = distance / (1.0 + crate::linalg::vector::norm2(problem.rhs()));
+    info.feasibility = relative_residual(problem, op, factors, orthant);
     if meter.check().is_ok() {
         let settings = CertificateParams::default();
         let found = certify(problem, op, factors, orthant, y, &settings, meter);
         info.bound = Some(info.bound.map_or(found.bound, |bound| bound.max(found.bound)));
         info.certificate = Some(found);
     }
+}
+
+/// Returns ||A(X) + a(x) - b||_2 / (1 + ||b||_2).
+fn relative_residual(problem: &Problem, op: &Operator, factors: &[Factor], orthant: &[f64]) -> f64 {
+    let mut values = vec![0.0; op.constraints()];
+    op.apply_factors(factors, orthant, &mut values);
+    distance(&values, problem.rhs()) / (1.0 + norm2(problem.rhs()))
 }

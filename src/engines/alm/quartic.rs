@@ -130,7 +130,10 @@ mod tests {
             let value = |a: f64| a * (q[0] + a * (q[1] + a * (q[2] + a * q[3])));
             for k in -60..60 {
                 let other = a * 1.2f64.powi(k);
-                assert!(value(a) <= value(other) + 1e-12 * value(a).abs(), "{q:?}: {a} and {other}");
+                assert!(
+                    value(a) <= value(other) + 1e-12 * value(a).abs(),
+                    "{q:?}: {a} and {other}"
+                );
             }
         }
     }

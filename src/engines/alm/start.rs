@@ -32,7 +32,8 @@ fn fit_size(l: &mut Lagrangian<'_>) {
     l.z.iter_mut().for_each(|value| *value *= std::f64::consts::SQRT_2);
     l.refresh();
     // A(2X) - b less A(X) - b is A(X); b follows.
-    let image: Vec<f64> = l.residual.iter().zip(&residual).map(|(twice, once)| twice - once).collect();
+    let image: Vec<f64> =
+        l.residual.iter().zip(&residual).map(|(twice, once)| twice - once).collect();
     let right: Vec<f64> = image.iter().zip(&residual).map(|(a, v)| a - v).collect();
     let (aa, ab) = (dot(&image, &image), dot(&image, &right));
     let factor = if ab > 0.0 && aa > 0.0 {

@@ -108,7 +108,12 @@ pub(crate) fn mixed(seed: &str) -> (Problem, Vec<Factor>, Vec<f64>) {
     (Problem::new(blocks, 3, cost, constraints, rhs).unwrap(), factors, x)
 }
 
-fn loaded<'a>(problem: &Problem, op: &'a Operator, widths: &[usize], label: &str) -> Lagrangian<'a> {
+fn loaded<'a>(
+    problem: &Problem,
+    op: &'a Operator,
+    widths: &[usize],
+    label: &str,
+) -> Lagrangian<'a> {
     let mut l = Lagrangian::new(problem, op, widths);
     let mut draw = stream(label);
     start::random(&mut l, &mut draw);
@@ -172,7 +177,11 @@ fn the_quartic_is_exact_and_its_second_coefficient_is_half_the_hessian_form() {
     let coarse = (slope_at(2.0 * h, &mut l) - slope_at(-2.0 * h, &mut l)) / (4.0 * h);
     let fine = (slope_at(h, &mut l) - slope_at(-h, &mut l)) / (2.0 * h);
     let curvature = (4.0 * fine - coarse) / 3.0;
-    assert!((curvature - 2.0 * q[1]).abs() < 1e-8 * (1.0 + curvature.abs()), "{curvature} {}", q[1]);
+    assert!(
+        (curvature - 2.0 * q[1]).abs() < 1e-8 * (1.0 + curvature.abs()),
+        "{curvature} {}",
+        q[1]
+    );
     // The update equals the recomputation.
     l.z.copy_from_slice(&base);
     l.refresh();
@@ -366,8 +375,7 @@ fn a_balanced_graph_gives_its_signs_at_widths_one_and_two() {
 fn a_time_limit_still_gives_a_point() {
     let (problem, _) = balanced(3000, 3000, "limit");
     let op = Operator::new(&problem);
-    let budget =
-        crate::budget::Budget { wall: std::time::Duration::ZERO, memory: None };
+    let budget = crate::budget::Budget { wall: std::time::Duration::ZERO, memory: None };
     let interrupt = std::sync::Arc::new(std::sync::atomic::AtomicBool::new(false));
     let mut meter = Meter::start(budget, interrupt, crate::budget::Tracing::Off);
     std::thread::sleep(std::time::Duration::from_millis(2));

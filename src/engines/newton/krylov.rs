@@ -114,7 +114,10 @@ impl Minres {
             }
             meter.effort.operator_products += 3;
             meter.effort.flops += system.lagrangian().flops() + 30 * self.w.len() as u64;
-            if phi <= params.tolerance * first || beta <= f64::EPSILON * first || meter.check().is_err() {
+            if phi <= params.tolerance * first
+                || beta <= f64::EPSILON * first
+                || meter.check().is_err()
+            {
                 negate_multipliers(step, n);
                 return count;
             }

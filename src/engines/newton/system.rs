@@ -251,8 +251,7 @@ impl<'a> System<'a> {
                 pair += 1;
             }
         }
-        let target =
-            out.as_mut().submatrix_mut(range.start, range.start, range.len(), range.len());
+        let target = out.as_mut().submatrix_mut(range.start, range.start, range.len(), range.len());
         dense::syrk_lower(target, dense::Accumulate::Add, GAUGE, vectors.as_ref());
     }
 
@@ -279,7 +278,9 @@ impl<'a> System<'a> {
             *d += s;
         }
         multipliers[..m].fill(1e-12);
-        self.each_jacobian_entry(|id, place, value| multipliers[id] += value * value / diagonal[place]);
+        self.each_jacobian_entry(|id, place, value| {
+            multipliers[id] += value * value / diagonal[place]
+        });
     }
 
     /// Visits the entries (constraint, unknown, value) of J; a place may be visited more than once for

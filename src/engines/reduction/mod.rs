@@ -21,7 +21,7 @@ use crate::budget::{Halt, Meter};
 use crate::linalg::dense::{self, Accumulate};
 use crate::linalg::eigen::{SymmetricEigen, flops};
 use crate::linalg::null_space::null_space;
-use crate::linalg::{Mat, packed};
+use crate::linalg::{Mat, MatRef, packed};
 use crate::problem::{BlockOperator, Factor, Operator, Problem};
 
 /// Which end of the step is taken.
@@ -126,6 +126,41 @@ impl Spectral {
         Ok(Spectral { parts, orthant })
     }
 
+    /// Takes the eigenpairs of X_k = V_k V_k' from factors of full column rank, without forming X_k.
+    ///
+    /// # Errors
+    /// `Failed` when an eigendecomposition fails.
+    pub fn of_factors(factors: &[Factor], orthant: &[f64]) -> Result<Self, Halt> {
+        let mut parts = Vec::new();
+        for factor in factors {
+            let (n, r) = (factor.order, factor.width);
+            let v_t = MatRef::from_column_major_slice(&factor.data, r, n);
+            let mut gram = Mat::zeros(r, r);
+            dense::gemm(gram.as_mut(), Accumulate::Replace, 1.0, v_t, v_t.transpose());
+            let mut eigen = SymmetricEigen::new(r);
+            eigen.decompose(gram.as_ref()).map_err(|e| Halt::Failed(e.to_string()))?;
+            let mut basis = Mat::zeros(n, r);
+            let turn = eigen.vectors();
+            dense::gemm(basis.as_mut(), Accumulate::Replace, 1.0, v_t.transpose(), turn);
+            for j in 0..r {
+                let root = eigen.values()[j].max(f64::MIN_POSITIVE).sqrt();
+                basis.col_as_slice_mut(j).iter_mut().for_each(|value| *value /= root);
+            }
+            parts.push(Part { basis, values: eigen.values().to_vec() });
+        }
+        Ok(Spectral { parts, orthant: orthant.to_vec() })
+    }
+
+    /// Returns the number of eigenvalues above `cut` times the largest of their block, and of
+    /// positive scalars.
+    fn rank_above(&self, cut: f64) -> usize {
+        let above = |part: &Part| {
+            let top = part.values.last().copied().unwrap_or(0.0);
+            part.values.iter().filter(|value| **value > cut * top).count()
+        };
+        self.parts.iter().map(above).sum::<usize>() + self.active().count()
+    }
+
     /// Returns the sum of the block ranks and the number of positive scalars.
     pub fn total_rank(&self) -> usize {
         self.parts.iter().map(Part::rank).sum::<usize>() + self.active().count()
@@ -183,6 +218,10 @@ pub fn reduce(
     }
 }
 
+/// Ends are compared by the eigenvalues above this share of the largest: what should vanish at an end
+/// vanishes only up to the accuracy of the point.
+const SEEN: f64 = 1e-4;
+
 fn best_end(point: &Spectral, basis: &Mat<f64>, cut: f64) -> Result<Option<Spectral>, Halt> {
     let mut best: Option<Spectral> = None;
     for column in (0..basis.ncols()).rev() {
@@ -190,7 +229,7 @@ fn best_end(point: &Spectral, basis: &Mat<f64>, cut: f64) -> Result<Option<Spect
         let (low, high) = range(point, direction)?;
         for t in [high, low] {
             if let Some(next) = moved(point, direction, t, cut)?
-                && best.as_ref().is_none_or(|b| next.total_rank() < b.total_rank())
+                && best.as_ref().is_none_or(|b| next.rank_above(SEEN) < b.rank_above(SEEN))
             {
                 best = Some(next);
             }

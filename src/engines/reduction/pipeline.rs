@@ -32,6 +32,7 @@ pub fn reduce_relaxation(
     let op = Operator::with_storage(problem, Storage::Factored);
     let params = Params { rule, cut, null: 1e-7 };
     let mut point = Spectral::of(&solution.points, &solution.orthant, cut, meter)?;
+    settle(problem, &op, &mut point, &solution, meter)?;
     let test = uniqueness(problem, &op, &solution.slacks, &point, &params, meter)?;
     let reduced = match reduce(problem, &op, &mut point, &params, meter) {
         Ok(reduced) => reduced,
@@ -58,6 +59,32 @@ pub fn reduce_relaxation(
             reduced.free_directions
         ),
     })
+}
+
+/// Moves the truncated interior-point solution onto the optimal face by Newton steps on its factors:
+/// the interior point is off the face by the order of the gap, and reduction would magnify that. The
+/// point is kept as it is when the steps do not restore the constraints.
+fn settle(
+    problem: &Problem,
+    op: &Operator,
+    point: &mut Spectral,
+    solution: &ipm::Solution,
+    meter: &mut Meter,
+) -> Result<(), Halt> {
+    let mut factors: Vec<Factor> = point.parts.iter().map(super::Part::factor).collect();
+    if factors.iter().any(|factor| factor.width == 0) {
+        return Ok(());
+    }
+    let mut orthant = point.orthant.clone();
+    let mut y = solution.multipliers.clone();
+    let newton = NewtonParams { steps: 10, ..NewtonParams::default() };
+    let info = polish(op, problem, &mut factors, &mut orthant, &mut y, &newton, meter);
+    let value = solution.info.primal_value;
+    let change = (op.cost_of_factors(&factors, &orthant) - value).abs();
+    if info.feasibility <= RESTORED && change <= SAME_VALUE * (1.0 + value.abs()) {
+        *point = Spectral::of_factors(&factors, &orthant)?;
+    }
+    Ok(())
 }
 
 /// Cuts tried for the last truncation, from bold to the least that changes nothing.

@@ -42,7 +42,9 @@ pub fn recognise(problem: &Problem, blocks: &[BlockOperator]) -> Option<Vec<Sphe
     let mut fixed: Vec<Vec<Option<(usize, f64, f64)>>> =
         problem.blocks().iter().map(|block| vec![None; block.order]).collect();
     for (id, functional) in problem.constraints().iter().enumerate() {
-        let [(block, part)] = functional.parts.as_slice() else { return None };
+        let [(block, part)] = functional.parts.as_slice() else {
+            return None;
+        };
         if !functional.orthant.is_empty() {
             return None;
         }
@@ -176,7 +178,13 @@ impl SphereBlock {
             Rows::Dense(matrix) => {
                 for i in 0..self.order {
                     let q_t = MatRef::from_column_major_slice(q, width, self.order);
-                    dense::gemv(image, dense::Accumulate::Replace, 1.0, q_t, matrix.col_as_slice(i));
+                    dense::gemv(
+                        image,
+                        dense::Accumulate::Replace,
+                        1.0,
+                        q_t,
+                        matrix.col_as_slice(i),
+                    );
                     fall += reply(image, &mut q[i * width..][..width]);
                 }
             }

@@ -55,6 +55,8 @@ pub struct BlockOutcome {
     pub multipliers: Vec<(usize, f64)>,
     /// Objective of the factor.
     pub objective: f64,
+    /// Least eigenvalue of the block's slack at these multipliers, unless the budget ended before.
+    pub least: Option<f64>,
     /// Width of the lifted stage at its end.
     pub widest: usize,
     /// Points polished at the asked width.
@@ -142,6 +144,7 @@ pub fn solve_block(
         factor,
         multipliers: block.ids.iter().copied().zip(lifted.multipliers).collect(),
         objective: best.objective,
+        least: lifted.least,
         widest,
         tried,
         halt: lifted.halt,
@@ -154,6 +157,7 @@ struct Lifted {
     candidate: Candidate,
     multipliers: Vec<f64>,
     bound: f64,
+    least: Option<f64>,
     halt: Option<Halt>,
 }
 
@@ -164,7 +168,7 @@ impl Solver<'_> {
         let limit = first.max(rank_bound(n));
         let mut q = random_rows(n, first, stream);
         let mut halt = None;
-        let mut kept: Option<(f64, Vec<f64>)> = None;
+        let mut kept: Option<(f64, Vec<f64>, Option<f64>)> = None;
         for round in 0..=WIDENINGS {
             // 1. Descend; cut the width twice, where it is cheap to be wrong: the certificate tells.
             let mut ended = self.sweeps(&mut q, meter).err();
@@ -184,14 +188,14 @@ impl Solver<'_> {
             let dual = dot_radii(self.block, &y);
             if ended.is_some() {
                 halt = ended;
-                kept.get_or_insert((f64::NEG_INFINITY, y));
+                kept.get_or_insert((f64::NEG_INFINITY, y, None));
                 break;
             }
-                let (least, vector) = self.certify(&q, &y, meter);
+            let (least, vector) = self.certify(&q, &y, meter);
             let trace: f64 = self.block.radii.iter().map(|s| s * s).sum();
             let bound = dual + trace * least.min(0.0);
-            if kept.as_ref().is_none_or(|(best, _)| bound > *best) {
-                kept = Some((bound, y));
+            if kept.as_ref().is_none_or(|(best, _, _)| bound > *best) {
+                kept = Some((bound, y, Some(least)));
             }
             let certified = objective - bound <= self.params.certificate * (1.0 + objective.abs());
             let last = q.width >= limit && round > 1;
@@ -206,9 +210,9 @@ impl Solver<'_> {
             }
             q = widened(&q, (2 * q.width).min(limit).max(q.width + 1), &vector, stream);
         }
-        let (bound, multipliers) = kept.expect("the first round keeps its multipliers");
+        let (bound, multipliers, least) = kept.expect("the first round keeps its multipliers");
         let objective = self.objective(&q);
-        Lifted { candidate: Candidate { q, objective }, multipliers, bound, halt }
+        Lifted { candidate: Candidate { q, objective }, multipliers, bound, least, halt }
     }
 
     /// Brings a point to a minimiser at its width; returns why it ended early, if it did.

@@ -103,10 +103,11 @@ pub fn minimise(
         }
         // 1. Step. Its residual need not be far below the final tolerance.
         let forcing = FORCING.min(size / first.max(f64::MIN_POSITIVE)).max(0.1 * goal / size);
-        let model = match truncated_gradients(block, q, width, radius, forcing, params.inner, ws, meter) {
-            Ok(model) => model,
-            Err(halt) => return TrustEnd::Halted(halt),
-        };
+        let model =
+            match truncated_gradients(block, q, width, radius, forcing, params.inner, ws, meter) {
+                Ok(model) => model,
+                Err(halt) => return TrustEnd::Halted(halt),
+            };
         meter.effort.inner_steps += 1;
         // 2. Shorten it until the function falls as the model says: cheaper than a new subproblem.
         let slope = dot(&ws.gradient, &ws.eta);
