@@ -28,7 +28,7 @@ const RESERVED: &[(&str, &[&str])] = &[
     ("println!", &["cli"]),
     ("print!(", &["cli"]),
     ("process::exit", &["cli"]),
-    ("std::fs", &["runner", "cli"]),
+    ("std::fs", &["formats", "runner", "cli"]),
     ("std::env", &["runner", "cli"]),
     ("Instant::now", &["budget", "runner"]),
     ("SystemTime", &["runner"]),

@@ -1,0 +1,115 @@
+//! Runs the plan of the README as a user does, and holds its records against what is promised of
+//! families and methods; and a large sparse instance from planting to certificate.
+
+use std::collections::BTreeMap;
+use std::path::Path;
+use std::process::Command;
+
+type Row = BTreeMap<String, String>;
+
+fn rows(file: &Path) -> Vec<Row> {
+    let mut reader = csv::Reader::from_path(file).unwrap();
+    let names = reader.headers().unwrap().clone();
+    reader
+        .records()
+        .map(|record| {
+            let record = record.unwrap();
+            names.iter().map(str::to_owned).zip(record.iter().map(str::to_owned)).collect()
+        })
+        .collect()
+}
+
+fn run(plan: &Path, into: &Path, extra: &[&str]) {
+    let output = Command::new(env!("CARGO_BIN_EXE_rankassay"))
+        .args(["run", plan.to_str().unwrap(), "--into", into.to_str().unwrap(), "--quiet"])
+        .args(extra)
+        .output()
+        .unwrap();
+    let messages = String::from_utf8_lossy(&output.stderr);
+    assert!(output.status.success(), "exit {:?}: {messages}", output.status.code());
+}
+
+fn number(row: &Row, column: &str) -> f64 {
+    row[column].parse().unwrap_or_else(|_| panic!("{column} of {} is empty", row["trial"]))
+}
+
+fn select<'a>(rows: &'a [Row], family: &str, method: &str) -> Vec<&'a Row> {
+    let chosen: Vec<&Row> =
+        rows.iter().filter(|row| row["family"] == family && row["method"] == method).collect();
+    assert!(!chosen.is_empty(), "no trial of {method} on {family}");
+    chosen
+}
+
+fn solved(rows: &[&Row]) -> usize {
+    rows.iter().filter(|row| row["verdict"] == "solved").count()
+}
+
+#[test]
+fn the_quick_plan_keeps_its_promises() {
+    let folder = tempfile::tempdir().unwrap();
+    let plan = Path::new(env!("CARGO_MANIFEST_DIR")).join("instances/plans/quick.toml");
+    let (one, two) = (folder.path().join("one"), folder.path().join("two"));
+    run(&plan, &one, &["--jobs", "1"]);
+    run(&plan, &two, &["--jobs", "2"]);
+    let trials = rows(&one.join("trials.csv"));
+
+    // Times and memory aside, the number of workers changes nothing.
+    for (a, b) in trials.iter().zip(&rows(&two.join("trials.csv"))) {
+        for (column, value) in a {
+            if !["wall_s", "cpu_s", "peak_bytes"].contains(&column.as_str()) {
+                assert_eq!(value, &b[column], "{column} of {}", a["trial"]);
+            }
+        }
+    }
+    for name in ["accuracy-stable.csv", "rank-stable.csv"] {
+        let text = |run: &Path| std::fs::read_to_string(run.join("tables").join(name)).unwrap();
+        assert_eq!(text(&one), text(&two), "{name}");
+    }
+
+    // The relaxation is strictly below on the gap families and equal elsewhere.
+    for row in trials.iter().filter(|row| row["method"] == "relax-ipm") {
+        let (value, optimum) = (number(row, "raw_objective"), number(row, "optimum"));
+        let difference = (optimum - value) / (1.0 + optimum.abs());
+        match row["family"].as_str() {
+            "lattice-tiles" | "ky-fan-gap" => assert!(difference > 1e-4, "{}", row["trial"]),
+            "frustrated-loops" if row["parameters"].contains("density=500") => {
+                assert!(difference > 1e-4, "{}", row["trial"]);
+            }
+            "frustrated-loops" => assert!(difference > -1e-7, "{}", row["trial"]),
+            _ => assert!(difference.abs() <= 1e-7, "{}: {difference:e}", row["trial"]),
+        }
+    }
+
+    // The published rule stops at rank k - 1 (k = 4 by default); looking at both ends reaches 1.
+    for row in select(&trials, "sign-trap", "reduce-largest") {
+        assert_eq!(row["rank_at_1e-6"], "3", "{}", row["trial"]);
+    }
+    for row in select(&trials, "sign-trap", "reduce-both-ends") {
+        assert_eq!(row["rank_at_1e-6"], "1", "{}", row["trial"]);
+        assert_eq!(row["verdict"], "solved", "{}", row["trial"]);
+    }
+
+    let tight = select(&trials, "tight-unique", "factored-alm");
+    assert!(100 * solved(&tight) >= 95 * tight.len(), "{} of {}", solved(&tight), tight.len());
+    for family in ["lattice-tiles", "sign-trap"] {
+        let steered = select(&trials, family, "ipm-tail-weight");
+        assert!(2 * solved(&steered) >= steered.len(), "{family}: {}", solved(&steered));
+    }
+}
+
+#[test]
+fn a_graph_of_twenty_thousand_vertices_is_planted_solved_and_certified() {
+    let folder = tempfile::tempdir().unwrap();
+    let plan = Path::new(env!("CARGO_MANIFEST_DIR")).join("instances/plans/large-graph.toml");
+    let into = folder.path().join("run");
+    run(&plan, &into, &[]);
+    for row in rows(&into.join("trials.csv")) {
+        assert_eq!(row["order"], "20000");
+        assert_eq!(row["verdict"], "solved", "{}", row["message"]);
+        assert!(row["message"].contains("certified"), "{}", row["message"]);
+        assert!(number(&row, "peak_bytes") < 2_147_483_648.0);
+        // The multipliers prove the value from below as well.
+        let gap = number(&row, "optimum") - number(&row, "lower_bound");
+        assert!(gap <= 1e-5 * (1.0 + number(&row, "optimum").abs()), "gap {gap:e}");
+    }
+}
