@@ -152,6 +152,7 @@ pub(super) fn least_eigenpair(
             max_steps: params.max_steps,
             basis: 60,
             deflate: Some(range.as_ref()),
+            start_noise: 1.0,
             seed: params.seed,
         };
         let found = smallest_eigenpair(&mut operator, &start, &settings, workspace);
