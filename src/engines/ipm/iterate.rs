@@ -72,9 +72,21 @@ impl BlockState {
     }
 
     /// Factors X; false when it is not positive definite in floating point.
+    ///
+    /// Where no strictly feasible X exists, X becomes singular to rounding: the factor, which only
+    /// serves step lengths, is then taken of X plus up to 1e-12 times its largest diagonal entry.
     pub fn factor_x(&mut self, ws: &mut Workspace) -> bool {
-        dense::copy_into(self.x.as_ref(), self.lx.as_mut());
-        cholesky::factor_in_place(self.lx.as_mut(), ws).is_ok()
+        let top = (0..self.order).fold(0.0_f64, |m, i| m.max(self.x[(i, i)]));
+        for shift in [0.0, 1e-14, 1e-13, 1e-12] {
+            dense::copy_into(self.x.as_ref(), self.lx.as_mut());
+            for i in 0..self.order {
+                self.lx[(i, i)] += shift * top;
+            }
+            if cholesky::factor_in_place(self.lx.as_mut(), ws).is_ok() {
+                return true;
+            }
+        }
+        false
     }
 
     /// Factors S; false when it is not positive definite in floating point.

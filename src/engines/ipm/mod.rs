@@ -145,6 +145,9 @@ pub enum Steering {
     Free,
     /// Go on, and do not stop by the engine's own test.
     Hold,
+    /// Go on as with `Hold`, and stay central: the cost has just moved, so that a bold step would end
+    /// at the boundary. The centring parameter is at least one half.
+    Centre,
     /// Stop with this iterate.
     Stop,
 }

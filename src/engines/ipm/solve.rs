@@ -157,10 +157,15 @@ impl Run<'_> {
             // Step 1: residuals, the hook, stopping.
             let mut figures = self.figures();
             let mut may_stop = true;
+            let mut least_centring = 0.0;
             if let Some(hook) = hook.as_deref_mut() {
                 match self.steer(hook, &figures, meter) {
                     Steering::Free => {}
                     Steering::Hold => may_stop = false,
+                    Steering::Centre => {
+                        may_stop = false;
+                        least_centring = 0.5;
+                    }
                     Steering::Stop => {
                         outcome = Outcome::Optimal;
                         self.best = None;
@@ -194,7 +199,14 @@ impl Run<'_> {
             // Step 3: predictor, centring, corrector, step.
             meter.effort.inner_steps += 1;
             iteration += 1;
-            if !self.newton_step(&figures, meter) {
+            if self.newton_step(&figures, least_centring, meter) {
+                continue;
+            }
+            // A steered iterate may have drifted to the boundary: one centring step may free it.
+            let freed = least_centring > 0.0
+                && self.state.factor_schur(&mut meter.effort)
+                && self.newton_step(&figures, 1.0, meter);
+            if !freed {
                 outcome = Outcome::Stalled;
                 break;
             }
@@ -202,7 +214,7 @@ impl Run<'_> {
         Ok(self.finish(outcome, iteration, params))
     }
 
-    fn newton_step(&mut self, figures: &Figures, meter: &mut Meter) -> bool {
+    fn newton_step(&mut self, figures: &Figures, least_centring: f64, meter: &mut Meter) -> bool {
         let effort = &mut meter.effort;
         let state = &mut self.state;
         state.predictor(figures.residuals.dual, effort);
@@ -211,7 +223,7 @@ impl Run<'_> {
         let (a, b) = ((g * reach.primal).min(1.0), (g * reach.dual).min(1.0));
         let mu = state.mu;
         let predicted = state.trial_complementarity(a, b) / state.pairs();
-        let sigma = centring(mu, predicted, a.min(b));
+        let sigma = centring(mu, predicted, a.min(b)).max(least_centring);
         state.corrector(sigma * mu, effort);
         state.refine(REFINE_BELOW * (1.0 + self.b_norm), effort);
         let reach = state.reach(effort);

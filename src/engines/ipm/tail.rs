@@ -33,6 +33,8 @@ pub struct TailParams {
     pub tolerance: f64,
     /// Most steered iterations.
     pub patience: usize,
+    /// Steered iterations during which a given first subspace is held, when there is one.
+    pub held: usize,
 }
 
 /// How the first weight is chosen.
@@ -66,13 +68,21 @@ pub struct TailWeight {
     trial: Vec<Mat<f64>>,
     ws: Workspace,
     last: f64,
+    first: Option<Vec<Mat<f64>>>,
     /// What happened so far.
     pub info: TailInfo,
 }
 
 impl TailWeight {
     /// Makes the hook for blocks of the given orders and rank bounds.
-    pub fn new(blocks: &[crate::problem::Block], params: TailParams) -> Self {
+    ///
+    /// `first`, when given, holds one order x rank matrix with orthonormal columns per block: the
+    /// subspace outside which the tail is weighed at first, instead of the leading eigenvectors of X.
+    pub fn new(
+        blocks: &[crate::problem::Block],
+        params: TailParams,
+        first: Option<Vec<Mat<f64>>>,
+    ) -> Self {
         let square = |n: usize| Mat::zeros(n, n);
         TailWeight {
             params,
@@ -82,6 +92,7 @@ impl TailWeight {
             trial: blocks.iter().map(|b| square(b.order)).collect(),
             ws: Workspace::new(),
             last: f64::INFINITY,
+            first,
             info: TailInfo::default(),
         }
     }
@@ -107,7 +118,10 @@ impl TailWeight {
         let n = steer.points[index].nrows();
         let rho = self.info.rho;
         let change = &mut self.target[index];
-        let top = self.eigen[index].vectors().subcols(n - rank, rank);
+        let top = match &self.first {
+            Some(first) if self.info.steered <= self.params.held => first[index].as_ref(),
+            _ => self.eigen[index].vectors().subcols(n - rank, rank),
+        };
         dense::gemm(change.as_mut(), Accumulate::Replace, -rho, top, top.transpose());
         for i in 0..n {
             change[(i, i)] += rho;
@@ -172,6 +186,6 @@ impl Hook for TailWeight {
                 self.turn(index, rank, steer, meter);
             }
         }
-        Steering::Hold
+        if ratio > 1e-5 { Steering::Centre } else { Steering::Hold }
     }
 }
