@@ -152,7 +152,7 @@ fn run(
         }
         let lambda = (factor * merit).clamp(1e-14, 1e3);
         let solved = match &mut solver {
-            Solver::Dense(dense) => dense.solve(&mut system, lambda, &mut step, meter),
+            Solver::Dense(dense) => dense.solve(&mut system, lambda, merit, &mut step, meter),
             Solver::Krylov(minres) => {
                 let tolerance = (0.1 * merit).clamp(1e-10, 1e-2);
                 let settings = MinresParams { tolerance, steps: params.krylov_steps, lambda };

@@ -22,6 +22,8 @@ pub const INNER_SHRINK: f64 = 0.3;
 /// A descent ends when the residual has not halved in this many outer steps: it is then stationary and
 /// infeasible, or at the limit of the arithmetic.
 pub const PATIENCE: usize = 8;
+/// A descent ends when this many inner minimisations in a row reached their step limit.
+pub const INNER_LIMITS: usize = 3;
 /// Residual and cost are recomputed from their definitions after this many updates.
 pub const REFRESH_EVERY: usize = 64;
 
@@ -167,6 +169,7 @@ pub fn descend(
     let right = 1.0 + l.rhs_norm();
     l.refresh();
     let mut best = f64::INFINITY;
+    let mut limits = 0;
     let (mut marked, mut marked_at) = (f64::INFINITY, 0);
     let mut tolerance = FIRST_INNER.max(params.stationarity);
     let mut info = DescentInfo {
@@ -201,7 +204,8 @@ pub fn descend(
                 l.sigma *= SIGMA_GROWTH;
                 continue;
             }
-            InnerEnd::Converged | InnerEnd::Limit => {}
+            InnerEnd::Converged => limits = 0,
+            InnerEnd::Limit => limits += 1,
         }
         let feasible = info.feasibility <= params.feasibility;
         // The gradient at the updated multipliers is the one just measured, so the update loses nothing.
@@ -215,6 +219,9 @@ pub fn descend(
         }
         if feasible && info.stationarity <= params.stationarity {
             info.end = DescentEnd::Converged;
+            return info;
+        }
+        if limits >= INNER_LIMITS {
             return info;
         }
         if !fell && !feasible {

@@ -3,7 +3,7 @@
 use super::certificate::{Certificate, CertificateParams, certify};
 use super::descent::{DescentEnd, DescentParams, DescentWorkspace, descend};
 use super::lagrangian::Lagrangian;
-use super::start::{principal, random, resized};
+use super::start::{numerical_rank, principal, random, resized};
 use super::{AlmError, AlmInfo, AlmParams, AlmSolution, Finish, Lift, finish_info, stop_of};
 use crate::budget::{Halt, Meter};
 use crate::engines::newton::{NewtonEnd, NewtonParams, polish};
@@ -18,6 +18,8 @@ const HAND_OVER: f64 = 1e-5;
 const PROMISING: f64 = 1e-3;
 /// A point is feasible for the choice between points when its residual is at most this.
 const FEASIBLE: f64 = 1e-7;
+/// Eigenvalues of X above this share of the largest count for the rank of a wide point that is not finished.
+const LOW_SHARE: f64 = 1e-3;
 /// Most escapes along a negative eigenvector at one width.
 const ESCAPES: usize = 4;
 
@@ -96,17 +98,34 @@ impl Run<'_, '_> {
         self.judge(candidate, widths)
     }
 
+    fn descent_params(&self, least: f64) -> DescentParams {
+        let p = self.params;
+        DescentParams {
+            feasibility: p.feasibility.max(least),
+            stationarity: p.stationarity.max(least),
+            outer: p.outer,
+            inner: p.inner,
+            pairs: p.pairs,
+        }
+    }
+
+    /// Descends to the hand-over tolerance only; none when that runs off.
+    fn descend_loosely(&mut self, l: &mut Lagrangian<'_>) -> Option<Candidate> {
+        let params = self.descent_params(HAND_OVER);
+        let mut ws = DescentWorkspace::new(l.layout.length(), params.pairs);
+        match descend(self.problem, l, &params, &mut ws, self.meter).end {
+            DescentEnd::Halted(halt) => self.halt = Some(halt),
+            DescentEnd::Diverged => return None,
+            DescentEnd::Converged | DescentEnd::Limit => {}
+        }
+        Some(self.candidate(l, false))
+    }
+
     /// Descends from a loaded Lagrangian, finishes by Newton steps.
     fn descend(&mut self, mut l: Lagrangian<'_>) -> Option<Candidate> {
         let p = self.params;
         let loose = p.finish == Finish::Newton;
-        let mut params = DescentParams {
-            feasibility: if loose { HAND_OVER.max(p.feasibility) } else { p.feasibility },
-            stationarity: if loose { HAND_OVER.max(p.stationarity) } else { p.stationarity },
-            outer: p.outer,
-            inner: p.inner,
-            pairs: p.pairs,
-        };
+        let mut params = self.descent_params(if loose { HAND_OVER } else { 0.0 });
         let mut ws = DescentWorkspace::new(l.layout.length(), p.pairs);
         let mut converged = false;
         // Newton steps are tried at the loose tolerance and, should they stall, once more at a tighter one.

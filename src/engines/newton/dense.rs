@@ -3,8 +3,9 @@
 //! K = H + lambda I + gamma G + sigma J'J is factored by Cholesky: with sigma large enough that succeeds if
 //! and only if the Hessian is positive definite on the null space of J, so a failure means that the step
 //! would not lead to a minimiser, and lambda must grow. Adding sigma J'J does not change the solution.
-//! The multipliers follow from the Schur complement J K^-1 J' + delta I, delta = 1e-12 times its largest
-//! diagonal entry, which tolerates dependent constraints; one step of refinement removes the trace of delta.
+//! The multipliers follow from the Schur complement J K^-1 J' + delta I, delta being its largest diagonal entry
+//! times the merit (within bounds), which tolerates dependent constraints and multipliers that are not unique;
+//! refinement removes the trace of delta where J K^-1 J' is positive.
 
 use super::system::System;
 use crate::budget::Meter;
@@ -14,8 +15,11 @@ use crate::linalg::{Mat, MatMut, cholesky, dense};
 
 /// Weight of J'J in K, in scaled data.
 const SIGMA: f64 = 10.0;
-/// Share of the largest diagonal entry that regularises the Schur complement.
-const DELTA: f64 = 1e-12;
+/// Least and greatest share of the largest diagonal entry that regularises the Schur complement; between them
+/// it is the merit, so that multipliers which the constraints leave open move by no more than the error.
+const DELTA: (f64, f64) = (1e-12, 1e-3);
+/// Solutions of the Schur complement in one step: the first and refinements that take delta out again.
+const ROUNDS: usize = 3;
 
 /// Matrices of the dense solution, kept between steps.
 pub struct DenseSolver {
@@ -51,6 +55,7 @@ impl DenseSolver {
         &mut self,
         system: &mut System<'_>,
         lambda: f64,
+        merit: f64,
         step: &mut [f64],
         meter: &mut Meter,
     ) -> bool {
@@ -76,14 +81,15 @@ impl DenseSolver {
         cholesky::solve_lower_matrix(self.k.as_ref(), self.half.as_mut());
         let half_t = self.half.as_ref().transpose();
         dense::syrk_lower(self.schur.as_mut(), dense::Accumulate::Replace, 1.0, half_t);
+        let delta = merit.clamp(DELTA.0, DELTA.1);
         let largest = (0..m).fold(0.0_f64, |s, i| s.max(self.schur[(i, i)]));
         for i in 0..m {
-            self.schur[(i, i)] += DELTA * largest + f64::MIN_POSITIVE;
+            self.schur[(i, i)] += delta * largest + f64::MIN_POSITIVE;
         }
         if m > 0 && cholesky::factor_in_place(self.schur.as_mut(), &mut self.workspace).is_err() {
             return false;
         }
-        // 3. dz0 = K^-1 (-g - sigma J'v), then dy from J dz = -v, then one refinement of that equation.
+        // 3. dz0 = K^-1 (-g - sigma J'v), then dy from J dz = -v, with refinements of that equation.
         let (dz, dy) = step.split_at_mut(n);
         let gradient = system.gradient();
         for i in 0..n {
@@ -92,7 +98,7 @@ impl DenseSolver {
         dense::gemv(dz, dense::Accumulate::Add, -SIGMA, self.jacobian.as_ref(), system.residual());
         cholesky::solve_vector(self.k.as_ref(), dz);
         dy.fill(0.0);
-        for _ in 0..2 {
+        for _ in 0..ROUNDS {
             for i in 0..m {
                 self.right[i] = -system.residual()[i];
             }
