@@ -141,12 +141,15 @@ impl State {
         effort.flops += self.plan.flops + flops::cholesky(self.b.len());
         effort.factorisations += 1;
         let m = self.b.len();
+        // A constraint that fixes X on its own range to zero leaves a diagonal entry that is rounding
+        // noise, of either sign: it is shifted by a share of the largest entry.
+        let top = (0..m).fold(0.0_f64, |t, i| t.max(self.schur[(i, i)]));
         let mut shift = 0.0;
         for _ in 0..12 {
             dense::copy_into(self.schur.as_ref(), self.factor.as_mut());
             if shift > 0.0 {
                 for i in 0..m {
-                    self.factor[(i, i)] += shift * self.schur[(i, i)].max(f64::MIN_POSITIVE);
+                    self.factor[(i, i)] += shift * self.schur[(i, i)].abs().max(1e-12 * top);
                 }
             }
             if cholesky::factor_in_place(self.factor.as_mut(), &mut self.ws).is_ok() {

@@ -202,9 +202,8 @@ impl Run<'_> {
             if self.newton_step(&figures, least_centring, meter) {
                 continue;
             }
-            // A steered iterate may have drifted to the boundary: one centring step may free it.
-            let freed = least_centring > 0.0
-                && self.state.factor_schur(&mut meter.effort)
+            // The iterate may have drifted to the boundary: one centring step may free it.
+            let freed = self.state.factor_schur(&mut meter.effort)
                 && self.newton_step(&figures, 1.0, meter);
             if !freed {
                 outcome = Outcome::Stalled;
