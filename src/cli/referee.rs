@@ -35,13 +35,8 @@ pub(super) fn execute(command: &Referee) -> Ended {
     let read = solution::read(&command.solution, &instance.problem)
         .map_err(|error| Failure::from(&error))?;
     let known = instance.knowledge.known();
-    let judgement = judge(
-        &instance.problem,
-        &read.answer,
-        &known,
-        &Tolerance::default(),
-    )
-    .map_err(|contradiction| Failure::defect(format!("internal error: {contradiction}")))?;
+    let judgement = judge(&instance.problem, &read.answer, &known, &Tolerance::default())
+        .map_err(|contradiction| Failure::defect(format!("internal error: {contradiction}")))?;
     let optimum = instance.knowledge.optimum_value();
     say_and_end(&if command.json {
         as_json(&judgement, optimum)
@@ -77,10 +72,7 @@ fn figures(judgement: &Judgement, optimum: Option<f64>) -> Vec<(&'static str, Op
         ("rank_at_1e-8", rank(2)),
         ("tail_ratio", judgement.tail_ratio),
         ("restored_feasibility", judgement.restored_feasibility),
-        (
-            "restored_objective_error",
-            judgement.restored_objective_error,
-        ),
+        ("restored_objective_error", judgement.restored_objective_error),
         ("raw_feasibility", judgement.raw_feasibility),
         ("raw_objective", judgement.raw_objective),
         ("lower_bound", judgement.lower_bound),
@@ -93,10 +85,7 @@ fn as_json(judgement: &Judgement, optimum: Option<f64>) -> String {
         value[name] = json!(figure.and_then(measured));
     }
     value["dimacs"] = json!(judgement.dimacs);
-    format!(
-        "{}\n",
-        serde_json::to_string_pretty(&value).expect("the figures are plain data")
-    )
+    format!("{}\n", serde_json::to_string_pretty(&value).expect("the figures are plain data"))
 }
 
 fn as_text(judgement: &Judgement, optimum: Option<f64>) -> String {
