@@ -723,6 +723,36 @@ fn what_plant_writes_inspect_reads_and_a_plan_imports() {
 }
 
 #[test]
+fn a_point_from_a_file_is_refereed() {
+    let folder = tempfile::tempdir().unwrap();
+    let plant =
+        ["plant", "balanced-graph", "order=3", "degree=2", "--seed", "5", "--to", "one.assay.json"];
+    assert_eq!(program(folder.path(), &plant).status.code(), Some(0));
+    let referee = |signs: &str| {
+        let text = format!("{{\"version\": 1, \"blocks\": [{{\"factor\": {signs}}}]}}");
+        std::fs::write(folder.path().join("point.json"), text).unwrap();
+        program(folder.path(), &["referee", "one.assay.json", "point.json", "--json"])
+    };
+    // Of the four sign vectors up to a common sign exactly one is planted.
+    let mut verdicts = Vec::new();
+    for signs in ["[[1],[1],[1]]", "[[1],[1],[-1]]", "[[1],[-1],[1]]", "[[-1],[1],[1]]"] {
+        let output = referee(signs);
+        assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
+        let judged: serde_json::Value = serde_json::from_slice(&output.stdout).unwrap();
+        assert_eq!(
+            (judged["rank_at_1e-6"].as_u64(), judged["optimum"].as_f64()),
+            (Some(1), Some(0.0))
+        );
+        verdicts.push(judged["verdict"].as_str().unwrap().to_owned());
+    }
+    verdicts.sort();
+    assert_eq!(verdicts, ["solved", "suboptimal", "suboptimal", "suboptimal"]);
+    let output = referee("[[1],[1]]");
+    assert_eq!(output.status.code(), Some(2));
+    assert!(String::from_utf8_lossy(&output.stderr).contains("point.json:1:"), "{output:?}");
+}
+
+#[test]
 fn the_roster_lists_what_the_registries_hold() {
     let folder = tempfile::tempdir().unwrap();
     let output = program(folder.path(), &["roster", "--json"]);
