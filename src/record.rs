@@ -287,12 +287,7 @@ impl Record {
 
     /// Returns the record without its time and memory figures: what two runs of one plan share.
     pub fn without_measurements(&self) -> Self {
-        Record {
-            wall_s: None,
-            cpu_s: None,
-            peak_bytes: None,
-            ..self.clone()
-        }
+        Record { wall_s: None, cpu_s: None, peak_bytes: None, ..self.clone() }
     }
 }
 
@@ -391,10 +386,7 @@ mod tests {
             ranks: Some([1, 2, 3]),
             ..Figures::default()
         };
-        let cost = Cost {
-            wall_s: Some(f64::INFINITY),
-            ..Cost::default()
-        };
+        let cost = Cost { wall_s: Some(f64::INFINITY), ..Cost::default() };
         let record = Record::assemble(
             Identity::default(),
             Verdict::Malformed,
@@ -404,14 +396,8 @@ mod tests {
             None,
             "two\nlines",
         );
-        assert_eq!(
-            (record.digits, record.objective, record.wall_s),
-            (None, None, None)
-        );
-        assert_eq!(
-            (record.feasibility, record.rank_at_1e8),
-            (Some(0.5), Some(3))
-        );
+        assert_eq!((record.digits, record.objective, record.wall_s), (None, None, None));
+        assert_eq!((record.feasibility, record.rank_at_1e8), (Some(0.5), Some(3)));
         assert_eq!(record.message, "two lines");
     }
 
@@ -440,10 +426,7 @@ mod tests {
     #[test]
     fn words_are_the_serialised_form() {
         for verdict in Verdict::ALL {
-            assert_eq!(
-                serde_json::to_string(&verdict).unwrap(),
-                format!("\"{}\"", verdict.word())
-            );
+            assert_eq!(serde_json::to_string(&verdict).unwrap(), format!("\"{}\"", verdict.word()));
         }
     }
 }

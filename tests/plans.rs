@@ -10,12 +10,7 @@ fn tests_folder() -> PathBuf {
 }
 
 fn run_in(folder: &Path, arguments: &[&str]) -> Output {
-    Command::cargo_bin("rankassay")
-        .unwrap()
-        .current_dir(folder)
-        .args(arguments)
-        .output()
-        .unwrap()
+    Command::cargo_bin("rankassay").unwrap().current_dir(folder).args(arguments).output().unwrap()
 }
 
 fn entries(folder: &Path) -> Vec<String> {
@@ -36,12 +31,7 @@ fn every_broken_plan_is_refused_with_its_place_and_leaves_nothing() {
     for name in entries(&tests_folder().join("broken-plans")) {
         let text =
             std::fs::read_to_string(tests_folder().join("broken-plans").join(&name)).unwrap();
-        let fragment = text
-            .lines()
-            .next()
-            .unwrap()
-            .strip_prefix("# expect: ")
-            .unwrap();
+        let fragment = text.lines().next().unwrap().strip_prefix("# expect: ").unwrap();
         let folder = tempfile::tempdir().unwrap();
         std::fs::write(folder.path().join(&name), &text).unwrap();
         for into in [&["run", &name][..], &["run", &name, "--into", "out"][..]] {
@@ -49,17 +39,10 @@ fn every_broken_plan_is_refused_with_its_place_and_leaves_nothing() {
             let told = String::from_utf8_lossy(&output.stderr).into_owned();
             let expected = format!("error: {name}:{fragment}");
             if output.status.code() != Some(2) || !told.starts_with(&expected) {
-                failures.push(format!(
-                    "{name}: {:?}\n{told}expected {expected}",
-                    output.status
-                ));
+                failures.push(format!("{name}: {:?}\n{told}expected {expected}", output.status));
             }
             assert!(output.stdout.is_empty(), "{name} printed results");
-            assert_eq!(
-                entries(folder.path()),
-                [name.as_str()],
-                "{name} left something behind"
-            );
+            assert_eq!(entries(folder.path()), [name.as_str()], "{name} left something behind");
         }
         checked += 1;
     }
@@ -77,28 +60,15 @@ fn the_plan_that_the_broken_ones_come_from_runs() {
     std::fs::write(folder.path().join("valid.toml"), VALID).unwrap();
     for number in 1..=2 {
         let output = run_in(folder.path(), &["run", "valid.toml"]);
-        assert_eq!(
-            output.status.code(),
-            Some(0),
-            "{}",
-            String::from_utf8_lossy(&output.stderr)
-        );
+        assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
         let printed = String::from_utf8_lossy(&output.stdout).into_owned();
-        for title in [
-            "Accuracy by family and method",
-            "Rank by family",
-            "Runtime and effort by family",
-        ] {
+        for title in
+            ["Accuracy by family and method", "Rank by family", "Runtime and effort by family"]
+        {
             assert!(printed.contains(title), "{printed}");
         }
-        assert!(
-            printed.ends_with(&format!("Run folder: runs/valid-{number}\n")),
-            "{printed}"
-        );
-        assert!(
-            printed.lines().all(|line| line.chars().count() <= 100),
-            "{printed}"
-        );
+        assert!(printed.ends_with(&format!("Run folder: runs/valid-{number}\n")), "{printed}");
+        assert!(printed.lines().all(|line| line.chars().count() <= 100), "{printed}");
     }
     assert_eq!(entries(&folder.path().join("runs")), ["valid-1", "valid-2"]);
 }
@@ -106,16 +76,9 @@ fn the_plan_that_the_broken_ones_come_from_runs() {
 #[test]
 fn an_error_inside_an_imported_file_names_the_place_there() {
     let folder = tempfile::tempdir().unwrap();
-    let plan = VALID.replace(
-        "[[method]]",
-        "[[import]]\npath = \"broken.dat-s\"\n[[method]]",
-    );
+    let plan = VALID.replace("[[method]]", "[[import]]\npath = \"broken.dat-s\"\n[[method]]");
     std::fs::write(folder.path().join("plan.toml"), plan).unwrap();
-    std::fs::write(
-        folder.path().join("broken.dat-s"),
-        "1\n1\n2\n1\n0 1 1 x 1\n",
-    )
-    .unwrap();
+    std::fs::write(folder.path().join("broken.dat-s"), "1\n1\n2\n1\n0 1 1 x 1\n").unwrap();
     let output = run_in(folder.path(), &["run", "plan.toml"]);
     let told = String::from_utf8_lossy(&output.stderr).into_owned();
     assert_eq!(output.status.code(), Some(2), "{told}");
@@ -135,17 +98,9 @@ fn paths_in_a_plan_start_from_the_plan() {
     )
     .unwrap();
     let output = run_in(folder.path(), &["run", "plans/plan.toml", "--into", "out"]);
-    assert_eq!(
-        output.status.code(),
-        Some(0),
-        "{}",
-        String::from_utf8_lossy(&output.stderr)
-    );
+    assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
     let instances = std::fs::read_to_string(folder.path().join("out/instances.csv")).unwrap();
-    assert!(
-        instances.contains("\ntwo-rank=1,imported,path=../two.dat-s rank=1,"),
-        "{instances}"
-    );
+    assert!(instances.contains("\ntwo-rank=1,imported,path=../two.dat-s rank=1,"), "{instances}");
 }
 
 #[test]
@@ -157,15 +112,9 @@ fn a_used_folder_is_not_written_over() {
     let output = run_in(folder.path(), &["run", "plan.toml", "--into", "out"]);
     let told = String::from_utf8_lossy(&output.stderr).into_owned();
     assert_eq!(output.status.code(), Some(2), "{told}");
-    assert!(
-        told.contains("out is not empty") && told.contains("--resume"),
-        "{told}"
-    );
+    assert!(told.contains("out is not empty") && told.contains("--resume"), "{told}");
     assert_eq!(entries(&folder.path().join("out")), ["mine.txt"]);
-    let output = run_in(
-        folder.path(),
-        &["run", "plan.toml", "--into", "nothing", "--resume"],
-    );
+    let output = run_in(folder.path(), &["run", "plan.toml", "--into", "nothing", "--resume"]);
     let told = String::from_utf8_lossy(&output.stderr).into_owned();
     assert_eq!(output.status.code(), Some(2), "{told}");
     assert!(told.contains("nothing holds no run to resume"), "{told}");

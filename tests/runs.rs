@@ -60,20 +60,14 @@ const BLANK: MethodCard = MethodCard {
 macro_rules! scripted {
     ($id:literal, $play:expr) => {{
         static CARD: MethodCard = MethodCard { id: $id, ..BLANK };
-        Scripted {
-            card: &CARD,
-            play: $play,
-        }
+        Scripted { card: &CARD, play: $play }
     }};
 }
 
 fn answer(order: usize, columns: &[Vec<f64>], stop: StopReason) -> Answer {
     let block = BlockPoint::Factor(Factor::from_columns(order, columns));
     Answer {
-        point: Point {
-            blocks: vec![block],
-            orthant: vec![],
-        },
+        point: Point { blocks: vec![block], orthant: vec![] },
         multipliers: None,
         stop,
         note: String::new(),
@@ -96,16 +90,9 @@ fn wait_for_the_limit(trial: &Trial) -> Halt {
 /// Every scripted method and the verdict it must get on [`PAIR`].
 fn cast() -> Vec<(Scripted, Verdict)> {
     vec![
+        (scripted!("good", |_, _| Ok(good(StopReason::Converged))), Verdict::Solved),
         (
-            scripted!("good", |_, _| Ok(good(StopReason::Converged))),
-            Verdict::Solved,
-        ),
-        (
-            scripted!("lazy", |_, _| Ok(answer(
-                2,
-                &[vec![1.0, 1.0]],
-                StopReason::Converged
-            ))),
+            scripted!("lazy", |_, _| Ok(answer(2, &[vec![1.0, 1.0]], StopReason::Converged))),
             Verdict::Suboptimal,
         ),
         (
@@ -133,24 +120,13 @@ fn cast() -> Vec<(Scripted, Verdict)> {
         ),
         (
             scripted!("no-blocks", |_, _| {
-                let point = Point {
-                    blocks: vec![],
-                    orthant: vec![],
-                };
+                let point = Point { blocks: vec![], orthant: vec![] };
                 let (multipliers, note) = (None, String::new());
-                Ok(Answer {
-                    point,
-                    multipliers,
-                    stop: StopReason::Converged,
-                    note,
-                })
+                Ok(Answer { point, multipliers, stop: StopReason::Converged, note })
             }),
             Verdict::Malformed,
         ),
-        (
-            scripted!("slow", |_, trial| Err(wait_for_the_limit(trial))),
-            Verdict::TimeLimit,
-        ),
+        (scripted!("slow", |_, trial| Err(wait_for_the_limit(trial))), Verdict::TimeLimit),
         (
             scripted!("slow-lazy", |_, trial| {
                 wait_for_the_limit(trial);
@@ -189,14 +165,8 @@ fn cast() -> Vec<(Scripted, Verdict)> {
             }),
             Verdict::MemoryLimit,
         ),
-        (
-            scripted!("refuses", |_, _| Err(Halt::Refused("no pairs".to_owned()))),
-            Verdict::Refused,
-        ),
-        (
-            scripted!("fails", |_, _| Err(Halt::Failed("a zero pivot".to_owned()))),
-            Verdict::Failed,
-        ),
+        (scripted!("refuses", |_, _| Err(Halt::Refused("no pairs".to_owned()))), Verdict::Refused),
+        (scripted!("fails", |_, _| Err(Halt::Failed("a zero pivot".to_owned()))), Verdict::Failed),
         (
             scripted!("claims-infeasible", |_, _| Ok(answer(
                 2,
@@ -248,16 +218,8 @@ fn pair_plan<'a>(folder: &Path, methods: &'a [&'a dyn Method], extra: &str) -> P
     for method in methods {
         text += &format!("[[method]]\nname = \"{}\"\n", method.card().id);
     }
-    Plan::parse(
-        &text,
-        "pair.toml",
-        folder,
-        Roster {
-            families: families::registry(),
-            methods,
-        },
-    )
-    .unwrap()
+    Plan::parse(&text, "pair.toml", folder, Roster { families: families::registry(), methods })
+        .unwrap()
 }
 
 fn run(plan: &Plan<'_>, options: &RunOptions) -> Outcome {
@@ -265,21 +227,14 @@ fn run(plan: &Plan<'_>, options: &RunOptions) -> Outcome {
 }
 
 fn by_method<'a>(outcome: &'a Outcome, method: &str) -> &'a Record {
-    outcome
-        .records
-        .iter()
-        .find(|record| record.method == method)
-        .unwrap()
+    outcome.records.iter().find(|record| record.method == method).unwrap()
 }
 
 #[test]
 fn every_way_a_method_can_end_has_its_verdict() {
     let folder = tempfile::tempdir().unwrap();
     let cast = cast();
-    let methods: Vec<&dyn Method> = cast
-        .iter()
-        .map(|(method, _)| method as &dyn Method)
-        .collect();
+    let methods: Vec<&dyn Method> = cast.iter().map(|(method, _)| method as &dyn Method).collect();
     let plan = pair_plan(folder.path(), &methods, "");
     let outcome = run(&plan, &options(Target::New(folder.path().join("out")), 6));
     assert_eq!(outcome.ending, Ending::Complete);
@@ -289,46 +244,17 @@ fn every_way_a_method_can_end_has_its_verdict() {
         assert_eq!(record.optimum, Some(-2.0));
     }
     let record = by_method(&outcome, "panics");
-    assert!(
-        record
-            .message
-            .contains("panicked: a scripted defect (runs.rs:"),
-        "{}",
-        record.message
-    );
+    assert!(record.message.contains("panicked: a scripted defect (runs.rs:"), "{}", record.message);
     assert!(record.wall_s.is_some() && record.objective.is_none());
-    assert!(
-        by_method(&outcome, "fails")
-            .message
-            .contains("a zero pivot")
-    );
-    assert!(
-        by_method(&outcome, "deaf")
-            .message
-            .contains("after the wall-time limit")
-    );
-    assert!(
-        by_method(&outcome, "greedy-deaf")
-            .message
-            .contains("more than the memory limit")
-    );
+    assert!(by_method(&outcome, "fails").message.contains("a zero pivot"));
+    assert!(by_method(&outcome, "deaf").message.contains("after the wall-time limit"));
+    assert!(by_method(&outcome, "greedy-deaf").message.contains("more than the memory limit"));
     let record = by_method(&outcome, "claims-infeasible");
     assert_eq!(record.stop_reason, "primal-infeasible");
-    assert!(
-        record.message.contains("primal infeasible"),
-        "{}",
-        record.message
-    );
+    assert!(record.message.contains("primal infeasible"), "{}", record.message);
     let good = by_method(&outcome, "good");
-    assert_eq!(
-        (good.objective, good.rank_at_1e6, good.target_rank),
-        (Some(-2.0), Some(1), 1)
-    );
-    assert!(
-        good.peak_bytes.is_some_and(|bytes| bytes < 1 << 20),
-        "{:?}",
-        good.peak_bytes
-    );
+    assert_eq!((good.objective, good.rank_at_1e6, good.target_rank), (Some(-2.0), Some(1), 1));
+    assert!(good.peak_bytes.is_some_and(|bytes| bytes < 1 << 20), "{:?}", good.peak_bytes);
     let text = std::fs::read_to_string(folder.path().join("out/trials.csv")).unwrap();
     for row in csv::Reader::from_reader(text.as_bytes()).records() {
         let not_finite = |cell: &str| cell.parse::<f64>().is_ok_and(|value| !value.is_finite());
@@ -341,11 +267,7 @@ fn every_way_a_method_can_end_has_its_verdict() {
 fn an_answer_of_high_rank_earns_nothing_its_user_could_not_use() {
     let folder = tempfile::tempdir().unwrap();
     let identity = scripted!("identity", |_, _| {
-        Ok(answer(
-            2,
-            &[vec![1.0, 0.0], vec![0.0, 1.0]],
-            StopReason::Converged,
-        ))
+        Ok(answer(2, &[vec![1.0, 0.0], vec![0.0, 1.0]], StopReason::Converged))
     });
     let methods: [&dyn Method; 1] = [&identity];
     let outcome = run(
@@ -368,10 +290,7 @@ fn random_plan<'a>(methods: &'a [&'a dyn Method], seed: u64) -> Plan<'a> {
          [[family]]\nname = \"balanced-graph\"\norder = 12\ncount = 4\n[[method]]\nname = \"random\"\n\
          [[method]]\nname = \"random\"\nlabel = \"twin\"\n"
     );
-    let roster = Roster {
-        families: families::registry(),
-        methods,
-    };
+    let roster = Roster { families: families::registry(), methods };
     Plan::parse(&text, "random.toml", Path::new(""), roster).unwrap()
 }
 
@@ -388,21 +307,12 @@ fn runs_agree_for_any_number_of_jobs_and_differ_for_another_seed() {
     let outcomes: Vec<Outcome> = [1, 2, 7]
         .iter()
         .map(|&jobs| {
-            run(
-                &plan,
-                &options(
-                    Target::New(folder.path().join(format!("jobs-{jobs}"))),
-                    jobs,
-                ),
-            )
+            run(&plan, &options(Target::New(folder.path().join(format!("jobs-{jobs}"))), jobs))
         })
         .collect();
     assert_eq!(outcomes[0].records.len(), (4 * 3 + 4) * 2 * 2);
     for outcome in &outcomes[1..] {
-        assert_eq!(
-            unmeasured(&outcome.records),
-            unmeasured(&outcomes[0].records)
-        );
+        assert_eq!(unmeasured(&outcome.records), unmeasured(&outcomes[0].records));
         assert_eq!(outcome.instances, outcomes[0].instances);
     }
     let files = |jobs: usize| {
@@ -412,29 +322,16 @@ fn runs_agree_for_any_number_of_jobs_and_differ_for_another_seed() {
     let records = &outcomes[0].records;
     // A label moves nothing, a repeat does.
     let steps = |method: &str, repeat: u64| -> Vec<_> {
-        let same = records
-            .iter()
-            .filter(|record| record.method == method && record.repeat == repeat);
+        let same =
+            records.iter().filter(|record| record.method == method && record.repeat == repeat);
         same.map(|record| record.inner_steps).collect()
     };
     assert_eq!(steps("random", 1), steps("twin", 1));
     assert_ne!(steps("random", 1), steps("random", 2));
-    let other = run(
-        &random_plan(&methods, 12),
-        &options(Target::New(folder.path().join("other")), 2),
-    );
-    assert!(
-        other
-            .instances
-            .iter()
-            .zip(&outcomes[0].instances)
-            .all(|(a, b)| a.digest != b.digest)
-    );
-    let ids: Vec<_> = records
-        .iter()
-        .take(2)
-        .map(|record| record.trial.as_str())
-        .collect();
+    let other =
+        run(&random_plan(&methods, 12), &options(Target::New(folder.path().join("other")), 2));
+    assert!(other.instances.iter().zip(&outcomes[0].instances).all(|(a, b)| a.digest != b.digest));
+    let ids: Vec<_> = records.iter().take(2).map(|record| record.trial.as_str()).collect();
     assert_eq!(
         ids,
         [
@@ -453,26 +350,18 @@ fn adding_a_method_or_a_family_changes_no_other_record() {
         "seed = 3\n[[family]]\nname = \"tight-unique\"\norder = 8\n[[method]]\nname = \"random\"\n";
     let large = "seed = 3\n[[family]]\nname = \"balanced-graph\"\norder = 9\n[[family]]\nname = \"tight-unique\"\n\
         order = [7, 8]\ncount = 2\n[[method]]\nname = \"random\"\nlabel = \"first\"\n[[method]]\nname = \"random\"\n";
-    let roster = Roster {
-        families: families::registry(),
-        methods: &methods,
-    };
+    let roster = Roster { families: families::registry(), methods: &methods };
     let outcome = |text: &str, name: &str| {
         let plan = Plan::parse(text, "plan.toml", Path::new(""), roster).unwrap();
         run(&plan, &options(Target::New(folder.path().join(name)), 1))
     };
     let (small, large) = (outcome(small, "small"), outcome(large, "large"));
-    let [alone] = small.records.as_slice() else {
-        panic!("one trial")
-    };
+    let [alone] = small.records.as_slice() else { panic!("one trial") };
     let same = large
         .records
         .iter()
         .find(|record| record.instance == alone.instance && record.method == "random");
-    let expected = Record {
-        trial: same.unwrap().trial.clone(),
-        ..alone.without_measurements()
-    };
+    let expected = Record { trial: same.unwrap().trial.clone(), ..alone.without_measurements() };
     assert_eq!(same.unwrap().without_measurements(), expected);
 }
 
@@ -483,17 +372,8 @@ fn only_a_selection_runs_and_resuming_adds_the_rest() {
     let methods: [&dyn Method; 1] = [&random];
     let plan = random_plan(&methods, 1);
     let out = folder.path().join("out");
-    let selection = Selection {
-        only: Some(Pattern::new("balanced*twin")),
-        shard: None,
-    };
-    let first = run(
-        &plan,
-        &RunOptions {
-            selection,
-            ..options(Target::New(out.clone()), 2)
-        },
-    );
+    let selection = Selection { only: Some(Pattern::new("balanced*twin")), shard: None };
+    let first = run(&plan, &RunOptions { selection, ..options(Target::New(out.clone()), 2) });
     assert_eq!(first.records.len(), 4 * 2);
     assert!(
         first
@@ -501,21 +381,11 @@ fn only_a_selection_runs_and_resuming_adds_the_rest() {
             .iter()
             .all(|record| record.family == "balanced-graph" && record.method == "twin")
     );
-    let nothing = Selection {
-        only: Some(Pattern::new("nowhere")),
-        shard: None,
-    };
-    let options_of_none = RunOptions {
-        selection: nothing,
-        ..options(Target::Resume(out.clone()), 2)
-    };
+    let nothing = Selection { only: Some(Pattern::new("nowhere")), shard: None };
+    let options_of_none =
+        RunOptions { selection: nothing, ..options(Target::Resume(out.clone()), 2) };
     let error = runner::run(&plan, &options_of_none, &Silent::default()).unwrap_err();
-    assert!(
-        error
-            .to_string()
-            .contains("no trial of the plan is selected"),
-        "{error}"
-    );
+    assert!(error.to_string().contains("no trial of the plan is selected"), "{error}");
     let whole = run(&plan, &options(Target::Resume(out), 2));
     let fresh = run(&plan, &options(Target::New(folder.path().join("fresh")), 1));
     assert_eq!(unmeasured(&whole.records), unmeasured(&fresh.records));
@@ -531,17 +401,8 @@ fn shards_make_up_the_plan() {
     let mut runs = Vec::new();
     for part in 1..=3 {
         let out = folder.path().join(format!("part-{part}"));
-        let selection = Selection {
-            only: None,
-            shard: Some(format!("{part}/3").parse().unwrap()),
-        };
-        run(
-            &plan,
-            &RunOptions {
-                selection,
-                ..options(Target::New(out.clone()), 1)
-            },
-        );
+        let selection = Selection { only: None, shard: Some(format!("{part}/3").parse().unwrap()) };
+        run(&plan, &RunOptions { selection, ..options(Target::New(out.clone()), 1) });
         runs.push((out.display().to_string(), journal::read(&out).unwrap()));
     }
     runs.reverse();
@@ -550,12 +411,7 @@ fn shards_make_up_the_plan() {
     assert_eq!(unmeasured(&merged.records), unmeasured(&fresh.records));
     assert_eq!(merged.instances, fresh.instances);
     runs.push(runs[0].clone());
-    assert!(
-        runner::merge(&runs)
-            .unwrap_err()
-            .to_string()
-            .contains("both recorded")
-    );
+    assert!(runner::merge(&runs).unwrap_err().to_string().contains("both recorded"));
 }
 
 /// Runs the random plan whole and returns the folder and its journal's text.
@@ -576,21 +432,12 @@ fn a_torn_tail_is_cut_and_its_trial_runs_again() {
     let fresh = unmeasured(&journal_records(&out));
     let lines = text.lines().count();
     // In the middle of the last line, of a line halfway, of the second and of the first line.
-    for kept in [
-        text.len() - 5,
-        text.len() / 2,
-        text.find('\n').unwrap() + 9,
-        20,
-    ] {
+    for kept in [text.len() - 5, text.len() / 2, text.find('\n').unwrap() + 9, 20] {
         std::fs::write(out.join(journal::FILE), &text[..kept]).unwrap();
         let silent = Silent::default();
         let resumed =
             runner::run(&plan, &options(Target::Resume(out.clone()), 2), &silent).unwrap();
-        assert_eq!(
-            sorted(unmeasured(&resumed.records)),
-            sorted(fresh.clone()),
-            "cut at {kept}"
-        );
+        assert_eq!(sorted(unmeasured(&resumed.records)), sorted(fresh.clone()), "cut at {kept}");
         if kept > text.find('\n').unwrap() {
             assert!(silent.notices.lock().unwrap()[0].contains("cut off in the middle"));
         }
@@ -617,12 +464,8 @@ fn an_altered_journal_and_a_changed_plan_are_refused() {
     let (out, text) = recorded(folder.path(), &plan);
     let refusal = |text: &str, plan: &Plan<'_>| {
         std::fs::write(out.join(journal::FILE), text).unwrap();
-        let error = runner::run(
-            plan,
-            &options(Target::Resume(out.clone()), 2),
-            &Silent::default(),
-        )
-        .unwrap_err();
+        let error = runner::run(plan, &options(Target::Resume(out.clone()), 2), &Silent::default())
+            .unwrap_err();
         assert_eq!(
             std::fs::read_to_string(out.join(journal::FILE)).unwrap(),
             text,
@@ -636,10 +479,10 @@ fn an_altered_journal_and_a_changed_plan_are_refused() {
     let at = text.rfind("\"objective\":").unwrap() + "\"objective\":".len() + 3;
     let digit = if &text[at..=at] == "1" { "2" } else { "1" };
     let altered = format!("{}{digit}{}", &text[..at], &text[at + 1..]);
-    assert!(refusal(&altered, &plan).contains(&format!(
-        ":{}: the line does not agree",
-        text.lines().count()
-    )));
+    assert!(
+        refusal(&altered, &plan)
+            .contains(&format!(":{}: the line does not agree", text.lines().count()))
+    );
     let last = text.lines().last().unwrap();
     assert!(refusal(&format!("{text}{last}\n"), &plan).contains("is recorded twice"));
     let head = text.lines().next().unwrap();
@@ -671,15 +514,10 @@ fn an_interrupted_run_keeps_its_records_and_goes_on() {
     let plan = random_plan(&methods, 4);
     let out = folder.path().join("out");
     let options_now = options(Target::New(out.clone()), 1);
-    let impatient = Impatient {
-        interrupt: Arc::clone(&options_now.interrupt),
-        seen: Mutex::new(0),
-    };
+    let impatient =
+        Impatient { interrupt: Arc::clone(&options_now.interrupt), seen: Mutex::new(0) };
     let first = runner::run(&plan, &options_now, &impatient).unwrap();
-    assert_eq!(
-        (first.ending, first.records.len()),
-        (Ending::Interrupted, 5)
-    );
+    assert_eq!((first.ending, first.records.len()), (Ending::Interrupted, 5));
     let resumed = run(&plan, &options(Target::Resume(out), 2));
     let fresh = run(&plan, &options(Target::New(folder.path().join("fresh")), 1));
     assert_eq!(resumed.ending, Ending::Complete);
@@ -698,9 +536,7 @@ impl Family for Liar {
     }
 
     fn plant(&self, parameters: &Settings, stream: &mut Stream) -> Result<Planted, PlantError> {
-        let mut planted = families::find("balanced-graph")
-            .unwrap()
-            .plant(parameters, stream)?;
+        let mut planted = families::find("balanced-graph").unwrap().plant(parameters, stream)?;
         planted.optimum += 1.0;
         Ok(planted)
     }
@@ -709,12 +545,7 @@ impl Family for Liar {
 #[test]
 fn an_answer_better_than_a_certified_optimum_stops_the_run() {
     let honest = families::find("balanced-graph").unwrap().card();
-    let liar = Liar {
-        card: FamilyCard {
-            id: "liar",
-            ..*honest
-        },
-    };
+    let liar = Liar { card: FamilyCard { id: "liar", ..*honest } };
     let families: [&dyn Family; 2] = [families::find("balanced-graph").unwrap(), &liar];
     let solver = rankassay::methods::find("relax-ipm").unwrap();
     let methods: [&dyn Method; 1] = [solver];
@@ -722,25 +553,13 @@ fn an_answer_better_than_a_certified_optimum_stops_the_run() {
         [[method]]\nname = \"relax-ipm\"\n";
     let folder = tempfile::tempdir().unwrap();
     let out = folder.path().join("out");
-    let roster = Roster {
-        families: &families,
-        methods: &methods,
-    };
+    let roster = Roster { families: &families, methods: &methods };
     let plan = Plan::parse(text, "plan.toml", Path::new(""), roster).unwrap();
-    let error = runner::run(
-        &plan,
-        &options(Target::New(out.clone()), 1),
-        &Silent::default(),
-    )
-    .unwrap_err();
-    let RunError::Internal { trial, detail } = &error else {
-        panic!("{error}")
-    };
+    let error =
+        runner::run(&plan, &options(Target::New(out.clone()), 1), &Silent::default()).unwrap_err();
+    let RunError::Internal { trial, detail } = &error else { panic!("{error}") };
     assert!(trial.starts_with("0002-liar-"), "{trial}");
-    assert!(
-        detail.contains("contradicts the certified optimum"),
-        "{detail}"
-    );
+    assert!(detail.contains("contradicts the certified optimum"), "{detail}");
     assert_eq!(journal_records(&out).len(), 1);
 }
 
@@ -777,10 +596,7 @@ fn ctrl_c_keeps_every_record_and_says_how_to_go_on() {
         if text.matches("\"kind\":\"trial\"").count() >= 3 {
             break;
         }
-        assert!(
-            started.elapsed() < Duration::from_secs(120),
-            "no trial in two minutes"
-        );
+        assert!(started.elapsed() < Duration::from_secs(120), "no trial in two minutes");
         std::thread::sleep(Duration::from_millis(5));
     }
     let sent = std::process::Command::new("kill")
@@ -792,14 +608,8 @@ fn ctrl_c_keeps_every_record_and_says_how_to_go_on() {
     let told = String::from_utf8_lossy(&output.stderr).into_owned();
     assert_eq!(output.status.code(), Some(130), "{told}");
     let command = told.lines().last().unwrap().trim();
-    assert!(
-        command.ends_with(" run long.toml --into runs/long-1 --resume --jobs 2"),
-        "{told}"
-    );
-    let kept = journal::read(&folder.path().join("runs/long-1"))
-        .unwrap()
-        .records
-        .len();
+    assert!(command.ends_with(" run long.toml --into runs/long-1 --resume --jobs 2"), "{told}");
+    let kept = journal::read(&folder.path().join("runs/long-1")).unwrap().records.len();
     assert!((3..100).contains(&kept), "{kept} records");
     // The command as it was printed.
     let resumed = std::process::Command::new("sh")
@@ -808,30 +618,18 @@ fn ctrl_c_keeps_every_record_and_says_how_to_go_on() {
         .current_dir(folder.path())
         .output()
         .unwrap();
-    assert_eq!(
-        resumed.status.code(),
-        Some(0),
-        "{}",
-        String::from_utf8_lossy(&resumed.stderr)
-    );
+    assert_eq!(resumed.status.code(), Some(0), "{}", String::from_utf8_lossy(&resumed.stderr));
     assert!(
         String::from_utf8_lossy(&resumed.stderr).contains(&format!("{kept} are recorded already"))
     );
     assert_eq!(
-        program(
-            folder.path(),
-            &["run", "long.toml", "--jobs", "1", "--quiet"]
-        )
-        .status
-        .code(),
+        program(folder.path(), &["run", "long.toml", "--jobs", "1", "--quiet"]).status.code(),
         Some(0)
     );
     for name in ["accuracy", "rank", "runtime", "failures", "relaxation"] {
         let read = |run: &str| {
             std::fs::read_to_string(
-                folder
-                    .path()
-                    .join(format!("runs/{run}/tables/{name}-stable.csv")),
+                folder.path().join(format!("runs/{run}/tables/{name}-stable.csv")),
             )
             .unwrap()
         };
@@ -847,26 +645,13 @@ fn tabulate_makes_the_tables_of_the_run_again() {
     let shard = |part: &str, into: &str| {
         let output = program(
             folder.path(),
-            &[
-                "run",
-                "plan.toml",
-                "--quiet",
-                "--into",
-                into,
-                "--shard",
-                part,
-            ],
+            &["run", "plan.toml", "--quiet", "--into", into, "--shard", part],
         );
-        assert!(
-            output.status.success() || output.status.code() == Some(2),
-            "{output:?}"
-        );
+        assert!(output.status.success() || output.status.code() == Some(2), "{output:?}");
         output.status.success()
     };
     assert_eq!(
-        program(folder.path(), &["run", "plan.toml", "--into", "whole"])
-            .status
-            .code(),
+        program(folder.path(), &["run", "plan.toml", "--into", "whole"]).status.code(),
         Some(0)
     );
     let mut arguments = vec!["tabulate", "--into", "merged"];
@@ -877,20 +662,11 @@ fn tabulate_makes_the_tables_of_the_run_again() {
         }
     }
     let output = program(folder.path(), &arguments);
-    assert_eq!(
-        output.status.code(),
-        Some(0),
-        "{}",
-        String::from_utf8_lossy(&output.stderr)
-    );
+    assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
     for name in ["accuracy", "rank", "runtime", "failures", "relaxation"] {
         let read = |run: &str| {
-            std::fs::read_to_string(
-                folder
-                    .path()
-                    .join(format!("{run}/tables/{name}-stable.csv")),
-            )
-            .unwrap()
+            std::fs::read_to_string(folder.path().join(format!("{run}/tables/{name}-stable.csv")))
+                .unwrap()
         };
         assert_eq!(read("whole"), read("merged"), "{name}");
     }
@@ -902,28 +678,12 @@ fn tabulate_makes_the_tables_of_the_run_again() {
 #[test]
 fn what_plant_writes_inspect_reads_and_a_plan_imports() {
     let folder = tempfile::tempdir().unwrap();
-    let plant = [
-        "plant",
-        "tight-unique",
-        "order=7",
-        "rank=2",
-        "--seed",
-        "5",
-        "--to",
-        "one.assay.json",
-    ];
+    let plant =
+        ["plant", "tight-unique", "order=7", "rank=2", "--seed", "5", "--to", "one.assay.json"];
     for _ in 0..2 {
         assert_eq!(program(folder.path(), &plant).status.code(), Some(0));
     }
-    let other = [
-        "plant",
-        "tight-unique",
-        "order=8",
-        "--seed",
-        "5",
-        "--to",
-        "one.assay.json",
-    ];
+    let other = ["plant", "tight-unique", "order=8", "--seed", "5", "--to", "one.assay.json"];
     let output = program(folder.path(), &other);
     assert_eq!(output.status.code(), Some(2));
     assert!(String::from_utf8_lossy(&output.stderr).contains("nothing is written over"));
@@ -937,41 +697,24 @@ fn what_plant_writes_inspect_reads_and_a_plan_imports() {
         rank = 2\n[[method]]\nname = \"relax-ipm\"\n";
     std::fs::write(folder.path().join("plan.toml"), plan).unwrap();
     assert_eq!(
-        program(
-            folder.path(),
-            &["run", "plan.toml", "--into", "out", "--quiet"]
-        )
-        .status
-        .code(),
+        program(folder.path(), &["run", "plan.toml", "--into", "out", "--quiet"]).status.code(),
         Some(0)
     );
     let contents = journal::read(&folder.path().join("out")).unwrap();
     let digest = |family: &str| {
-        let instance = contents
-            .instances
-            .iter()
-            .find(|instance| instance.family == family)
-            .unwrap();
+        let instance =
+            contents.instances.iter().find(|instance| instance.family == family).unwrap();
         assert_eq!(instance.optimum_known, "certified");
         instance.digest.clone()
     };
     assert_eq!(digest("imported"), digest("tight-unique"));
     assert_eq!(facts["digest"].as_str(), Some(digest("imported").as_str()));
-    assert!(
-        contents
-            .records
-            .iter()
-            .all(|record| record.verdict == Verdict::Solved)
-    );
+    assert!(contents.records.iter().all(|record| record.verdict == Verdict::Solved));
     // A certificate that was tampered with proves nothing.
     let text = std::fs::read_to_string(folder.path().join("one.assay.json")).unwrap();
     let at = text.find("\"multipliers\"").unwrap();
     let digit = at + text[at..].find(|c: char| c.is_ascii_digit()).unwrap();
-    let number = if &text[digit..=digit] == "1" {
-        "2"
-    } else {
-        "1"
-    };
+    let number = if &text[digit..=digit] == "1" { "2" } else { "1" };
     let altered = format!("{}{number}{}", &text[..digit], &text[digit + 1..]);
     std::fs::write(folder.path().join("two.assay.json"), altered).unwrap();
     let output = program(folder.path(), &["inspect", "two.assay.json"]);
@@ -980,32 +723,49 @@ fn what_plant_writes_inspect_reads_and_a_plan_imports() {
 }
 
 #[test]
+fn a_point_from_a_file_is_refereed() {
+    let folder = tempfile::tempdir().unwrap();
+    let plant =
+        ["plant", "balanced-graph", "order=3", "degree=2", "--seed", "5", "--to", "one.assay.json"];
+    assert_eq!(program(folder.path(), &plant).status.code(), Some(0));
+    let referee = |signs: &str| {
+        let text = format!("{{\"version\": 1, \"blocks\": [{{\"factor\": {signs}}}]}}");
+        std::fs::write(folder.path().join("point.json"), text).unwrap();
+        program(folder.path(), &["referee", "one.assay.json", "point.json", "--json"])
+    };
+    // Of the four sign vectors up to a common sign exactly one is planted.
+    let mut verdicts = Vec::new();
+    for signs in ["[[1],[1],[1]]", "[[1],[1],[-1]]", "[[1],[-1],[1]]", "[[-1],[1],[1]]"] {
+        let output = referee(signs);
+        assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
+        let judged: serde_json::Value = serde_json::from_slice(&output.stdout).unwrap();
+        assert_eq!(
+            (judged["rank_at_1e-6"].as_u64(), judged["optimum"].as_f64()),
+            (Some(1), Some(0.0))
+        );
+        verdicts.push(judged["verdict"].as_str().unwrap().to_owned());
+    }
+    verdicts.sort();
+    assert_eq!(verdicts, ["solved", "suboptimal", "suboptimal", "suboptimal"]);
+    let output = referee("[[1],[1]]");
+    assert_eq!(output.status.code(), Some(2));
+    assert!(String::from_utf8_lossy(&output.stderr).contains("point.json:1:"), "{output:?}");
+}
+
+#[test]
 fn the_roster_lists_what_the_registries_hold() {
     let folder = tempfile::tempdir().unwrap();
     let output = program(folder.path(), &["roster", "--json"]);
     let cards: serde_json::Value = serde_json::from_slice(&output.stdout).unwrap();
-    let ids: Vec<&str> = cards
-        .as_array()
-        .unwrap()
-        .iter()
-        .map(|card| card["id"].as_str().unwrap())
-        .collect();
-    let mut expected: Vec<&str> = families::registry()
-        .iter()
-        .map(|family| family.card().id)
-        .collect();
-    expected.extend(
-        rankassay::methods::registry()
-            .iter()
-            .map(|method| method.card().id),
-    );
+    let ids: Vec<&str> =
+        cards.as_array().unwrap().iter().map(|card| card["id"].as_str().unwrap()).collect();
+    let mut expected: Vec<&str> =
+        families::registry().iter().map(|family| family.card().id).collect();
+    expected.extend(rankassay::methods::registry().iter().map(|method| method.card().id));
     assert_eq!(ids, expected);
     for card in cards.as_array().unwrap() {
         for field in ["title", "class", "source"] {
-            assert!(
-                card[field].as_str().is_some_and(|text| !text.is_empty()),
-                "{card}"
-            );
+            assert!(card[field].as_str().is_some_and(|text| !text.is_empty()), "{card}");
         }
     }
     let output = program(folder.path(), &["roster", "families", "tight-unique"]);
@@ -1020,10 +780,7 @@ fn the_roster_lists_what_the_registries_hold() {
 fn a_reader_that_goes_away_is_no_error() {
     let folder = tempfile::tempdir().unwrap();
     let binary = assert_cmd::cargo::cargo_bin("rankassay");
-    let script = format!(
-        "'{}' roster families tight-unique; echo $? >&2",
-        binary.display()
-    );
+    let script = format!("'{}' roster families tight-unique; echo $? >&2", binary.display());
     let output = std::process::Command::new("sh")
         .arg("-c")
         .arg(format!("{{ {script}; }} | true"))

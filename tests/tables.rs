@@ -49,9 +49,7 @@ struct Sketch {
 }
 
 fn record(number: usize, instance: &InstanceRecord, sketch: &Sketch) -> Record {
-    let error = sketch
-        .objective
-        .map(|objective| (objective - 10.0_f64).abs() / 11.0);
+    let error = sketch.objective.map(|objective| (objective - 10.0_f64).abs() / 11.0);
     Record::assemble(
         Identity {
             trial: format!("{number:04}-{}-{}", instance.instance, sketch.method),
@@ -100,10 +98,8 @@ fn scene() -> (Vec<Record>, Vec<InstanceRecord>, Vec<MethodRecord>) {
         instance("tight-1", "tight-unique", "tight"),
         instance("tiles-0", "lattice-tiles", "gap"),
     ];
-    let methods = vec![
-        method("relax-ipm", "relaxation"),
-        method("factored-alm+width=bound", "factored"),
-    ];
+    let methods =
+        vec![method("relax-ipm", "relaxation"), method("factored-alm+width=bound", "factored")];
     let relax = |instance, verdict, objective, rank, seconds| Sketch {
         instance,
         method: "relax-ipm",
@@ -126,15 +122,7 @@ fn scene() -> (Vec<Record>, Vec<InstanceRecord>, Vec<MethodRecord>) {
     };
     let sketches = [
         relax(0, Verdict::Solved, 10.0 + 2e-9, 1, 0.0123),
-        factored(
-            0,
-            Verdict::Solved,
-            "converged",
-            Some(10.0),
-            Some(1),
-            0.5,
-            "",
-        ),
+        factored(0, Verdict::Solved, "converged", Some(10.0), Some(1), 0.5, ""),
         relax(1, Verdict::Near, 10.0 - 3e-8, 1, 0.02),
         factored(
             1,
@@ -146,15 +134,7 @@ fn scene() -> (Vec<Record>, Vec<InstanceRecord>, Vec<MethodRecord>) {
             "the method panicked: a | pivot, \"zero\"",
         ),
         relax(2, Verdict::Infeasible, 6.2, 5, 0.3),
-        factored(
-            2,
-            Verdict::TimeLimit,
-            "time-limit",
-            Some(10.7),
-            Some(1),
-            20.01,
-            "",
-        ),
+        factored(2, Verdict::TimeLimit, "time-limit", Some(10.7), Some(1), 20.01, ""),
     ];
     let records = sketches
         .iter()
@@ -178,21 +158,14 @@ fn with_input<T>(make: impl Fn(&Input<'_>) -> T) -> T {
 #[test]
 fn the_summary_is_aligned_and_fits() {
     let text = with_input(tables::summary);
-    assert!(
-        text.lines()
-            .all(|line| line.chars().count() <= tables::TEXT_WIDTH)
-    );
+    assert!(text.lines().all(|line| line.chars().count() <= tables::TEXT_WIDTH));
     insta::assert_snapshot!("summary", text);
 }
 
 #[test]
 fn tables_as_markdown() {
     let text = with_input(|input| {
-        tables::all(input)
-            .iter()
-            .map(tables::Table::to_markdown)
-            .collect::<Vec<_>>()
-            .join("\n")
+        tables::all(input).iter().map(tables::Table::to_markdown).collect::<Vec<_>>().join("\n")
     });
     insta::assert_snapshot!("markdown", text);
 }
@@ -228,10 +201,7 @@ fn stable_tables_hold_no_time_and_no_memory() {
             wall_limit_s: 20.0,
             tolerance: [1e-6; 3],
         };
-        tables::all(&input)
-            .iter()
-            .map(|table| table.stable().to_csv())
-            .collect::<Vec<_>>()
+        tables::all(&input).iter().map(|table| table.stable().to_csv()).collect::<Vec<_>>()
     };
     assert_eq!(stable(&records), stable(&slower));
 }
@@ -254,11 +224,7 @@ fn long_names_are_cut_on_the_terminal_and_kept_in_files() {
         tolerance: [1e-6; 3],
     };
     let text = tables::summary(&input);
-    assert!(
-        text.lines()
-            .all(|line| line.chars().count() <= tables::TEXT_WIDTH),
-        "{text}"
-    );
+    assert!(text.lines().all(|line| line.chars().count() <= tables::TEXT_WIDTH), "{text}");
     assert!(tables::all(&input)[0].to_csv().contains(&long));
 }
 

@@ -30,11 +30,7 @@ struct Storage {
 }
 
 fn storage(problem: &Problem) -> Storage {
-    let mut storage = Storage {
-        entries: 0,
-        outer_products: 0,
-        rank_one: 0,
-    };
+    let mut storage = Storage { entries: 0, outer_products: 0, rank_one: 0 };
     let mut add = |functional: &Functional| {
         storage.entries += functional.orthant.len();
         for (_, part) in &functional.parts {
@@ -42,11 +38,8 @@ fn storage(problem: &Problem) -> Storage {
                 Coefficient::Sparse(matrix) => storage.entries += matrix.stored(),
                 Coefficient::Outer(sum) => {
                     storage.outer_products += sum.terms.len();
-                    storage.entries += sum
-                        .terms
-                        .iter()
-                        .map(|term| term.vector.len())
-                        .sum::<usize>();
+                    storage.entries +=
+                        sum.terms.iter().map(|term| term.vector.len()).sum::<usize>();
                     storage.rank_one += usize::from(sum.terms.len() == 1);
                 }
             }
@@ -74,11 +67,8 @@ pub(super) fn execute(command: &Inspect) -> Ended {
         })
         .collect();
     // An entry of an upper triangle or of a diagonal, out of all such places of all functionals.
-    let triangle: f64 = problem
-        .blocks()
-        .iter()
-        .map(|b| b.order as f64 * (b.order as f64 + 1.0) / 2.0)
-        .sum();
+    let triangle: f64 =
+        problem.blocks().iter().map(|b| b.order as f64 * (b.order as f64 + 1.0) / 2.0).sum();
     let places = (triangle + problem.orthant() as f64) * (1.0 + problem.constraints().len() as f64);
     let density = storage.entries as f64 / places;
     if command.json {
@@ -102,60 +92,38 @@ pub(super) fn execute(command: &Inspect) -> Ended {
         let text = serde_json::to_string_pretty(&value).expect("the facts are plain data");
         return say_and_end(&format!("{text}\n"));
     }
-    let optimum = record.optimum.map_or("unknown".to_owned(), |value| {
-        format!("{value:?} ({})", record.optimum_known)
-    });
+    let optimum = record
+        .optimum
+        .map_or("unknown".to_owned(), |value| format!("{value:?} ({})", record.optimum_known));
     let certificate = match record.certificate.as_str() {
         "none" => "none".to_owned(),
         kind => format!("{kind}, checked and holds"),
     };
     let facts = [
         ("file", file),
-        (
-            "PSD blocks",
-            format!("{}: {}", blocks.len(), shortened(&blocks)),
-        ),
+        ("PSD blocks", format!("{}: {}", blocks.len(), shortened(&blocks))),
         ("nonnegative scalars", problem.orthant().to_string()),
         ("constraints", problem.constraints().len().to_string()),
-        (
-            "stored numbers",
-            format!("{} ({:.2e} of all places)", storage.entries, density),
-        ),
+        ("stored numbers", format!("{} ({:.2e} of all places)", storage.entries, density)),
         (
             "outer products",
-            format!(
-                "{} ({} functionals of rank one)",
-                storage.outer_products, storage.rank_one
-            ),
+            format!("{} ({} functionals of rank one)", storage.outer_products, storage.rank_one),
         ),
-        (
-            "rank bound",
-            format!(
-                "{} (largest r with r(r+1)/2 <= constraints)",
-                record.rank_bound
-            ),
-        ),
+        ("rank bound", format!("{} (largest r with r(r+1)/2 <= constraints)", record.rank_bound)),
         ("optimum", optimum),
         ("certificate", certificate),
         ("uniqueness", record.uniqueness.clone()),
         ("digest", record.digest.clone()),
     ];
-    let lines: Vec<String> = facts
-        .iter()
-        .map(|(name, text)| format!("{name:<20} {text}\n"))
-        .collect();
+    let lines: Vec<String> =
+        facts.iter().map(|(name, text)| format!("{name:<20} {text}\n")).collect();
     say_and_end(&lines.concat())
 }
 
 /// Lists the first blocks and says how many are left out.
 fn shortened(blocks: &[String]) -> String {
     const SHOWN: usize = 8;
-    let mut text = blocks
-        .iter()
-        .take(SHOWN)
-        .cloned()
-        .collect::<Vec<_>>()
-        .join(", ");
+    let mut text = blocks.iter().take(SHOWN).cloned().collect::<Vec<_>>().join(", ");
     if blocks.len() > SHOWN {
         text += &format!(", and {} more", blocks.len() - SHOWN);
     }

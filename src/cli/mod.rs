@@ -74,11 +74,7 @@ pub fn main() -> ExitCode {
         (_, true) => Loudness::Verbose,
         _ => Loudness::Normal,
     };
-    let bar = if arguments.no_progress {
-        progress::Bar::Never
-    } else {
-        progress::Bar::OnTerminals
-    };
+    let bar = if arguments.no_progress { progress::Bar::Never } else { progress::Bar::OnTerminals };
     let ended = match arguments.command {
         Command::Run(command) => run::execute(&command, loudness, bar),
         Command::Tabulate(command) => tabulate::execute(&command, loudness),

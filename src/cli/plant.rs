@@ -33,10 +33,7 @@ pub(super) struct Plant {
 
 pub(super) fn execute(command: &Plant, loudness: Loudness) -> Ended {
     let family = families::find(&command.family).ok_or_else(|| {
-        let known: Vec<_> = families::registry()
-            .iter()
-            .map(|family| family.card().id)
-            .collect();
+        let known: Vec<_> = families::registry().iter().map(|family| family.card().id).collect();
         let hint = nearest_word(&command.family, known.iter().copied());
         let hint = hint.map_or(String::new(), |word| format!(" (did you mean `{word}`?)"));
         let message = format!(
@@ -49,9 +46,7 @@ pub(super) fn execute(command: &Plant, loudness: Loudness) -> Ended {
     let mut given = BTreeMap::new();
     for text in &command.parameters {
         let (name, value) = text.split_once('=').ok_or_else(|| {
-            Failure::input(format!(
-                "parameter `{text}`: expected NAME=VALUE, such as order=20"
-            ))
+            Failure::input(format!("parameter `{text}`: expected NAME=VALUE, such as order=20"))
         })?;
         if given.insert(name.to_owned(), setting(value)).is_some() {
             return Err(Failure::input(format!("parameter `{name}` is given twice")));
@@ -63,12 +58,8 @@ pub(super) fn execute(command: &Plant, loudness: Loudness) -> Ended {
             PlantError::Certificate(_) => Failure::defect(format!("internal error: {error}")),
             other => Failure::input(format!("{} {parameters}: {other}", family.card().id)),
         })?;
-    let origin = format!(
-        "{} {parameters} seed={} index={}",
-        family.card().id,
-        command.seed,
-        command.index
-    );
+    let origin =
+        format!("{} {parameters} seed={} index={}", family.card().id, command.seed, command.index);
     let text = formats::instance::write(&formats::instance::Instance {
         problem: planted.problem,
         certificate: Some(planted.certificate),
@@ -79,11 +70,7 @@ pub(super) fn execute(command: &Plant, loudness: Loudness) -> Ended {
     };
     write_once(path, text)?;
     if loudness != Loudness::Quiet {
-        tell(&format!(
-            "{} {parameters} written to {}",
-            family.card().id,
-            path.display()
-        ));
+        tell(&format!("{} {parameters} written to {}", family.card().id, path.display()));
     }
     say_and_end("")
 }
@@ -103,10 +90,7 @@ fn write_once(path: &std::path::Path, text: String) -> Result<(), Failure> {
         Err(error) => return Err(Failure::input(format!("{}: {error}", path.display()))),
     }
     let (Some(folder), Some(name)) = (path.parent(), path.file_name()) else {
-        return Err(Failure::input(format!(
-            "{} is no file name",
-            path.display()
-        )));
+        return Err(Failure::input(format!("{} is no file name", path.display())));
     };
     write_files(folder, &[(name.to_string_lossy().into_owned(), text)]).map_err(Failure::input)
 }

@@ -28,21 +28,12 @@ pub(super) struct Progress {
 
 impl Progress {
     pub(super) fn new(loudness: Loudness, bar: Bar) -> Self {
-        Progress {
-            loudness,
-            bar,
-            running: Mutex::new(None),
-        }
+        Progress { loudness, bar, running: Mutex::new(None) }
     }
 
     /// Takes the bar away.
     pub(super) fn end(&self) {
-        if let Some(bar) = self
-            .running
-            .lock()
-            .unwrap_or_else(PoisonError::into_inner)
-            .take()
-        {
+        if let Some(bar) = self.running.lock().unwrap_or_else(PoisonError::into_inner).take() {
             bar.finish_and_clear();
         }
     }
@@ -82,19 +73,13 @@ impl Observer for Progress {
 
     fn finished(&self, record: &Record) {
         if self.loudness == Loudness::Verbose {
-            let cpu = record
-                .cpu_s
-                .map_or(String::new(), |cpu| format!(" {cpu:.3} s"));
+            let cpu = record.cpu_s.map_or(String::new(), |cpu| format!(" {cpu:.3} s"));
             let message = if record.message.is_empty() {
                 String::new()
             } else {
                 format!(" ({})", record.message)
             };
-            self.line(&format!(
-                "{} {}{cpu}{message}",
-                record.trial,
-                record.verdict.word()
-            ));
+            self.line(&format!("{} {}{cpu}{message}", record.trial, record.verdict.word()));
         }
         if let Some(bar) = &*self.running.lock().unwrap_or_else(PoisonError::into_inner) {
             bar.inc(1);

@@ -3,7 +3,7 @@
 use std::path::PathBuf;
 
 use clap::Args;
-use serde_json::json;
+use serde_json::{Value, json};
 
 use super::Ended;
 use super::output::say_and_end;
@@ -35,13 +35,8 @@ pub(super) fn execute(command: &Referee) -> Ended {
     let read = solution::read(&command.solution, &instance.problem)
         .map_err(|error| Failure::from(&error))?;
     let known = instance.knowledge.known();
-    let judgement = judge(
-        &instance.problem,
-        &read.answer,
-        &known,
-        &Tolerance::default(),
-    )
-    .map_err(|contradiction| Failure::defect(format!("internal error: {contradiction}")))?;
+    let judgement = judge(&instance.problem, &read.answer, &known, &Tolerance::default())
+        .map_err(|contradiction| Failure::defect(format!("internal error: {contradiction}")))?;
     let optimum = instance.knowledge.optimum_value();
     say_and_end(&if command.json {
         as_json(&judgement, optimum)
@@ -61,42 +56,37 @@ fn word(finding: Finding) -> &'static str {
     }
 }
 
-/// Lists the figures by their names in `trials.csv`.
-fn figures(judgement: &Judgement, optimum: Option<f64>) -> Vec<(&'static str, Option<f64>)> {
-    let rank = |at: usize| judgement.ranks.map(|ranks| ranks[at] as f64);
+/// Lists the measured figures by their names in `trials.csv`; what was not measured is null.
+fn figures(judgement: &Judgement, optimum: Option<f64>) -> Vec<(&'static str, Value)> {
+    let real = |value: Option<f64>| json!(value.and_then(measured));
+    let rank = |at: usize| json!(judgement.ranks.map(|ranks| ranks[at]));
     vec![
-        ("digits", judgement.digits),
-        ("feasibility", judgement.feasibility),
-        ("min_eigenvalue", judgement.min_eigenvalue),
-        ("objective", judgement.objective),
-        ("optimum", optimum),
-        ("objective_error", judgement.objective_error),
-        ("distance", judgement.distance),
+        ("digits", real(judgement.digits)),
+        ("feasibility", real(judgement.feasibility)),
+        ("min_eigenvalue", real(judgement.min_eigenvalue)),
+        ("objective", real(judgement.objective)),
+        ("optimum", real(optimum)),
+        ("objective_error", real(judgement.objective_error)),
+        ("distance", real(judgement.distance)),
         ("rank_at_1e-4", rank(0)),
         ("rank_at_1e-6", rank(1)),
         ("rank_at_1e-8", rank(2)),
-        ("tail_ratio", judgement.tail_ratio),
-        ("restored_feasibility", judgement.restored_feasibility),
-        (
-            "restored_objective_error",
-            judgement.restored_objective_error,
-        ),
-        ("raw_feasibility", judgement.raw_feasibility),
-        ("raw_objective", judgement.raw_objective),
-        ("lower_bound", judgement.lower_bound),
+        ("tail_ratio", real(judgement.tail_ratio)),
+        ("restored_feasibility", real(judgement.restored_feasibility)),
+        ("restored_objective_error", real(judgement.restored_objective_error)),
+        ("raw_feasibility", real(judgement.raw_feasibility)),
+        ("raw_objective", real(judgement.raw_objective)),
+        ("lower_bound", real(judgement.lower_bound)),
     ]
 }
 
 fn as_json(judgement: &Judgement, optimum: Option<f64>) -> String {
     let mut value = json!({ "verdict": word(judgement.finding), "reason": judgement.reason });
     for (name, figure) in figures(judgement, optimum) {
-        value[name] = json!(figure.and_then(measured));
+        value[name] = figure;
     }
     value["dimacs"] = json!(judgement.dimacs);
-    format!(
-        "{}\n",
-        serde_json::to_string_pretty(&value).expect("the figures are plain data")
-    )
+    format!("{}\n", serde_json::to_string_pretty(&value).expect("the figures are plain data"))
 }
 
 fn as_text(judgement: &Judgement, optimum: Option<f64>) -> String {
@@ -105,8 +95,8 @@ fn as_text(judgement: &Judgement, optimum: Option<f64>) -> String {
         out += &format!("{:<25} {}\n", "reason", judgement.reason);
     }
     for (name, figure) in figures(judgement, optimum) {
-        if let Some(value) = figure.and_then(measured) {
-            out += &format!("{name:<25} {value:?}\n");
+        if !figure.is_null() {
+            out += &format!("{name:<25} {figure}\n");
         }
     }
     if let Some(errors) = judgement.dimacs {

@@ -41,20 +41,12 @@ struct Snippet {
 impl Failure {
     /// Makes a failure by bad usage or bad input.
     pub(super) fn input(message: impl fmt::Display) -> Self {
-        Failure {
-            code: INPUT,
-            message: message.to_string(),
-            snippet: None,
-        }
+        Failure { code: INPUT, message: message.to_string(), snippet: None }
     }
 
     /// Makes a failure by a defect of this program.
     pub(super) fn defect(message: impl fmt::Display) -> Self {
-        Failure {
-            code: DEFECT,
-            message: message.to_string(),
-            snippet: None,
-        }
+        Failure { code: DEFECT, message: message.to_string(), snippet: None }
     }
 
     /// Tells it on standard error and returns the exit code.
@@ -62,14 +54,9 @@ impl Failure {
         tell(&format!("error: {}", self.message));
         if self.snippet.is_some() {
             let colours = std::io::stderr().is_terminal() && std::env::var_os("NO_COLOR").is_none();
-            let theme = if colours {
-                GraphicalTheme::unicode()
-            } else {
-                GraphicalTheme::none()
-            };
-            let handler = GraphicalReportHandler::new_themed(theme)
-                .with_wrap_lines(false)
-                .with_links(false);
+            let theme = if colours { GraphicalTheme::unicode() } else { GraphicalTheme::none() };
+            let handler =
+                GraphicalReportHandler::new_themed(theme).with_wrap_lines(false).with_links(false);
             let mut drawn = String::new();
             if handler.render_report(&mut drawn, self).is_ok() {
                 // The message has been told in one line; what is wanted here is the snippet.
@@ -94,9 +81,7 @@ impl std::error::Error for Failure {}
 
 impl Diagnostic for Failure {
     fn source_code(&self) -> Option<&dyn SourceCode> {
-        self.snippet
-            .as_ref()
-            .map(|snippet| &**snippet as &dyn SourceCode)
+        self.snippet.as_ref().map(|snippet| &**snippet as &dyn SourceCode)
     }
 
     fn labels(&self) -> Option<Box<dyn Iterator<Item = LabeledSpan> + '_>> {
@@ -126,9 +111,7 @@ impl SourceCode for Snippet {
 
 impl From<&PlanError> for Failure {
     fn from(error: &PlanError) -> Self {
-        let start = error.text[..error.span.start]
-            .rfind('\n')
-            .map_or(0, |at| at + 1);
+        let start = error.text[..error.span.start].rfind('\n').map_or(0, |at| at + 1);
         let line = error.text[start..].lines().next().unwrap_or("");
         let from = error.span.start - start;
         let length = (error.span.end - error.span.start).min(line.len().saturating_sub(from));
@@ -143,11 +126,7 @@ impl From<&PlanError> for Failure {
                 format!("expected {}", error.expected)
             },
         };
-        Failure {
-            code: INPUT,
-            message: error.to_string(),
-            snippet: Some(Box::new(snippet)),
-        }
+        Failure { code: INPUT, message: error.to_string(), snippet: Some(Box::new(snippet)) }
     }
 }
 
@@ -162,11 +141,7 @@ impl From<&FormatError> for Failure {
                 label: format!("expected {}", error.expected),
             })
         });
-        Failure {
-            code: INPUT,
-            message: error.to_string(),
-            snippet,
-        }
+        Failure { code: INPUT, message: error.to_string(), snippet }
     }
 }
 

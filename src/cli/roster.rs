@@ -47,18 +47,10 @@ pub(super) fn execute(command: &RosterCommand) -> Ended {
     let (kind, name) = command.wanted();
     let mut cards = Vec::new();
     if kind != Some(Kind::Methods) {
-        cards.extend(
-            families::registry()
-                .iter()
-                .map(|family| Card::Family(family.card())),
-        );
+        cards.extend(families::registry().iter().map(|family| Card::Family(family.card())));
     }
     if kind != Some(Kind::Families) {
-        cards.extend(
-            methods::registry()
-                .iter()
-                .map(|method| Card::Method(method.card())),
-        );
+        cards.extend(methods::registry().iter().map(|method| Card::Method(method.card())));
     }
     if let Some(name) = name {
         let known: Vec<&str> = cards.iter().map(Card::id).collect();
@@ -70,11 +62,7 @@ pub(super) fn execute(command: &RosterCommand) -> Ended {
                 known.join(", ")
             )));
         };
-        return if command.json {
-            say_json(&card.json())
-        } else {
-            say_and_end(&card.text())
-        };
+        return if command.json { say_json(&card.json()) } else { say_and_end(&card.text()) };
     }
     if command.json {
         return say_json(&Value::Array(cards.iter().map(Card::json).collect()));
@@ -91,19 +79,12 @@ fn list(cards: &[Card]) -> String {
     let width = cards.iter().map(|card| card.id().len()).max().unwrap_or(0);
     let mut out = String::new();
     for (heading, wanted) in [("Families", true), ("Methods", false)] {
-        let group: Vec<_> = cards
-            .iter()
-            .filter(|card| matches!(card, Card::Family(_)) == wanted)
-            .collect();
+        let group: Vec<_> =
+            cards.iter().filter(|card| matches!(card, Card::Family(_)) == wanted).collect();
         if !group.is_empty() {
             out += &format!("{heading}\n");
             for card in group {
-                out += &format!(
-                    "  {:<width$}  {} ({})\n",
-                    card.id(),
-                    card.title(),
-                    card.class()
-                );
+                out += &format!("  {:<width$}  {} ({})\n", card.id(), card.title(), card.class());
             }
         }
     }
@@ -168,11 +149,8 @@ impl Card {
     }
 
     fn json(&self) -> Value {
-        let mut object: serde_json::Map<String, Value> = self
-            .lines()
-            .into_iter()
-            .map(|(name, text)| (name.to_owned(), json!(text)))
-            .collect();
+        let mut object: serde_json::Map<String, Value> =
+            self.lines().into_iter().map(|(name, text)| (name.to_owned(), json!(text))).collect();
         let (name, specs) = self.settings();
         let specs: Vec<Value> = specs
             .iter()
@@ -197,12 +175,7 @@ impl Card {
         let (name, specs) = self.settings();
         out += &format!("{name}:\n");
         for spec in specs {
-            let head = format!(
-                "{} ({}; default {})",
-                spec.name,
-                spec.kind,
-                spec.default.setting()
-            );
+            let head = format!("{} ({}; default {})", spec.name, spec.kind, spec.default.setting());
             out += &format!("  {head}\n{}", indented(spec.meaning).replace("  ", "    "));
         }
         if specs.is_empty() {

@@ -53,21 +53,14 @@ pub(super) fn execute(command: &Run, loudness: Loudness, bar: Bar) -> Ended {
     let folder = command.plan.parent().unwrap_or(Path::new(""));
     let plan = Plan::parse(&text, &file_name, folder, Roster::built_in())
         .map_err(|error| Failure::from(&error))?;
-    let shard = command
-        .shard
-        .as_ref()
-        .map(|text| text.parse::<Shard>())
-        .transpose();
+    let shard = command.shard.as_ref().map(|text| text.parse::<Shard>()).transpose();
     let shard = shard.map_err(|reason| Failure::input(format!("--shard: {reason}")))?;
     let interrupt = Arc::new(AtomicBool::new(false));
     listen(&interrupt)?;
     let options = RunOptions {
         target: target(command)?,
         jobs: command.jobs.map(usize::from),
-        selection: Selection {
-            only: command.only.as_deref().map(Pattern::new),
-            shard,
-        },
+        selection: Selection { only: command.only.as_deref().map(Pattern::new), shard },
         interrupt,
     };
     let progress = Progress::new(loudness, bar);
@@ -86,39 +79,24 @@ fn read_plan(path: &Path) -> Result<String, Failure> {
         .map_err(|error| Failure::input(format!("{}: {error}", path.display())))?;
     String::from_utf8(bytes).map_err(|error| {
         let valid = error.utf8_error().valid_up_to();
-        let line = error.as_bytes()[..valid]
-            .iter()
-            .filter(|byte| **byte == b'\n')
-            .count()
-            + 1;
-        Failure::input(format!(
-            "{}:{line}: the file is not text in UTF-8",
-            path.display()
-        ))
+        let line = error.as_bytes()[..valid].iter().filter(|byte| **byte == b'\n').count() + 1;
+        Failure::input(format!("{}:{line}: the file is not text in UTF-8", path.display()))
     })
 }
 
 fn target(command: &Run) -> Result<Target, Failure> {
-    let stem = command
-        .plan
-        .file_stem()
-        .unwrap_or_default()
-        .to_string_lossy()
-        .into_owned();
+    let stem = command.plan.file_stem().unwrap_or_default().to_string_lossy().into_owned();
     match (&command.into, command.resume) {
         (Some(folder), false) => Ok(Target::New(folder.clone())),
         (Some(folder), true) => Ok(Target::Resume(folder.clone())),
-        (None, false) => Ok(Target::Numbered {
-            parent: PathBuf::from(RUNS),
-            stem,
-        }),
-        (None, true) => latest_folder(Path::new(RUNS), &stem)
-            .map(Target::Resume)
-            .ok_or_else(|| {
+        (None, false) => Ok(Target::Numbered { parent: PathBuf::from(RUNS), stem }),
+        (None, true) => {
+            latest_folder(Path::new(RUNS), &stem).map(Target::Resume).ok_or_else(|| {
                 Failure::input(format!(
                     "there is no {RUNS}/{stem}-* to resume; name the run folder by --into"
                 ))
-            }),
+            })
+        }
     }
 }
 
@@ -138,12 +116,8 @@ fn listen(interrupt: &Arc<AtomicBool>) -> Result<(), Failure> {
 
 /// Says how far the run came and how to go on.
 fn interrupted(command: &Run, outcome: &Outcome) -> String {
-    let mut words = vec![
-        std::env::args()
-            .next()
-            .unwrap_or_else(|| "rankassay".to_owned()),
-        "run".to_owned(),
-    ];
+    let mut words =
+        vec![std::env::args().next().unwrap_or_else(|| "rankassay".to_owned()), "run".to_owned()];
     words.push(command.plan.display().to_string());
     words.extend([
         "--into".to_owned(),
@@ -188,17 +162,9 @@ fn finish(outcome: &Outcome, loudness: Loudness) -> Ended {
         tolerance: outcome.header.tolerance,
     };
     tabulate::write_tables(&input, &outcome.folder)?;
-    let unjudged = outcome
-        .records
-        .iter()
-        .filter(|record| record.verdict.is_unjudged())
-        .count();
+    let unjudged = outcome.records.iter().filter(|record| record.verdict.is_unjudged()).count();
     if loudness != Loudness::Quiet {
-        say(&format!(
-            "{}\nRun folder: {}\n",
-            tables::summary(&input),
-            outcome.folder.display()
-        ))?;
+        say(&format!("{}\nRun folder: {}\n", tables::summary(&input), outcome.folder.display()))?;
     }
     if unjudged > 0 {
         let table = outcome.folder.join("tables").join("failures.md");

@@ -25,9 +25,7 @@ pub(super) fn execute(command: &Tabulate, loudness: Loudness) -> Ended {
         (Some(folder), _) => folder,
         (None, [only]) => only,
         (None, _) => {
-            return Err(Failure::input(
-                "several runs need a folder for their tables: --into DIR",
-            ));
+            return Err(Failure::input("several runs need a folder for their tables: --into DIR"));
         }
     };
     let mut runs = Vec::new();
@@ -67,10 +65,7 @@ pub(super) fn write_tables(input: &Input<'_>, folder: &Path) -> Result<(), Failu
     let mut files = Vec::new();
     for table in tables::all(input) {
         files.push((format!("{}.csv", table.name), table.to_csv()));
-        files.push((
-            format!("{}-stable.csv", table.name),
-            table.stable().to_csv(),
-        ));
+        files.push((format!("{}-stable.csv", table.name), table.stable().to_csv()));
         files.push((format!("{}.md", table.name), table.to_markdown()));
     }
     write_files(&folder.join("tables"), &files).map_err(Failure::input)

@@ -58,11 +58,7 @@ fn sown_id(sown: &Sown<'_>, index: u64) -> String {
     };
     add("order");
     add("rank");
-    for spec in card
-        .parameters
-        .iter()
-        .filter(|spec| spec.name != "order" && spec.name != "rank")
-    {
+    for spec in card.parameters.iter().filter(|spec| spec.name != "order" && spec.name != "rank") {
         if sown.parameters.get(spec.name) != Some(&spec.default.setting()) {
             add(spec.name);
         }
@@ -72,24 +68,11 @@ fn sown_id(sown: &Sown<'_>, index: u64) -> String {
 
 /// Names an imported instance: the stem of its file, and its rank bound.
 fn imported_id(imported: &Imported) -> String {
-    let stem = Path::new(&imported.path)
-        .file_name()
-        .unwrap_or_default()
-        .to_string_lossy();
+    let stem = Path::new(&imported.path).file_name().unwrap_or_default().to_string_lossy();
     let stem = stem.split('.').next().unwrap_or_default();
-    let plain: String = stem
-        .chars()
-        .map(|c| {
-            if c.is_alphanumeric() || c == '_' {
-                c
-            } else {
-                '-'
-            }
-        })
-        .collect();
-    imported
-        .rank
-        .map_or_else(|| plain.clone(), |rank| format!("{plain}-rank={rank}"))
+    let plain: String =
+        stem.chars().map(|c| if c.is_alphanumeric() || c == '_' { c } else { '-' }).collect();
+    imported.rank.map_or_else(|| plain.clone(), |rank| format!("{plain}-rank={rank}"))
 }
 
 impl Expansion {
@@ -104,10 +87,8 @@ impl Expansion {
                 });
             }
         }
-        let mut taken: BTreeSet<String> = instances
-            .iter()
-            .map(|instance| instance.id.clone())
-            .collect();
+        let mut taken: BTreeSet<String> =
+            instances.iter().map(|instance| instance.id.clone()).collect();
         for (at, imported) in plan.imported.iter().enumerate() {
             let plain = imported_id(imported);
             // Files of one name in different folders.
@@ -117,10 +98,7 @@ impl Expansion {
                 id = format!("{plain}-{number}");
                 number += 1;
             }
-            instances.push(InstanceSpec {
-                id,
-                origin: Origin::Imported(at),
-            });
+            instances.push(InstanceSpec { id, origin: Origin::Imported(at) });
         }
         let mut trials = Vec::new();
         for (at, instance) in instances.iter().enumerate() {
@@ -131,12 +109,7 @@ impl Expansion {
                     if plan.repeats > 1 {
                         id.push_str(&format!("-{repeat}"));
                     }
-                    trials.push(TrialSpec {
-                        id,
-                        instance: at,
-                        entrant,
-                        repeat,
-                    });
+                    trials.push(TrialSpec { id, instance: at, entrant, repeat });
                 }
             }
         }
@@ -145,23 +118,15 @@ impl Expansion {
 
     /// Returns what a selection pattern is matched with.
     pub(super) fn describe(&self, plan: &Plan<'_>, trial: &TrialSpec) -> String {
-        format!(
-            "{} {}",
-            self.instances[trial.instance].id, plan.entrants[trial.entrant].label
-        )
+        format!("{} {}", self.instances[trial.instance].id, plan.entrants[trial.entrant].label)
     }
 
     /// Lists the positions of the selected trials.
     pub(super) fn select(&self, plan: &Plan<'_>, selection: &Selection) -> Vec<usize> {
         let takes = |trial: &TrialSpec| {
-            selection.takes(
-                &self.instances[trial.instance].id,
-                &plan.entrants[trial.entrant].label,
-            )
+            selection.takes(&self.instances[trial.instance].id, &plan.entrants[trial.entrant].label)
         };
-        (0..self.trials.len())
-            .filter(|at| takes(&self.trials[*at]))
-            .collect()
+        (0..self.trials.len()).filter(|at| takes(&self.trials[*at])).collect()
     }
 
     /// Plants the first instance of every combination and reads every imported file, so that what is
@@ -171,32 +136,21 @@ impl Expansion {
         plan: &Plan<'_>,
         pool: &rayon::ThreadPool,
     ) -> Result<Vec<(String, String)>, RunError> {
-        let imports = plan
-            .imported
-            .iter()
-            .map(|imported| match read_imported(imported) {
-                Ok(instance) => Ok((imported.path.clone(), instance.record.digest)),
-                // What is wrong inside the file is told with its place there, all else with the plan's.
-                Err(InputError::Format(error)) if error.line > 0 => {
-                    Err(InputError::Format(error).into())
-                }
-                Err(error) => {
-                    let message = format!("cannot import this file: {error}");
-                    Err(RunError::from(
-                        plan.error_at(imported.span.clone(), &message),
-                    ))
-                }
-            });
-        let imports = imports.collect::<Result<Vec<_>, RunError>>()?;
-        let verdicts: Vec<Result<(), RunError>> = pool.install(|| {
-            plan.sown
-                .par_iter()
-                .map(|sown| try_planting(plan, sown))
-                .collect()
+        let imports = plan.imported.iter().map(|imported| match read_imported(imported) {
+            Ok(instance) => Ok((imported.path.clone(), instance.record.digest)),
+            // What is wrong inside the file is told with its place there, all else with the plan's.
+            Err(InputError::Format(error)) if error.line > 0 => {
+                Err(InputError::Format(error).into())
+            }
+            Err(error) => {
+                let message = format!("cannot import this file: {error}");
+                Err(RunError::from(plan.error_at(imported.span.clone(), &message)))
+            }
         });
-        verdicts
-            .into_iter()
-            .collect::<Result<Vec<()>, RunError>>()?;
+        let imports = imports.collect::<Result<Vec<_>, RunError>>()?;
+        let verdicts: Vec<Result<(), RunError>> =
+            pool.install(|| plan.sown.par_iter().map(|sown| try_planting(plan, sown)).collect());
+        verdicts.into_iter().collect::<Result<Vec<()>, RunError>>()?;
         Ok(imports)
     }
 
@@ -207,10 +161,8 @@ impl Expansion {
             Origin::Sown(sown, index) => {
                 let sown = &plan.sown[sown];
                 let planted = guarded(|| plant(sown.family, &sown.parameters, plan.seed, index));
-                let internal = |detail: String| RunError::Internal {
-                    trial: spec.id.clone(),
-                    detail,
-                };
+                let internal =
+                    |detail: String| RunError::Internal { trial: spec.id.clone(), detail };
                 let planted = planted
                     .map_err(|panic| internal(format!("planting panicked: {panic}")))?
                     .map_err(|error| internal(format!("planting failed: {error}")))?;
@@ -228,10 +180,7 @@ impl Expansion {
                 instance.record.family = "imported".to_owned();
                 instance.record.parameters = format!("path={}", imported.path);
                 if let Some(rank) = imported.rank {
-                    instance
-                        .record
-                        .parameters
-                        .push_str(&format!(" rank={rank}"));
+                    instance.record.parameters.push_str(&format!(" rank={rank}"));
                 }
                 instance
             }
@@ -253,11 +202,7 @@ impl Expansion {
             wall_limit_s: plan.budget.wall.as_secs_f64(),
             memory_limit: plan.budget.memory,
             tolerance: [tolerance.feasibility, tolerance.objective, tolerance.rank],
-            methods: plan
-                .entrants
-                .iter()
-                .map(super::plan::Entrant::record)
-                .collect(),
+            methods: plan.entrants.iter().map(super::plan::Entrant::record).collect(),
             trials: self.trials.len() as u64,
         }
     }
@@ -269,9 +214,7 @@ impl Expansion {
         log: Log,
     ) -> (Vec<InstanceRecord>, Vec<Record>) {
         let place = |ids: &mut dyn Iterator<Item = &str>| -> BTreeMap<String, usize> {
-            ids.enumerate()
-                .map(|(at, id)| (id.to_owned(), at))
-                .collect()
+            ids.enumerate().map(|(at, id)| (id.to_owned(), at)).collect()
         };
         let instance_place = place(&mut self.instances.iter().map(|instance| instance.id.as_str()));
         let trial_place = place(&mut self.trials.iter().map(|trial| trial.id.as_str()));
@@ -297,10 +240,7 @@ fn read_imported(imported: &Imported) -> Result<Instance, InputError> {
 }
 
 fn try_planting(plan: &Plan<'_>, sown: &Sown<'_>) -> Result<(), RunError> {
-    let internal = |detail: String| RunError::Internal {
-        trial: sown_id(sown, 0),
-        detail,
-    };
+    let internal = |detail: String| RunError::Internal { trial: sown_id(sown, 0), detail };
     match guarded(|| plant(sown.family, &sown.parameters, plan.seed, 0).map(|_| ())) {
         Ok(Ok(())) => Ok(()),
         Ok(Err(PlantError::Parameters(reason) | PlantError::Range(reason))) => {

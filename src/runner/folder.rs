@@ -44,24 +44,14 @@ pub enum FolderError {
 }
 
 fn refused(path: &Path) -> impl Fn(std::io::Error) -> FolderError + '_ {
-    |error| FolderError::System {
-        path: path.display().to_string(),
-        reason: error.to_string(),
-    }
+    |error| FolderError::System { path: path.display().to_string(), reason: error.to_string() }
 }
 
 /// Returns the numbered folder of `stem` in `parent` with the highest number, if there is one.
 pub fn latest_folder(parent: &Path, stem: &str) -> Option<PathBuf> {
     let entries = std::fs::read_dir(parent).ok()?;
-    let number = |name: &str| {
-        name.strip_prefix(stem)?
-            .strip_prefix('-')?
-            .parse::<u64>()
-            .ok()
-    };
-    let best = entries
-        .filter_map(|entry| number(entry.ok()?.file_name().to_str()?))
-        .max()?;
+    let number = |name: &str| name.strip_prefix(stem)?.strip_prefix('-')?.parse::<u64>().ok();
+    let best = entries.filter_map(|entry| number(entry.ok()?.file_name().to_str()?)).max()?;
     Some(parent.join(format!("{stem}-{best}")))
 }
 

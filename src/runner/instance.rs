@@ -25,11 +25,7 @@ pub struct Knowledge {
 impl Knowledge {
     /// Knows nothing.
     pub fn none() -> Self {
-        Knowledge {
-            optimum: KnownOptimum::Unknown,
-            dual: None,
-            unique_point: None,
-        }
+        Knowledge { optimum: KnownOptimum::Unknown, dual: None, unique_point: None }
     }
 
     /// Lends the knowledge to the referee.
@@ -100,12 +96,7 @@ pub enum InputError {
 /// Describes a problem for its record.
 fn describe(problem: &Problem) -> InstanceRecord {
     let bounded = problem.blocks().iter().filter_map(|block| block.rank).max();
-    let largest = problem
-        .blocks()
-        .iter()
-        .map(|block| block.order)
-        .max()
-        .unwrap_or(0);
+    let largest = problem.blocks().iter().map(|block| block.order).max().unwrap_or(0);
     InstanceRecord {
         instance: String::new(),
         family: String::new(),
@@ -147,21 +138,13 @@ impl Instance {
             dual: planted.dual,
             unique_point: unique.then_some(planted.point),
         };
-        Instance {
-            problem: planted.problem,
-            knowledge,
-            record,
-        }
+        Instance { problem: planted.problem, knowledge, record }
     }
 
     /// Wraps a problem of which nothing is known.
     pub fn from_problem(problem: Problem) -> Self {
         let record = describe(&problem);
-        Instance {
-            problem,
-            knowledge: Knowledge::none(),
-            record,
-        }
+        Instance { problem, knowledge: Knowledge::none(), record }
     }
 
     /// Puts a rank bound on every PSD block that is not smaller than it. A certificate was proved for
@@ -170,21 +153,13 @@ impl Instance {
     /// # Errors
     /// The rank does not fit.
     pub fn with_rank(self, rank: usize, file: &str) -> Result<Self, InputError> {
-        let refuse = |reason: String| InputError::Rank {
-            file: file.to_owned(),
-            rank,
-            reason,
-        };
+        let refuse = |reason: String| InputError::Rank { file: file.to_owned(), rank, reason };
         if self.problem.blocks().iter().all(|block| block.order < rank) {
             return Err(refuse("every block is smaller".to_owned()));
         }
         let problem =
             formats::with_ranks(&self.problem, rank).map_err(|error| refuse(error.to_string()))?;
-        if problem == self.problem {
-            Ok(self)
-        } else {
-            Ok(Instance::from_problem(problem))
-        }
+        if problem == self.problem { Ok(self) } else { Ok(Instance::from_problem(problem)) }
     }
 
     /// Adds an optimum that somebody reports; where one is certified, the two must agree and the
@@ -202,11 +177,7 @@ impl Instance {
             KnownOptimum::Certified(certified) => {
                 if (certified - value).abs() > accuracy * (1.0 + value.abs()) {
                     let file = file.to_owned();
-                    return Err(InputError::Optimum {
-                        file,
-                        certified,
-                        reported: value,
-                    });
+                    return Err(InputError::Optimum { file, certified, reported: value });
                 }
             }
             _ => {
@@ -230,12 +201,7 @@ pub fn plant(
     seed: u64,
     index: u64,
 ) -> Result<Planted, PlantError> {
-    let labels = [
-        "plant",
-        family.card().id,
-        &parameters.to_string(),
-        &index.to_string(),
-    ];
+    let labels = ["plant", family.card().id, &parameters.to_string(), &index.to_string()];
     family.plant(parameters, &mut Stream::named(seed, &labels))
 }
 
@@ -244,10 +210,7 @@ pub fn plant(
 /// # Errors
 /// The file is unreadable or not in its format, or its certificate does not hold.
 pub fn read_instance(path: &Path) -> Result<Instance, InputError> {
-    if path
-        .extension()
-        .is_some_and(|extension| extension == "dat-s")
-    {
+    if path.extension().is_some_and(|extension| extension == "dat-s") {
         return Ok(Instance::from_problem(formats::sdpa::read(path)?.problem));
     }
     let read = formats::instance::read(path)?;
@@ -255,10 +218,8 @@ pub fn read_instance(path: &Path) -> Result<Instance, InputError> {
         return Ok(Instance::from_problem(read.problem));
     };
     // A file proves nothing by itself: its certificate is checked anew.
-    let planted =
-        Planted::prove(read.problem, certificate).map_err(|error| InputError::Certificate {
-            file: path.display().to_string(),
-            reason: error.to_string(),
-        })?;
+    let planted = Planted::prove(read.problem, certificate).map_err(|error| {
+        InputError::Certificate { file: path.display().to_string(), reason: error.to_string() }
+    })?;
     Ok(Instance::from_planted(planted))
 }

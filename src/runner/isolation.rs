@@ -45,11 +45,7 @@ pub(super) fn guarded<T>(work: impl FnOnce() -> T) -> Result<T, String> {
         // A payload may panic again when it is dropped; leaking it is the safe way.
         std::mem::forget(payload);
         let place = PLACE.with(RefCell::take);
-        if place.is_empty() {
-            text
-        } else {
-            format!("{text} ({place})")
-        }
+        if place.is_empty() { text } else { format!("{text} ({place})") }
     })
 }
 
@@ -60,10 +56,7 @@ mod tests {
     #[test]
     fn a_panic_becomes_its_message_and_place() {
         let message = guarded(|| -> usize { panic!("a pivot of {}", 0) }).unwrap_err();
-        assert!(
-            message.starts_with("a pivot of 0 (isolation.rs:"),
-            "{message}"
-        );
+        assert!(message.starts_with("a pivot of 0 (isolation.rs:"), "{message}");
         assert_eq!(guarded(|| 7), Ok(7));
     }
 }

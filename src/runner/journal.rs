@@ -160,21 +160,13 @@ impl Contents {
         } else {
             return Ok(());
         };
-        Err(JournalError::OtherRun {
-            path: folder.join(FILE).display().to_string(),
-            reason,
-        })
+        Err(JournalError::OtherRun { path: folder.join(FILE).display().to_string(), reason })
     }
 
     fn parse(path: &Path, text: &[u8]) -> Result<Self, JournalError> {
-        let whole = text
-            .iter()
-            .rposition(|byte| *byte == b'\n')
-            .map_or(0, |at| at + 1);
+        let whole = text.iter().rposition(|byte| *byte == b'\n').map_or(0, |at| at + 1);
         if whole == 0 {
-            return Err(JournalError::Missing {
-                path: path.display().to_string(),
-            });
+            return Err(JournalError::Missing { path: path.display().to_string() });
         }
         let altered = |line: usize, reason: String| JournalError::Altered {
             path: path.display().to_string(),
@@ -183,10 +175,7 @@ impl Contents {
         };
         let mut contents: Option<Contents> = None;
         let mut seen = BTreeSet::new();
-        for (at, line) in text[..whole]
-            .split_inclusive(|byte| *byte == b'\n')
-            .enumerate()
-        {
+        for (at, line) in text[..whole].split_inclusive(|byte| *byte == b'\n').enumerate() {
             let line = std::str::from_utf8(&line[..line.len() - 1])
                 .map_err(|_| altered(at + 1, "the line is not text".to_owned()))?;
             let entry = Entry::read(line).map_err(|reason| altered(at + 1, reason))?;
@@ -224,9 +213,7 @@ impl Contents {
                 }
             }
         }
-        contents.ok_or_else(|| JournalError::Missing {
-            path: path.display().to_string(),
-        })
+        contents.ok_or_else(|| JournalError::Missing { path: path.display().to_string() })
     }
 }
 
@@ -249,10 +236,7 @@ fn failed(path: &Path, error: &std::io::Error) -> JournalError {
     let path = path.display().to_string();
     match error.kind() {
         std::io::ErrorKind::NotFound => JournalError::Missing { path },
-        _ => JournalError::System {
-            path,
-            reason: error.to_string(),
-        },
+        _ => JournalError::System { path, reason: error.to_string() },
     }
 }
 
@@ -280,8 +264,7 @@ impl Journal {
         let journal = Journal::locked(path.clone(), file.map_err(|error| failed(&path, &error))?)?;
         let mut text = Vec::new();
         let mut file = journal.file.lock().unwrap_or_else(PoisonError::into_inner);
-        file.read_to_end(&mut text)
-            .map_err(|error| failed(&path, &error))?;
+        file.read_to_end(&mut text).map_err(|error| failed(&path, &error))?;
         drop(file);
         let contents = Contents::parse(&path, &text)?;
         Ok((journal, contents))
@@ -289,18 +272,12 @@ impl Journal {
 
     fn locked(path: PathBuf, file: File) -> Result<Self, JournalError> {
         match file.try_lock() {
-            Ok(()) => Ok(Journal {
-                path,
-                file: Mutex::new(file),
-            }),
-            Err(TryLockError::WouldBlock) => Err(JournalError::InUse {
-                path: path.display().to_string(),
-            }),
+            Ok(()) => Ok(Journal { path, file: Mutex::new(file) }),
+            Err(TryLockError::WouldBlock) => {
+                Err(JournalError::InUse { path: path.display().to_string() })
+            }
             // Some network file systems know no locks; a run there is not refused for that.
-            Err(TryLockError::Error(_)) => Ok(Journal {
-                path,
-                file: Mutex::new(file),
-            }),
+            Err(TryLockError::Error(_)) => Ok(Journal { path, file: Mutex::new(file) }),
         }
     }
 

@@ -25,9 +25,8 @@ pub(super) fn cores() -> usize {
 pub(super) fn describe() -> Machine {
     let cpu = facts("/proc/cpuinfo");
     let memory = facts("/proc/meminfo");
-    let kilobytes = memory
-        .get("MemTotal")
-        .and_then(|text| text.split(' ').next()?.parse::<u64>().ok());
+    let kilobytes =
+        memory.get("MemTotal").and_then(|text| text.split(' ').next()?.parse::<u64>().ok());
     Machine {
         system: std::env::consts::OS,
         architecture: std::env::consts::ARCH,
@@ -44,9 +43,7 @@ fn facts(path: &str) -> BTreeMap<String, String> {
     let mut facts = BTreeMap::new();
     for line in text.lines() {
         if let Some((name, value)) = line.split_once(':') {
-            facts
-                .entry(name.trim().to_owned())
-                .or_insert_with(|| value.trim().to_owned());
+            facts.entry(name.trim().to_owned()).or_insert_with(|| value.trim().to_owned());
         }
     }
     facts
@@ -72,9 +69,8 @@ fn features() -> Vec<&'static str> {
 
 /// Returns the time now as `YYYY-MM-DDThh:mm:ssZ`.
 pub(super) fn now() -> String {
-    let seconds = SystemTime::now()
-        .duration_since(UNIX_EPOCH)
-        .map_or(0, |elapsed| elapsed.as_secs());
+    let seconds =
+        SystemTime::now().duration_since(UNIX_EPOCH).map_or(0, |elapsed| elapsed.as_secs());
     timestamp(seconds)
 }
 
@@ -92,11 +88,7 @@ fn timestamp(seconds: u64) -> String {
         day_of_cycle - (365 * year_of_cycle + year_of_cycle / 4 - year_of_cycle / 100);
     let shifted_month = (5 * day_of_year + 2) / 153;
     let day_of_month = day_of_year - (153 * shifted_month + 2) / 5 + 1;
-    let month = if shifted_month < 10 {
-        shifted_month + 3
-    } else {
-        shifted_month - 9
-    };
+    let month = if shifted_month < 10 { shifted_month + 3 } else { shifted_month - 9 };
     let year = year_of_cycle + cycle * 400 + u64::from(month <= 2);
     let (hour, minute, second) = (second / 3600, second / 60 % 60, second % 60);
     format!("{year:04}-{month:02}-{day_of_month:02}T{hour:02}:{minute:02}:{second:02}Z")

@@ -67,11 +67,7 @@ impl Manifest {
             threads,
             machine: machine::describe(),
         };
-        let manifest = Manifest {
-            head,
-            earlier,
-            stretch,
-        };
+        let manifest = Manifest { head, earlier, stretch };
         manifest.write(folder)?;
         Ok(manifest)
     }

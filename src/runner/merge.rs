@@ -61,11 +61,7 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
     let mut records: Vec<(usize, &Record)> = Vec::new();
     for (name, run) in runs {
         let conflict = |first: &str, reason: String| {
-            Err(MergeError::Conditions {
-                first: first.to_owned(),
-                second: name.clone(),
-                reason,
-            })
+            Err(MergeError::Conditions { first: first.to_owned(), second: name.clone(), reason })
         };
         if run.header.wall_limit_s != first.header.wall_limit_s
             || run.header.memory_limit != first.header.memory_limit
@@ -76,10 +72,7 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
             return conflict(first_name, "their tolerances differ".to_owned());
         }
         for method in &run.header.methods {
-            match methods
-                .iter()
-                .find(|(_, known)| known.label == method.label)
-            {
+            match methods.iter().find(|(_, known)| known.label == method.label) {
                 Some((_, known)) if *known == method => {}
                 Some((other, _)) => {
                     return conflict(
@@ -112,16 +105,10 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
                 plans.len() - 1
             });
         for record in &run.records {
-            let key = (
-                record.instance.as_str(),
-                record.method.as_str(),
-                record.repeat,
-            );
+            let key = (record.instance.as_str(), record.method.as_str(), record.repeat);
             if let Some(other) = trials.insert(key, name) {
-                let what = format!(
-                    "{} {} repeat {}",
-                    record.instance, record.method, record.repeat
-                );
+                let what =
+                    format!("{} {} repeat {}", record.instance, record.method, record.repeat);
                 return Err(MergeError::Twice {
                     first: other.to_owned(),
                     second: name.clone(),
@@ -139,15 +126,9 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
         }
     }
     Ok(Merged {
-        records: records
-            .into_iter()
-            .map(|(_, record)| record.clone())
-            .collect(),
+        records: records.into_iter().map(|(_, record)| record.clone()).collect(),
         instances: ordered,
-        methods: methods
-            .into_iter()
-            .map(|(_, method)| method.clone())
-            .collect(),
+        methods: methods.into_iter().map(|(_, method)| method.clone()).collect(),
         wall_limit_s: first.header.wall_limit_s,
         tolerance: first.header.tolerance,
     })
@@ -155,9 +136,5 @@ pub fn merge(runs: &[(String, Contents)]) -> Result<Merged, MergeError> {
 
 /// Returns the number that a trial's id starts with: its place in the plan.
 fn number(trial: &str) -> u64 {
-    trial
-        .split('-')
-        .next()
-        .and_then(|head| head.parse().ok())
-        .unwrap_or(u64::MAX)
+    trial.split('-').next().and_then(|head| head.parse().ok()).unwrap_or(u64::MAX)
 }

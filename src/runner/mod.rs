@@ -35,10 +35,7 @@ use expand::Expansion;
 
 /// Returns the SHA-256 of `bytes` in hexadecimal digits.
 pub(crate) fn hexadecimal_digest(bytes: &[u8]) -> String {
-    Sha256::digest(bytes)
-        .iter()
-        .map(|byte| format!("{byte:02x}"))
-        .collect()
+    Sha256::digest(bytes).iter().map(|byte| format!("{byte:02x}")).collect()
 }
 
 /// How a plan is run.
@@ -169,10 +166,8 @@ pub fn run(
     let expansion = Expansion::new(plan);
     let selected = expansion.select(plan, &options.selection);
     if selected.is_empty() {
-        let example = expansion
-            .trials
-            .first()
-            .map_or(String::new(), |trial| expansion.describe(plan, trial));
+        let example =
+            expansion.trials.first().map_or(String::new(), |trial| expansion.describe(plan, trial));
         let text = format!("no trial of the plan is selected; the first is `{example}`");
         return Err(RunError::Nothing(text));
     }
@@ -200,11 +195,5 @@ pub fn run(
     folder::write_rows(&folder, "instances.csv", &instances)?;
     folder::write_rows(&folder, "trials.csv", &records)?;
     started.end(&folder)?;
-    Ok(Outcome {
-        folder,
-        header,
-        instances,
-        records,
-        ending,
-    })
+    Ok(Outcome { folder, header, instances, records, ending })
 }

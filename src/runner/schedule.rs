@@ -57,51 +57,35 @@ struct Desk<'w> {
 /// # Errors
 /// The first defect or refusal of the system that stopped the run; what was recorded is kept.
 pub(super) fn run(work: &Work<'_>) -> Result<Log, RunError> {
-    let recorded: BTreeSet<&str> = work
-        .before
-        .records
-        .iter()
-        .map(|record| record.trial.as_str())
-        .collect();
+    let recorded: BTreeSet<&str> =
+        work.before.records.iter().map(|record| record.trial.as_str()).collect();
     let selected = work.selected.iter().map(|at| &work.expansion.trials[*at]);
-    let pending: Vec<&TrialSpec> = selected
-        .filter(|trial| !recorded.contains(trial.id.as_str()))
-        .collect();
+    let pending: Vec<&TrialSpec> =
+        selected.filter(|trial| !recorded.contains(trial.id.as_str())).collect();
     let mut slots: BTreeMap<usize, Slot> = BTreeMap::new();
     for trial in &pending {
-        let slot = slots.entry(trial.instance).or_insert_with(|| Slot {
-            instance: Mutex::new(None),
-            remaining: AtomicUsize::new(0),
-        });
+        let slot = slots
+            .entry(trial.instance)
+            .or_insert_with(|| Slot { instance: Mutex::new(None), remaining: AtomicUsize::new(0) });
         *slot.remaining.get_mut() += 1;
     }
     let instances = work.before.instances.iter();
     let desk = Desk {
         work,
         slots,
-        recorded_instances: instances
-            .map(|record| (record.instance.as_str(), record))
-            .collect(),
+        recorded_instances: instances.map(|record| (record.instance.as_str(), record)).collect(),
         next: AtomicUsize::new(0),
         stop: AtomicBool::new(false),
         log: Mutex::new(Log::default()),
         error: Mutex::new(None),
         pending,
     };
-    work.observer
-        .begin(desk.pending.len(), work.selected.len() - desk.pending.len());
+    work.observer.begin(desk.pending.len(), work.selected.len() - desk.pending.len());
     work.pool.broadcast(|_| desk.serve());
-    if let Some(error) = desk
-        .error
-        .into_inner()
-        .unwrap_or_else(PoisonError::into_inner)
-    {
+    if let Some(error) = desk.error.into_inner().unwrap_or_else(PoisonError::into_inner) {
         return Err(error);
     }
-    let mut log = desk
-        .log
-        .into_inner()
-        .unwrap_or_else(PoisonError::into_inner);
+    let mut log = desk.log.into_inner().unwrap_or_else(PoisonError::into_inner);
     log.complete = log.records.len() == desk.pending.len();
     Ok(log)
 }
@@ -115,10 +99,7 @@ impl Desk<'_> {
             };
             if let Err(error) = self.execute(trial) {
                 self.stop.store(true, Ordering::Relaxed);
-                self.error
-                    .lock()
-                    .unwrap_or_else(PoisonError::into_inner)
-                    .get_or_insert(error);
+                self.error.lock().unwrap_or_else(PoisonError::into_inner).get_or_insert(error);
             }
             self.leave(trial.instance);
         }
@@ -131,11 +112,7 @@ impl Desk<'_> {
             TrialEnd::Recorded(record) => {
                 self.work.journal.trial(&record)?;
                 self.work.observer.finished(&record);
-                self.log
-                    .lock()
-                    .unwrap_or_else(PoisonError::into_inner)
-                    .records
-                    .push(*record);
+                self.log.lock().unwrap_or_else(PoisonError::into_inner).records.push(*record);
                 Ok(())
             }
         }
@@ -143,18 +120,12 @@ impl Desk<'_> {
 
     /// Returns the instance, planting and recording it when this is its first trial.
     fn take(&self, at: usize) -> Result<Arc<Instance>, RunError> {
-        let mut place = self.slots[&at]
-            .instance
-            .lock()
-            .unwrap_or_else(PoisonError::into_inner);
+        let mut place = self.slots[&at].instance.lock().unwrap_or_else(PoisonError::into_inner);
         if let Some(instance) = place.as_ref() {
             return Ok(Arc::clone(instance));
         }
         let instance = Arc::new(self.work.expansion.load(self.work.plan, at)?);
-        match self
-            .recorded_instances
-            .get(instance.record.instance.as_str())
-        {
+        match self.recorded_instances.get(instance.record.instance.as_str()) {
             Some(recorded) if **recorded == instance.record => {}
             Some(_) => {
                 let reason = format!(

@@ -94,10 +94,7 @@ impl Selection {
     /// Returns whether a trial is selected.
     pub fn takes(&self, instance: &str, method: &str) -> bool {
         self.shard.is_none_or(|shard| shard.takes(instance))
-            && self
-                .only
-                .as_ref()
-                .is_none_or(|only| only.matches(&format!("{instance} {method}")))
+            && self.only.as_ref().is_none_or(|only| only.matches(&format!("{instance} {method}")))
     }
 }
 
@@ -126,9 +123,7 @@ mod tests {
 
     #[test]
     fn every_instance_falls_into_one_part() {
-        let shards: Vec<Shard> = (1..=3)
-            .map(|part| format!("{part}/3").parse().unwrap())
-            .collect();
+        let shards: Vec<Shard> = (1..=3).map(|part| format!("{part}/3").parse().unwrap()).collect();
         let mut counts = [0; 3];
         for number in 0..300 {
             let id = format!("instance-{number}");

@@ -59,10 +59,7 @@ pub(super) fn execute(
     if interrupt.load(Ordering::Relaxed) {
         return Ok(TrialEnd::Interrupted);
     }
-    let blank = Figures {
-        optimum: instance.knowledge.optimum_value(),
-        ..Figures::default()
-    };
+    let blank = Figures { optimum: instance.knowledge.optimum_value(), ..Figures::default() };
     let without_answer = |verdict: Verdict, message: String| Outcome {
         verdict,
         stop_reason: verdict.word(),
@@ -86,14 +83,7 @@ pub(super) fn execute(
         }
         Ok(Ok(answer)) => {
             let judgement = judge(plan, spec, instance, &answer)?;
-            weigh(
-                &plan.budget,
-                &answer,
-                &judgement,
-                blank,
-                played.wall,
-                played.cost.peak_bytes,
-            )
+            weigh(&plan.budget, &answer, &judgement, blank, played.wall, played.cost.peak_bytes)
         }
     };
     let identity = identity(plan, spec, entrant, instance);
@@ -113,13 +103,7 @@ pub(super) fn execute(
 /// repeat: neither the label nor the rest of the plan moves it.
 fn method_stream(plan: &Plan<'_>, spec: &TrialSpec, entrant: &Entrant<'_>, digest: &str) -> Stream {
     let options = entrant.options.to_string();
-    let labels = [
-        "solve",
-        digest,
-        entrant.method.card().id,
-        &options,
-        &spec.repeat.to_string(),
-    ];
+    let labels = ["solve", digest, entrant.method.card().id, &options, &spec.repeat.to_string()];
     Stream::named(plan.seed, &labels)
 }
 
@@ -133,11 +117,7 @@ fn play(
 ) -> Played {
     let options = entrant.options.clone();
     let meter = Meter::start(plan.budget.clone(), Arc::clone(interrupt), Tracing::Off);
-    let mut trial = Trial {
-        options,
-        meter,
-        stream,
-    };
+    let mut trial = Trial { options, meter, stream };
     let cpu = ThreadTime::try_now();
     let wall = Instant::now();
     let result = guarded(|| entrant.method.solve(&instance.problem, &mut trial));
@@ -148,12 +128,7 @@ fn play(
         cpu_s: cpu.ok().map(|cpu| cpu.as_secs_f64()),
         peak_bytes: trial.meter.peak_bytes(),
     };
-    Played {
-        result,
-        wall,
-        cost,
-        effort: trial.meter.effort,
-    }
+    Played { result, wall, cost, effort: trial.meter.effort }
 }
 
 fn judge(
@@ -163,10 +138,7 @@ fn judge(
     answer: &Answer,
 ) -> Result<Judgement, RunError> {
     let known = instance.knowledge.known();
-    let internal = |detail: String| RunError::Internal {
-        trial: spec.id.clone(),
-        detail,
-    };
+    let internal = |detail: String| RunError::Internal { trial: spec.id.clone(), detail };
     guarded(|| referee::judge(&instance.problem, answer, &known, &plan.tolerance))
         .map_err(|panic| internal(format!("the referee panicked: {panic}")))?
         .map_err(|contradiction| internal(contradiction.to_string()))
@@ -196,44 +168,25 @@ fn weigh(
         Finding::Malformed => Verdict::Malformed,
     };
     let late = wall > grace(budget.wall);
-    let large = budget
-        .memory
-        .zip(peak)
-        .is_some_and(|(limit, peak)| peak > limit + limit / 10);
+    let large = budget.memory.zip(peak).is_some_and(|(limit, peak)| peak > limit + limit / 10);
     let reached = matches!(found, Verdict::Solved | Verdict::Near);
     let (verdict, remark) = match (found, answer.stop) {
         (Verdict::Malformed, _) => (found, ""),
-        _ if late => (
-            Verdict::TimeLimit,
-            "the answer came after the wall-time limit",
-        ),
-        _ if large => (
-            Verdict::MemoryLimit,
-            "the method took more than the memory limit",
-        ),
+        _ if late => (Verdict::TimeLimit, "the answer came after the wall-time limit"),
+        _ if large => (Verdict::MemoryLimit, "the method took more than the memory limit"),
         (_, StopReason::TimeLimit) if !reached => (Verdict::TimeLimit, ""),
         (_, StopReason::MemoryLimit) if !reached => (Verdict::MemoryLimit, ""),
-        (Verdict::Infeasible, StopReason::PrimalInfeasible) => (
-            Verdict::Failed,
-            "the method finds the relaxation primal infeasible",
-        ),
-        (Verdict::Infeasible, StopReason::DualInfeasible) => (
-            Verdict::Failed,
-            "the method finds the relaxation dual infeasible",
-        ),
+        (Verdict::Infeasible, StopReason::PrimalInfeasible) => {
+            (Verdict::Failed, "the method finds the relaxation primal infeasible")
+        }
+        (Verdict::Infeasible, StopReason::DualInfeasible) => {
+            (Verdict::Failed, "the method finds the relaxation dual infeasible")
+        }
         _ => (found, ""),
     };
-    let reason = if verdict == Verdict::Solved {
-        ""
-    } else {
-        judgement.reason.as_str()
-    };
+    let reason = if verdict == Verdict::Solved { "" } else { judgement.reason.as_str() };
     let parts = [remark, reason, answer.note.as_str()];
-    let message = parts
-        .into_iter()
-        .filter(|part| !part.is_empty())
-        .collect::<Vec<_>>()
-        .join("; ");
+    let message = parts.into_iter().filter(|part| !part.is_empty()).collect::<Vec<_>>().join("; ");
     Outcome {
         verdict,
         stop_reason: answer.stop.word(),

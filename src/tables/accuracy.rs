@@ -27,13 +27,7 @@ pub(super) fn table(input: &Input<'_>) -> Table {
         Column::stable("median_objective_error", "objective\nerror, med"),
     ];
     let rows = groups(input).iter().map(row).collect();
-    Table {
-        name: "accuracy",
-        title: "Accuracy by family and method",
-        caption,
-        columns,
-        rows,
-    }
+    Table { name: "accuracy", title: "Accuracy by family and method", caption, columns, rows }
 }
 
 fn row(group: &Group<'_>) -> Vec<Cell> {
@@ -46,22 +40,15 @@ fn row(group: &Group<'_>) -> Vec<Cell> {
         .filter(|record| judged(record))
         .map(|record| Some(record.digits.unwrap_or(0.0)))
         .collect();
-    let errors = group
-        .records
-        .iter()
-        .filter(|record| judged(record))
-        .map(|record| record.objective_error);
+    let errors =
+        group.records.iter().filter(|record| judged(record)).map(|record| record.objective_error);
     let mut row = group.head();
     row.extend([
         Cell::count(group.records.len()),
         Cell::count(solved),
         Cell::count(group.count(|record| record.verdict == Verdict::Near)),
         Cell::count(group.count(|record| record.verdict.is_feasible())),
-        if known == 0 {
-            Cell::Missing
-        } else {
-            Cell::share(solved, known)
-        },
+        if known == 0 { Cell::Missing } else { Cell::share(solved, known) },
         Cell::real(median(digits.iter().copied()), Style::Fixed(1)),
         Cell::real(least(digits.iter().copied()), Style::Fixed(1)),
         Cell::real(median(errors), Style::Power),

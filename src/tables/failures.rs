@@ -22,20 +22,11 @@ pub(super) fn table(input: &Input<'_>) -> Table {
     ];
     let mut rows = Vec::new();
     for group in groups(input).iter().filter(|group| group.family != OVERALL) {
-        for verdict in Verdict::ALL
-            .into_iter()
-            .filter(|verdict| *verdict != Verdict::Solved)
-        {
-            let found: Vec<_> = group
-                .records
-                .iter()
-                .filter(|record| record.verdict == verdict)
-                .collect();
+        for verdict in Verdict::ALL.into_iter().filter(|verdict| *verdict != Verdict::Solved) {
+            let found: Vec<_> =
+                group.records.iter().filter(|record| record.verdict == verdict).collect();
             let Some(first) = found.first() else { continue };
-            let example = found
-                .iter()
-                .find(|record| !record.message.is_empty())
-                .unwrap_or(first);
+            let example = found.iter().find(|record| !record.message.is_empty()).unwrap_or(first);
             let mut row = group.head();
             row.extend([
                 Cell::word(verdict.word()),

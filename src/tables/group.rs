@@ -50,11 +50,7 @@ pub(super) fn groups<'a>(input: &Input<'a>) -> Vec<Group<'a>> {
             let pass = |record: &&Record| record.method == method && of_family(record);
             let records: Vec<_> = input.records.iter().filter(pass).collect();
             if !records.is_empty() {
-                groups.push(Group {
-                    family,
-                    method,
-                    records,
-                });
+                groups.push(Group { family, method, records });
             }
         }
     };

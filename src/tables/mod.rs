@@ -45,16 +45,8 @@ pub fn all(input: &Input<'_>) -> Vec<Table> {
 
 /// Returns accuracy, rank and runtime as aligned text, at most [`TEXT_WIDTH`] columns wide.
 pub fn summary(input: &Input<'_>) -> String {
-    let tables = [
-        accuracy::table(input),
-        rank::table(input),
-        runtime::table(input),
-    ];
-    tables
-        .iter()
-        .map(|table| table.to_text(TEXT_WIDTH))
-        .collect::<Vec<_>>()
-        .join("\n")
+    let tables = [accuracy::table(input), rank::table(input), runtime::table(input)];
+    tables.iter().map(|table| table.to_text(TEXT_WIDTH)).collect::<Vec<_>>().join("\n")
 }
 
 /// Width of the text form, in characters.

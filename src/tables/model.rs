@@ -34,30 +34,17 @@ pub struct Column {
 impl Column {
     /// Makes a column that is the same in every run and stands everywhere.
     pub(super) fn stable(name: &'static str, heading: &'static str) -> Self {
-        Column {
-            name,
-            heading,
-            nature: Nature::Stable,
-            reach: Reach::Everywhere,
-        }
+        Column { name, heading, nature: Nature::Stable, reach: Reach::Everywhere }
     }
 
     /// Makes a column of time or memory figures that stands everywhere.
     pub(super) fn measured(name: &'static str, heading: &'static str) -> Self {
-        Column {
-            name,
-            heading,
-            nature: Nature::Measured,
-            reach: Reach::Everywhere,
-        }
+        Column { name, heading, nature: Nature::Measured, reach: Reach::Everywhere }
     }
 
     /// Leaves the column out of the summary on the terminal.
     pub(super) fn in_files(self) -> Self {
-        Column {
-            reach: Reach::Files,
-            ..self
-        }
+        Column { reach: Reach::Files, ..self }
     }
 }
 
@@ -133,11 +120,8 @@ pub struct Table {
 impl Table {
     /// Returns the table without its measured columns.
     pub fn stable(&self) -> Table {
-        let keep: Vec<bool> = self
-            .columns
-            .iter()
-            .map(|column| column.nature == Nature::Stable)
-            .collect();
+        let keep: Vec<bool> =
+            self.columns.iter().map(|column| column.nature == Nature::Stable).collect();
         self.keeping(&keep)
     }
 

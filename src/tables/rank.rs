@@ -31,57 +31,28 @@ pub(super) fn table(input: &Input<'_>) -> Table {
         .iter()
         .map(|instance| (instance.instance.as_str(), instance.rank_bound))
         .collect();
-    let rows = groups(input)
-        .iter()
-        .map(|group| row(group, &bounds))
-        .collect();
-    Table {
-        name: "rank",
-        title: "Rank by family and method",
-        caption,
-        columns,
-        rows,
-    }
+    let rows = groups(input).iter().map(|group| row(group, &bounds)).collect();
+    Table { name: "rank", title: "Rank by family and method", caption, columns, rows }
 }
 
 /// Shows one target or the range of targets.
 fn targets(group: &Group<'_>) -> Cell {
-    let least = group
-        .records
-        .iter()
-        .map(|record| record.target_rank)
-        .min()
-        .unwrap_or(0);
-    let most = group
-        .records
-        .iter()
-        .map(|record| record.target_rank)
-        .max()
-        .unwrap_or(0);
-    if least == most {
-        Cell::Count(least)
-    } else {
-        Cell::Word(format!("{least}-{most}"))
-    }
+    let least = group.records.iter().map(|record| record.target_rank).min().unwrap_or(0);
+    let most = group.records.iter().map(|record| record.target_rank).max().unwrap_or(0);
+    if least == most { Cell::Count(least) } else { Cell::Word(format!("{least}-{most}")) }
 }
 
 fn row(group: &Group<'_>, bounds: &BTreeMap<&str, u64>) -> Vec<Cell> {
     let trials = group.records.len();
     let rank = group.each(|record| record.rank_at_1e6.map(|rank| rank as f64));
-    let at_target = group.count(|record| {
-        record
-            .rank_at_1e6
-            .is_some_and(|rank| rank <= record.target_rank)
-    });
+    let at_target =
+        group.count(|record| record.rank_at_1e6.is_some_and(|rank| rank <= record.target_rank));
     let bounded = in_order(group.records.iter().map(|record| record.instance.as_str()))
         .iter()
         .all(|instance| bounds.contains_key(instance));
     let at_bound = group.count(|record| {
         let bound = bounds.get(record.instance.as_str());
-        record
-            .rank_at_1e6
-            .zip(bound.copied())
-            .is_some_and(|(rank, bound)| rank <= bound)
+        record.rank_at_1e6.zip(bound.copied()).is_some_and(|(rank, bound)| rank <= bound)
     });
     let mut row = group.head();
     row.extend([
@@ -91,15 +62,8 @@ fn row(group: &Group<'_>, bounds: &BTreeMap<&str, u64>) -> Vec<Cell> {
         Cell::real(median_measured(rank.iter().copied()), Style::Significant),
         largest(rank).map_or(Cell::Missing, |rank| Cell::Count(rank as u64)),
         Cell::share(at_target, trials),
-        if bounded {
-            Cell::share(at_bound, trials)
-        } else {
-            Cell::Missing
-        },
-        Cell::real(
-            median_measured(group.each(|record| record.tail_ratio)),
-            Style::Power,
-        ),
+        if bounded { Cell::share(at_bound, trials) } else { Cell::Missing },
+        Cell::real(median_measured(group.each(|record| record.tail_ratio)), Style::Power),
     ]);
     row
 }

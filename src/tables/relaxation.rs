@@ -28,28 +28,20 @@ pub(super) fn table(input: &Input<'_>) -> Table {
         .map(|instance| (instance.instance.as_str(), instance.relaxation.as_str()))
         .collect();
     let relaxes = |label: &str| {
-        input
-            .methods
-            .iter()
-            .any(|method| method.label == label && method.class == "relaxation")
+        input.methods.iter().any(|method| method.label == label && method.class == "relaxation")
     };
     let mut rows = Vec::new();
-    for group in groups(input)
-        .iter()
-        .filter(|group| group.family != OVERALL && relaxes(group.method))
+    for group in
+        groups(input).iter().filter(|group| group.family != OVERALL && relaxes(group.method))
     {
         let gaps = group.each(|record| {
             let (optimum, value) = record.optimum.zip(record.raw_objective)?;
             (record.stop_reason == "converged").then(|| (optimum - value) / (1.0 + optimum.abs()))
         });
-        let kind = group
-            .records
-            .first()
-            .and_then(|record| kinds.get(record.instance.as_str()));
+        let kind = group.records.first().and_then(|record| kinds.get(record.instance.as_str()));
         let mut row = group.head();
         row.extend([
-            kind.filter(|kind| !kind.is_empty())
-                .map_or(Cell::Missing, |kind| Cell::word(kind)),
+            kind.filter(|kind| !kind.is_empty()).map_or(Cell::Missing, |kind| Cell::word(kind)),
             Cell::count(group.records.len()),
             Cell::count(group.count(|record| record.stop_reason == "converged")),
             Cell::real(median_measured(gaps.iter().copied()), Style::Power),

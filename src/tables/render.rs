@@ -73,9 +73,7 @@ impl Table {
             .write_record(self.columns.iter().map(|column| column.name))
             .expect("memory takes the row");
         for row in &self.rows {
-            writer
-                .write_record(row.iter().map(Cell::exact))
-                .expect("memory takes the row");
+            writer.write_record(row.iter().map(Cell::exact)).expect("memory takes the row");
         }
         let bytes = writer.into_inner().expect("memory takes the rows");
         String::from_utf8(bytes).expect("cells are text")
@@ -103,23 +101,15 @@ impl Table {
     /// Returns the table as aligned text of at most `width` characters a line: rows under the name
     /// of their family, files-only columns left out. The method's column is cut when it must be.
     pub fn to_text(&self, width: usize) -> String {
-        let keep: Vec<bool> = self
-            .columns
-            .iter()
-            .map(|column| column.reach == Reach::Everywhere)
-            .collect();
+        let keep: Vec<bool> =
+            self.columns.iter().map(|column| column.reach == Reach::Everywhere).collect();
         let table = self.keeping(&keep);
-        let lefts: Vec<bool> = (0..table.columns.len())
-            .map(|at| table.is_left(at))
-            .collect();
+        let lefts: Vec<bool> = (0..table.columns.len()).map(|at| table.is_left(at)).collect();
         let widths = table.widths(width);
         let mut out = format!("{}\n{}\n", self.title, "=".repeat(self.title.len()));
         out += &wrapped(&self.caption, width);
-        let heads: Vec<Vec<&str>> = table
-            .columns
-            .iter()
-            .map(|column| column.heading.split('\n').collect())
-            .collect();
+        let heads: Vec<Vec<&str>> =
+            table.columns.iter().map(|column| column.heading.split('\n').collect()).collect();
         let depth = heads.iter().map(Vec::len).max().unwrap_or(1);
         for level in 0..depth {
             let cells: Vec<String> = heads
@@ -127,9 +117,7 @@ impl Table {
                 .map(|lines| {
                     // Short headings stand at the bottom, next to their numbers.
                     let skip = depth - lines.len();
-                    level
-                        .checked_sub(skip)
-                        .map_or(String::new(), |at| lines[at].to_owned())
+                    level.checked_sub(skip).map_or(String::new(), |at| lines[at].to_owned())
                 })
                 .collect();
             out += &aligned(&cells[1..], &lefts[1..], &widths[1..]);
@@ -155,18 +143,9 @@ impl Table {
     fn widths(&self, width: usize) -> Vec<usize> {
         let mut widths: Vec<usize> = (0..self.columns.len())
             .map(|at| {
-                let head = self.columns[at]
-                    .heading
-                    .split('\n')
-                    .map(str::len)
-                    .max()
-                    .unwrap_or(0);
-                let body = self
-                    .rows
-                    .iter()
-                    .map(|row| row[at].shown().chars().count())
-                    .max()
-                    .unwrap_or(0);
+                let head = self.columns[at].heading.split('\n').map(str::len).max().unwrap_or(0);
+                let body =
+                    self.rows.iter().map(|row| row[at].shown().chars().count()).max().unwrap_or(0);
                 head.max(body)
             })
             .collect();
@@ -194,11 +173,7 @@ fn aligned(cells: &[String], lefts: &[bool], widths: &[usize]) -> String {
             line += &" ".repeat(GAP);
         }
         let (cell, width) = (cut(cell, widths[at]), widths[at]);
-        line += &if lefts[at] {
-            format!("{cell:<width$}")
-        } else {
-            format!("{cell:>width$}")
-        };
+        line += &if lefts[at] { format!("{cell:<width$}") } else { format!("{cell:>width$}") };
     }
     format!("{}\n", line.trim_end())
 }
@@ -226,10 +201,7 @@ mod tests {
     #[test]
     fn numbers_read_well() {
         let texts = [0.0, 3.0, 0.0123456, 12.3456, 1234.56, 123456.0, 1e-5].map(significant);
-        assert_eq!(
-            texts,
-            ["0", "3", "0.0123", "12.3", "1235", "1.2e5", "1.0e-5"]
-        );
+        assert_eq!(texts, ["0", "3", "0.0123", "12.3", "1235", "1.2e5", "1.0e-5"]);
     }
 
     #[test]

@@ -35,10 +35,7 @@ pub(super) fn table(input: &Input<'_>) -> Table {
         Column::stable("median_operator_products", "operator\nproducts").in_files(),
         Column::stable("median_inner_steps", "inner\nsteps"),
     ];
-    let rows = groups(input)
-        .iter()
-        .map(|group| row(group, input.wall_limit_s))
-        .collect();
+    let rows = groups(input).iter().map(|group| row(group, input.wall_limit_s)).collect();
     Table {
         name: "runtime",
         title: "Runtime and effort by family and method",
@@ -56,13 +53,11 @@ fn row(group: &Group<'_>, limit: f64) -> Vec<Cell> {
     let charged: Vec<f64> = group
         .records
         .iter()
-        .map(|record| {
-            if record.verdict.is_success() {
-                record.cpu_s.unwrap_or(limit)
-            } else {
-                limit
-            }
-        })
+        .map(
+            |record| {
+                if record.verdict.is_success() { record.cpu_s.unwrap_or(limit) } else { limit }
+            },
+        )
         .collect();
     let effort = |count: fn(&Record) -> Option<u64>, style| {
         Cell::real(
@@ -75,10 +70,7 @@ fn row(group: &Group<'_>, limit: f64) -> Vec<Cell> {
         Cell::count(group.records.len()),
         Cell::real(median_measured(cpu.iter().copied()), Style::Significant),
         Cell::real(largest(cpu), Style::Significant),
-        Cell::real(
-            shifted_geometric_mean(&charged, SHIFT_S),
-            Style::Significant,
-        ),
+        Cell::real(shifted_geometric_mean(&charged, SHIFT_S), Style::Significant),
         Cell::real(median_measured(wall.iter().copied()), Style::Significant),
         Cell::real(largest(wall), Style::Significant),
         Cell::real(median_measured(peak.iter().copied()), Style::Significant),

@@ -3,20 +3,15 @@
 /// Returns the median; a value that is missing counts as infinite, so that failures cannot improve
 /// it. None for an empty sample or when the median is infinite.
 pub(super) fn median(values: impl IntoIterator<Item = Option<f64>>) -> Option<f64> {
-    let mut sorted: Vec<f64> = values
-        .into_iter()
-        .map(|value| value.unwrap_or(f64::INFINITY))
-        .collect();
+    let mut sorted: Vec<f64> =
+        values.into_iter().map(|value| value.unwrap_or(f64::INFINITY)).collect();
     if sorted.is_empty() {
         return None;
     }
     sorted.sort_by(f64::total_cmp);
     let half = sorted.len() / 2;
-    let value = if sorted.len() % 2 == 1 {
-        sorted[half]
-    } else {
-        (sorted[half - 1] + sorted[half]) / 2.0
-    };
+    let value =
+        if sorted.len() % 2 == 1 { sorted[half] } else { (sorted[half - 1] + sorted[half]) / 2.0 };
     value.is_finite().then_some(value)
 }
 

@@ -60,13 +60,8 @@ impl PlanError {
         }
         let before = &text[..start];
         let line_start = before.rfind('\n').map_or(0, |at| at + 1);
-        let mut token: String = text[start..end]
-            .lines()
-            .next()
-            .unwrap_or("")
-            .chars()
-            .take(60)
-            .collect();
+        let mut token: String =
+            text[start..end].lines().next().unwrap_or("").chars().take(60).collect();
         if token.len() < text[start..end].len() && !token.is_empty() {
             token.push_str("...");
         }
@@ -86,11 +81,7 @@ impl PlanError {
 
 impl fmt::Display for PlanError {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        write!(
-            f,
-            "{}:{}:{}: {}",
-            self.file, self.line, self.column, self.message
-        )?;
+        write!(f, "{}:{}:{}: {}", self.file, self.line, self.column, self.message)?;
         if self.expected.is_empty() {
             return Ok(());
         }

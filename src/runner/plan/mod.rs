@@ -36,25 +36,15 @@ pub struct Roster<'a> {
 impl Roster<'static> {
     /// Returns the built-in families and methods.
     pub fn built_in() -> Self {
-        Roster {
-            families: crate::families::registry(),
-            methods: crate::methods::registry(),
-        }
+        Roster { families: crate::families::registry(), methods: crate::methods::registry() }
     }
 }
 
 impl std::fmt::Debug for Roster<'_> {
     fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
-        let families: Vec<_> = self
-            .families
-            .iter()
-            .map(|family| family.card().id)
-            .collect();
+        let families: Vec<_> = self.families.iter().map(|family| family.card().id).collect();
         let methods: Vec<_> = self.methods.iter().map(|method| method.card().id).collect();
-        f.debug_struct("Roster")
-            .field("families", &families)
-            .field("methods", &methods)
-            .finish()
+        f.debug_struct("Roster").field("families", &families).field("methods", &methods).finish()
     }
 }
 
@@ -207,16 +197,12 @@ impl<'a> Plan<'a> {
         ])?;
         let stem = file_name.strip_suffix(".toml").unwrap_or(file_name);
         let plan = Plan {
-            title: top
-                .text("title")?
-                .map_or_else(|| stem.to_owned(), |title| title.value),
+            title: top.text("title")?.map_or_else(|| stem.to_owned(), |title| title.value),
             file_name: file_name.to_owned(),
             text: text.to_owned(),
             digest: super::hexadecimal_digest(text.as_bytes()),
             seed: sections::seed(&top)?,
-            repeats: top
-                .whole("repeats", 1, 1000)?
-                .map_or(1, |repeats| repeats.value),
+            repeats: top.whole("repeats", 1, 1000)?.map_or(1, |repeats| repeats.value),
             budget: sections::budget(&top)?,
             tolerance: sections::tolerance(&top)?,
             sown: sections::families(&top, roster.families)?,
@@ -224,10 +210,8 @@ impl<'a> Plan<'a> {
             entrants: sections::methods(&top, roster.methods)?,
         };
         if plan.sown.is_empty() && plan.imported.is_empty() {
-            return Err(document.missing(
-                "a plan without instances",
-                "at least one [[family]] or [[import]]",
-            ));
+            return Err(document
+                .missing("a plan without instances", "at least one [[family]] or [[import]]"));
         }
         if plan.entrants.is_empty() {
             return Err(document.missing("a plan without methods", "at least one [[method]]"));
@@ -249,11 +233,7 @@ impl<'a> Plan<'a> {
 
     fn check_size(&self, document: &Document<'_>) -> Result<(), PlanError> {
         const MOST: u128 = 10_000_000;
-        let instances: u128 = self
-            .sown
-            .iter()
-            .map(|sown| u128::from(sown.count))
-            .sum::<u128>()
+        let instances: u128 = self.sown.iter().map(|sown| u128::from(sown.count)).sum::<u128>()
             + self.imported.len() as u128;
         let trials = instances * self.entrants.len() as u128 * u128::from(self.repeats);
         if trials > MOST {

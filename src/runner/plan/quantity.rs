@@ -11,9 +11,7 @@ pub(super) const SIZE: &str = "a size above zero such as \"2 GiB\", \"512 MiB\" 
 
 fn split(text: &str) -> Option<(f64, &str)> {
     let text = text.trim();
-    let end = text
-        .find(|c: char| !(c.is_ascii_digit() || c == '.'))
-        .unwrap_or(text.len());
+    let end = text.find(|c: char| !(c.is_ascii_digit() || c == '.')).unwrap_or(text.len());
     let number: f64 = text[..end].parse().ok()?;
     (number.is_finite() && number > 0.0).then_some((number, text[end..].trim_start()))
 }
@@ -28,9 +26,7 @@ pub(super) fn duration(text: &str) -> Option<Duration> {
         "h" => number * 3600.0,
         _ => return None,
     };
-    (1e-3..=3.6e6)
-        .contains(&seconds)
-        .then(|| Duration::from_secs_f64(seconds))
+    (1e-3..=3.6e6).contains(&seconds).then(|| Duration::from_secs_f64(seconds))
 }
 
 /// Reads a size in bytes: a number and one of `B`, `kB`, `MB`, `GB`, `KiB`, `MiB`, `GiB`, `TiB`.
@@ -49,9 +45,7 @@ pub(super) fn size(text: &str) -> Option<u64> {
     };
     let bytes = number * factor;
     // 2^53 bytes is the last size that a double counts exactly.
-    (1.0..=9_007_199_254_740_992.0)
-        .contains(&bytes)
-        .then_some(bytes as u64)
+    (1.0..=9_007_199_254_740_992.0).contains(&bytes).then_some(bytes as u64)
 }
 
 #[cfg(test)]
@@ -63,9 +57,7 @@ mod tests {
         assert_eq!(duration("20s"), Some(Duration::from_secs(20)));
         assert_eq!(duration("500 ms"), Some(Duration::from_millis(500)));
         assert_eq!(duration("1.5min"), Some(Duration::from_secs(90)));
-        for bad in [
-            "", "20", "s", "-3s", "0s", "20 sec", "1..5s", "infs", "99999h",
-        ] {
+        for bad in ["", "20", "s", "-3s", "0s", "20 sec", "1..5s", "infs", "99999h"] {
             assert_eq!(duration(bad), None, "{bad}");
         }
     }
@@ -75,16 +67,7 @@ mod tests {
         assert_eq!(size("2 GiB"), Some(2 << 30));
         assert_eq!(size("1.5MiB"), Some(3 << 19));
         assert_eq!(size("64 MB"), Some(64_000_000));
-        for bad in [
-            "",
-            "2",
-            "GiB",
-            "2 gib",
-            "0 B",
-            "-1 MB",
-            "1e3 B",
-            "99999999 TiB",
-        ] {
+        for bad in ["", "2", "GiB", "2 gib", "0 B", "-1 MB", "1e3 B", "99999999 TiB"] {
             assert_eq!(size(bad), None, "{bad}");
         }
     }

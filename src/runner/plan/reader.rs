@@ -20,16 +20,10 @@ impl<'t> Document<'t> {
 
     /// Parses the document.
     pub(super) fn parse(&self) -> Result<DeTable<'t>, PlanError> {
-        DeTable::parse(self.text)
-            .map(Spanned::into_inner)
-            .map_err(|error| {
-                let message = error
-                    .message()
-                    .split_whitespace()
-                    .collect::<Vec<_>>()
-                    .join(" ");
-                self.error(error.span().unwrap_or(0..0), &message, "", None)
-            })
+        DeTable::parse(self.text).map(Spanned::into_inner).map_err(|error| {
+            let message = error.message().split_whitespace().collect::<Vec<_>>().join(" ");
+            self.error(error.span().unwrap_or(0..0), &message, "", None)
+        })
     }
 
     /// Makes an error at `span`.
@@ -88,12 +82,7 @@ fn kind(value: &DeValue<'_>) -> &'static str {
 impl<'d, 't> Section<'d, 't> {
     /// Wraps the whole document.
     pub(super) fn top(document: &'d Document<'t>, table: &'d DeTable<'t>) -> Self {
-        Section {
-            document,
-            name: "the plan",
-            table,
-            span: 0..0,
-        }
+        Section { document, name: "the plan", table, span: 0..0 }
     }
 
     /// Lists the keys in the order of the file.
@@ -101,11 +90,7 @@ impl<'d, 't> Section<'d, 't> {
         let mut entries: Vec<_> = self
             .table
             .iter()
-            .map(|(key, value)| Entry {
-                key: key.get_ref(),
-                key_span: key.span(),
-                value,
-            })
+            .map(|(key, value)| Entry { key: key.get_ref(), key_span: key.span(), value })
             .collect();
         entries.sort_by_key(|entry| entry.key_span.start);
         entries
@@ -113,11 +98,7 @@ impl<'d, 't> Section<'d, 't> {
 
     /// Refuses every key that is not in `known`.
     pub(super) fn only(&self, known: &[&str]) -> Result<(), PlanError> {
-        match self
-            .entries()
-            .iter()
-            .find(|entry| !known.contains(&entry.key))
-        {
+        match self.entries().iter().find(|entry| !known.contains(&entry.key)) {
             None => Ok(()),
             Some(entry) => Err(self.document.error(
                 entry.key_span.clone(),
@@ -136,12 +117,7 @@ impl<'d, 't> Section<'d, 't> {
     /// Makes an error about a key the section lacks; it stands where the section starts.
     pub(super) fn lacks(&self, key: &str, expected: &str) -> PlanError {
         let head = self.span.start..self.span.start;
-        self.document.error(
-            head,
-            &format!("{} has no `{key}`", self.name),
-            expected,
-            None,
-        )
+        self.document.error(head, &format!("{} has no `{key}`", self.name), expected, None)
     }
 
     /// Makes an error about the value of `entry`.
@@ -155,10 +131,9 @@ impl<'d, 't> Section<'d, 't> {
             return Ok(None);
         };
         match entry.value.get_ref().as_str() {
-            Some(text) if !text.trim().is_empty() => Ok(Some(Placed {
-                value: text.to_owned(),
-                span: entry.value.span(),
-            })),
+            Some(text) if !text.trim().is_empty() => {
+                Ok(Some(Placed { value: text.to_owned(), span: entry.value.span() }))
+            }
             Some(_) => Err(self.wrong(&entry, "a text that is not empty")),
             None => Err(self.wrong(&entry, "a text in quotes")),
         }
@@ -176,10 +151,9 @@ impl<'d, 't> Section<'d, 't> {
         };
         let value = integer(entry.value.get_ref()).and_then(|value| u64::try_from(value).ok());
         match value {
-            Some(value) if (least..=most).contains(&value) => Ok(Some(Placed {
-                value,
-                span: entry.value.span(),
-            })),
+            Some(value) if (least..=most).contains(&value) => {
+                Ok(Some(Placed { value, span: entry.value.span() }))
+            }
             _ => Err(self.wrong(&entry, &format!("a whole number from {least} to {most}"))),
         }
     }
@@ -198,10 +172,7 @@ impl<'d, 't> Section<'d, 't> {
             value => integer(value).map(|value| value as f64),
         };
         match value.filter(|value| value.is_finite()) {
-            Some(value) => Ok(Some(Placed {
-                value,
-                span: entry.value.span(),
-            })),
+            Some(value) => Ok(Some(Placed { value, span: entry.value.span() })),
             None => Err(self.wrong(&entry, expected)),
         }
     }
@@ -216,12 +187,9 @@ impl<'d, 't> Section<'d, 't> {
             return Ok(None);
         };
         match entry.value.get_ref() {
-            DeValue::Table(table) => Ok(Some(Section {
-                document: self.document,
-                name,
-                table,
-                span: entry.value.span(),
-            })),
+            DeValue::Table(table) => {
+                Ok(Some(Section { document: self.document, name, table, span: entry.value.span() }))
+            }
             _ => Err(self.wrong(&entry, &format!("a table: {name}"))),
         }
     }
@@ -236,10 +204,7 @@ impl<'d, 't> Section<'d, 't> {
             return Ok(Vec::new());
         };
         let DeValue::Array(items) = entry.value.get_ref() else {
-            return Err(self.wrong(
-                &entry,
-                &format!("a list of tables: {name} in double brackets"),
-            ));
+            return Err(self.wrong(&entry, &format!("a list of tables: {name} in double brackets")));
         };
         let mut sections = Vec::new();
         for item in items.iter() {
@@ -283,25 +248,16 @@ pub(super) fn setting(
 ) -> Result<Placed<Setting>, PlanError> {
     let setting = match value.get_ref() {
         DeValue::String(word) => Some(Setting::Word(word.to_string())),
-        DeValue::Float(float) => float
-            .as_str()
-            .parse::<f64>()
-            .ok()
-            .filter(|v| v.is_finite())
-            .map(Setting::decimal),
+        DeValue::Float(float) => {
+            float.as_str().parse::<f64>().ok().filter(|v| v.is_finite()).map(Setting::decimal)
+        }
         other => integer(other).map(Setting::Integer),
     };
     match setting {
-        Some(value_read) => Ok(Placed {
-            value: value_read,
-            span: value.span(),
-        }),
-        None => Err(wrong(
-            document,
-            key,
-            value,
-            "a word, a whole number or a finite decimal number",
-        )),
+        Some(value_read) => Ok(Placed { value: value_read, span: value.span() }),
+        None => {
+            Err(wrong(document, key, value, "a word, a whole number or a finite decimal number"))
+        }
     }
 }
 
@@ -315,12 +271,7 @@ pub(super) fn settings(
         return Ok(vec![setting(document, key, value)?]);
     };
     if items.is_empty() {
-        return Err(wrong(
-            document,
-            key,
-            value,
-            "at least one value in the list",
-        ));
+        return Err(wrong(document, key, value, "at least one value in the list"));
     }
     let mut read: Vec<Placed<Setting>> = Vec::with_capacity(items.len());
     for item in items.iter() {

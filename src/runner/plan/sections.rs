@@ -23,18 +23,14 @@ pub(super) fn seed(top: &Section<'_, '_>) -> Result<u64, PlanError> {
     const MOST: u64 = i64::MAX as u64;
     match top.whole("seed", 0, MOST)? {
         Some(seed) => Ok(seed.value),
-        None => Err(top.lacks(
-            "seed",
-            "a line such as `seed = 1`: every random draw comes from it",
-        )),
+        None => {
+            Err(top.lacks("seed", "a line such as `seed = 1`: every random draw comes from it"))
+        }
     }
 }
 
 pub(super) fn budget(top: &Section<'_, '_>) -> Result<Budget, PlanError> {
-    let mut budget = Budget {
-        wall: DEFAULT_WALL,
-        memory: None,
-    };
+    let mut budget = Budget { wall: DEFAULT_WALL, memory: None };
     let Some(section) = top.table("budget", "[budget]")? else {
         return Ok(budget);
     };
@@ -81,19 +77,15 @@ fn look_up<T: Copy>(
     known: &[T],
     id: impl Fn(T) -> &'static str,
 ) -> Result<T, PlanError> {
-    known
-        .iter()
-        .copied()
-        .find(|candidate| id(*candidate) == named.value)
-        .ok_or_else(|| {
-            let ids: Vec<_> = known.iter().map(|candidate| id(*candidate)).collect();
-            document.error(
-                named.span.clone(),
-                &format!("unknown {what}"),
-                &format!("one of {}", ids.join(", ")),
-                nearest_word(&named.value, ids.iter().copied()),
-            )
-        })
+    known.iter().copied().find(|candidate| id(*candidate) == named.value).ok_or_else(|| {
+        let ids: Vec<_> = known.iter().map(|candidate| id(*candidate)).collect();
+        document.error(
+            named.span.clone(),
+            &format!("unknown {what}"),
+            &format!("one of {}", ids.join(", ")),
+            nearest_word(&named.value, ids.iter().copied()),
+        )
+    })
 }
 
 /// Places a setting error: at the key when it is unknown, at the value otherwise.
@@ -115,12 +107,7 @@ fn place_setting_error(
             },
             nearest.as_deref(),
         ),
-        SettingError::Value {
-            name,
-            expected,
-            nearest,
-            ..
-        } => document.error(
+        SettingError::Value { name, expected, nearest, .. } => document.error(
             value_span,
             &format!("`{name}` has an impossible value"),
             expected,
@@ -141,22 +128,14 @@ pub(super) fn families<'a>(
             .text("name")?
             .ok_or_else(|| section.lacks("name", "a line such as `name = \"tight-unique\"`"))?;
         let family = look_up(document, "family", &named, known, |family| family.card().id)?;
-        let count = section
-            .whole("count", 1, 1_000_000)?
-            .map_or(1, |count| count.value);
+        let count = section.whole("count", 1, 1_000_000)?.map_or(1, |count| count.value);
         for (parameters, places) in combinations(&section, family.card().parameters)? {
             if !seen.insert((family.card().id, parameters.clone())) {
                 let message =
                     format!("family with the parameters {parameters} stands in the plan twice");
                 return Err(document.error(named.span, &message, "each combination once", None));
             }
-            sown.push(Sown {
-                family,
-                parameters,
-                count,
-                span: named.span.clone(),
-                places,
-            });
+            sown.push(Sown { family, parameters, count, span: named.span.clone(), places });
         }
     }
     Ok(sown)
@@ -185,9 +164,7 @@ fn combinations(
             axes.push((entry.key.to_owned(), entry.key_span, values));
         }
     }
-    let total = axes
-        .iter()
-        .try_fold(1usize, |product, axis| product.checked_mul(axis.2.len()));
+    let total = axes.iter().try_fold(1usize, |product, axis| product.checked_mul(axis.2.len()));
     let Some(total) = total.filter(|total| *total <= 1_000_000) else {
         return Err(section.lacks("end", "at most 1000000 combinations of parameters"));
     };
@@ -204,13 +181,8 @@ fn combinations(
         }
         let settings = Settings::resolve(specs, &given)
             .map_err(|error| place_setting_error(document, "parameter", &error, &places))?;
-        resolved.push((
-            settings,
-            places
-                .into_iter()
-                .map(|(name, (_, span))| (name, span))
-                .collect(),
-        ));
+        resolved
+            .push((settings, places.into_iter().map(|(name, (_, span))| (name, span)).collect()));
     }
     Ok(resolved)
 }
@@ -222,13 +194,8 @@ pub(super) fn imports(top: &Section<'_, '_>, folder: &Path) -> Result<Vec<Import
         let path = section
             .text("path")?
             .ok_or_else(|| section.lacks("path", "a line such as `path = \"example.dat-s\"`"))?;
-        let rank = section
-            .whole("rank", 1, u64::from(u32::MAX))?
-            .map(|rank| rank.value as usize);
-        if imported
-            .iter()
-            .any(|before| before.path == path.value && before.rank == rank)
-        {
+        let rank = section.whole("rank", 1, u64::from(u32::MAX))?.map(|rank| rank.value as usize);
+        if imported.iter().any(|before| before.path == path.value && before.rank == rank) {
             let message = "file with this rank stands in the plan twice";
             return Err(section.document.error(
                 path.span,
@@ -257,12 +224,9 @@ fn optimum(import: &Section<'_, '_>) -> Result<Option<ReportedOptimum>, PlanErro
     let value = section
         .number("value", "a finite number")?
         .ok_or_else(|| section.lacks("value", EXPECTED))?;
-    let digits = section
-        .whole("digits", 1, 15)?
-        .ok_or_else(|| section.lacks("digits", EXPECTED))?;
-    let source = section
-        .text("source")?
-        .ok_or_else(|| section.lacks("source", EXPECTED))?;
+    let digits =
+        section.whole("digits", 1, 15)?.ok_or_else(|| section.lacks("digits", EXPECTED))?;
+    let source = section.text("source")?.ok_or_else(|| section.lacks("source", EXPECTED))?;
     Ok(Some(ReportedOptimum {
         value: value.value,
         digits: digits.value as u32,
@@ -294,21 +258,14 @@ pub(super) fn methods<'a>(
         let options = options(&section, method.card().options)?;
         let label = match section.text("label")? {
             Some(label) => checked_label(document, label)?,
-            None => Placed {
-                value: default_label(method, &options),
-                span: named.span,
-            },
+            None => Placed { value: default_label(method, &options), span: named.span },
         };
         if entrants.iter().any(|before| before.label == label.value) {
             let message = format!("label {} stands in the plan twice", label.value);
             let expected = "another `label` for each method with the same name and options";
             return Err(document.error(label.span, &message, expected, None));
         }
-        entrants.push(Entrant {
-            label: label.value,
-            method,
-            options,
-        });
+        entrants.push(Entrant { label: label.value, method, options });
     }
     Ok(entrants)
 }
@@ -322,10 +279,7 @@ fn options(method: &Section<'_, '_>, specs: &[SettingSpec]) -> Result<Settings, 
                 setting(method.document, entry.key, entry.value)?
             } else {
                 // The name is wrong already; resolving says so.
-                Placed {
-                    value: Setting::Integer(0),
-                    span: entry.value.span(),
-                }
+                Placed { value: Setting::Integer(0), span: entry.value.span() }
             };
             places.insert(entry.key.to_owned(), (entry.key_span, value.span));
             given.insert(entry.key.to_owned(), value.value);
