@@ -17,9 +17,7 @@ fn positive_definite(n: usize) -> Mat<f64> {
     let mut entries = vec![0.0; n * n];
     fill_pseudo_random(n as u64, &mut entries);
     let shift = n as f64;
-    let mut a = Mat::from_fn(n, n, |i, j| {
-        entries[i + n * j] + if i == j { shift } else { 0.0 }
-    });
+    let mut a = Mat::from_fn(n, n, |i, j| entries[i + n * j] + if i == j { shift } else { 0.0 });
     symmetrise(a.as_mut());
     a
 }
@@ -66,13 +64,7 @@ fn dense(c: &mut Criterion) {
         group.throughput(Throughput::Elements(flops::gemm(n, n, n)));
         group.bench_function(BenchmarkId::new("gemm", n), |b| {
             b.iter(|| {
-                gemm(
-                    out.as_mut(),
-                    Accumulate::Replace,
-                    1.0,
-                    black_box(a.as_ref()),
-                    l.as_ref(),
-                )
+                gemm(out.as_mut(), Accumulate::Replace, 1.0, black_box(a.as_ref()), l.as_ref())
             });
         });
         group.throughput(Throughput::Elements(flops::cholesky(n)));
@@ -111,10 +103,7 @@ fn krylov(c: &mut Criterion) {
     for n in ORDERS {
         let factor = factor_of(&positive_definite(n));
         let direction = {
-            let mut d = positive_definite(n + 1)
-                .as_ref()
-                .submatrix(0, 0, n, n)
-                .to_owned();
+            let mut d = positive_definite(n + 1).as_ref().submatrix(0, 0, n, n).to_owned();
             for j in 0..n {
                 d[(j, j)] = -d[(j, j)] * (j as f64 / n as f64);
             }

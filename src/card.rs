@@ -259,11 +259,17 @@ fn admit(spec: &SettingSpec, value: &Setting) -> Result<Setting, SettingError> {
         nearest: nearest.map(str::to_owned),
     };
     let integer_in = |value: i64, least: i64, most: i64| {
-        if (least..=most).contains(&value) { Ok(Setting::Integer(value)) } else { Err(refuse(None)) }
+        if (least..=most).contains(&value) {
+            Ok(Setting::Integer(value))
+        } else {
+            Err(refuse(None))
+        }
     };
     match (spec.kind, value) {
         (Kind::Integer { least, most }, Setting::Integer(v)) => integer_in(*v, least, most),
-        (Kind::WordOrInteger { least, most, .. }, Setting::Integer(v)) => integer_in(*v, least, most),
+        (Kind::WordOrInteger { least, most, .. }, Setting::Integer(v)) => {
+            integer_in(*v, least, most)
+        }
         (Kind::Word(words) | Kind::WordOrInteger { words, .. }, Setting::Word(word)) => {
             if words.contains(&word.as_str()) {
                 Ok(value.clone())

@@ -98,20 +98,8 @@ fn dense_kernels_do_not_allocate_once_warm() {
             cholesky::invert_from_factor(l.as_ref(), out.as_mut(), &mut ws);
         });
         assert_silent("products", n, || {
-            dense::gemm(
-                out.as_mut(),
-                Accumulate::Replace,
-                1.0,
-                a.as_ref(),
-                l.as_ref(),
-            );
-            dense::gemm(
-                out.as_mut(),
-                Accumulate::Add,
-                1.0,
-                a.transpose(),
-                l.as_ref(),
-            );
+            dense::gemm(out.as_mut(), Accumulate::Replace, 1.0, a.as_ref(), l.as_ref());
+            dense::gemm(out.as_mut(), Accumulate::Add, 1.0, a.transpose(), l.as_ref());
             dense::syrk_lower(out.as_mut(), Accumulate::Add, 1.0, a.as_ref());
             dense::gemv(&mut y, Accumulate::Replace, 1.0, a.as_ref(), &x);
             dense::symmetrise(out.as_mut());
@@ -132,10 +120,7 @@ fn iterative_kernels_do_not_allocate_once_warm() {
         });
         let mut ws = CgWorkspace::new();
         let (b, mut x) = (vec![1.0; n], vec![0.0; n]);
-        let params = cg::Params {
-            tolerance: 1e-10,
-            max_steps: 50,
-        };
+        let params = cg::Params { tolerance: 1e-10, max_steps: 50 };
         assert_silent("conjugate gradients", n, || {
             x.fill(0.0);
             cg::solve(&mut op, &b, &mut x, &params, &mut ws);

@@ -17,7 +17,10 @@ const IMPORTS: &[(&str, &str)] = &[
     ("formats", "problem"),
     ("engines", "problem, linalg, budget, seed"),
     ("methods", "engines, problem, linalg, budget, seed, card"),
-    ("referee", "problem, linalg::eigen, linalg::norms, linalg::compensated, linalg::Mat, linalg::MatRef"),
+    (
+        "referee",
+        "problem, linalg::eigen, linalg::norms, linalg::compensated, linalg::Mat, linalg::MatRef",
+    ),
     ("runner", "families, formats, methods, referee, problem, seed, budget, record, card"),
     ("tables", "record"),
     ("cli", "*"),
@@ -39,8 +42,16 @@ const RESERVED: &[(&str, &[&str])] = &[
 
 /// What the top level holds, dot-files and build output aside.
 const TOP_LEVEL: &[&str] = &[
-    "Cargo.lock", "Cargo.toml", "DEVELOPERS.md", "LICENSE", "README.md", "benches", "instances",
-    "results", "src", "tests",
+    "Cargo.lock",
+    "Cargo.toml",
+    "DEVELOPERS.md",
+    "LICENSE",
+    "README.md",
+    "benches",
+    "instances",
+    "results",
+    "src",
+    "tests",
 ];
 
 fn root() -> PathBuf {
@@ -82,7 +93,9 @@ fn modules() -> BTreeMap<String, Vec<(String, String)>> {
 }
 
 fn is_test_file(relative: &str) -> bool {
-    relative.ends_with("/tests.rs") || relative.contains("/tests/") || relative.ends_with("_tests.rs")
+    relative.ends_with("/tests.rs")
+        || relative.contains("/tests/")
+        || relative.ends_with("_tests.rs")
 }
 
 /// Returns every `crate::a::b` path of a text; braces are expanded one level.
@@ -212,7 +225,8 @@ fn every_file_is_short_and_opens_with_its_purpose() {
 fn the_top_level_holds_what_the_map_lists() {
     for entry in fs::read_dir(root()).unwrap() {
         let name = entry.unwrap().file_name().into_string().unwrap();
-        let local = name.starts_with('.') || name == "target" || name == "runs" || name == "examples";
+        let local =
+            name.starts_with('.') || name == "target" || name == "runs" || name == "examples";
         assert!(local || TOP_LEVEL.contains(&name.as_str()), "{name} at the top level");
     }
 }
@@ -233,15 +247,23 @@ fn cards_are_complete_and_unique() {
     for family in rankassay::families::registry() {
         let card = family.card();
         ids.push(card.id);
-        for text in
-            [card.title, card.formula, card.construction, card.optimum, card.certificate, card.source]
-        {
+        for text in [
+            card.title,
+            card.formula,
+            card.construction,
+            card.optimum,
+            card.certificate,
+            card.source,
+        ] {
             assert!(text.len() > 4, "{}: an empty field", card.id);
         }
         check_settings(card.id, card.parameters);
     }
     for id in &ids {
-        assert!(id.chars().all(|c| c.is_ascii_lowercase() || c.is_ascii_digit() || c == '-'), "{id}");
+        assert!(
+            id.chars().all(|c| c.is_ascii_lowercase() || c.is_ascii_digit() || c == '-'),
+            "{id}"
+        );
     }
     let count = ids.len();
     ids.sort_unstable();

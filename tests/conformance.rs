@@ -14,12 +14,8 @@ use std::sync::atomic::AtomicBool;
 use std::time::{Duration, Instant};
 
 /// Small orders, so that the suite is quick; families not named use their defaults.
-const SMALL: &[(&str, i64)] = &[
-    ("balanced-graph", 20),
-    ("frustrated-loops", 16),
-    ("ky-fan-gap", 8),
-    ("lattice-tiles", 16),
-];
+const SMALL: &[(&str, i64)] =
+    &[("balanced-graph", 20), ("frustrated-loops", 16), ("ky-fan-gap", 8), ("lattice-tiles", 16)];
 
 fn small(family: &dyn Family) -> Settings {
     let mut given = BTreeMap::new();

@@ -1,9 +1,6 @@
 //! The readers and writers of `formats`: roundtrips, dialects, broken files, hostile text.
 
-#![allow(
-    clippy::print_stderr,
-    reason = "a test says what it skipped or measured"
-)]
+#![allow(clippy::print_stderr, reason = "a test says what it skipped or measured")]
 
 use proptest::prelude::*;
 use rankassay::formats::instance::{self, Instance};
@@ -45,14 +42,9 @@ fn number() -> impl Strategy<Value = f64> {
 
 fn sparse(order: usize) -> impl Strategy<Value = Coefficient> {
     prop::collection::btree_map((0..order, 0..order), number(), 0..6).prop_map(move |entries| {
-        let upper: std::collections::BTreeMap<_, _> = entries
-            .into_iter()
-            .map(|((i, j), value)| ((i.min(j), i.max(j)), value))
-            .collect();
-        let entries = upper
-            .into_iter()
-            .map(|((i, j), value)| (i, j, value))
-            .collect();
+        let upper: std::collections::BTreeMap<_, _> =
+            entries.into_iter().map(|((i, j), value)| ((i.min(j), i.max(j)), value)).collect();
+        let entries = upper.into_iter().map(|((i, j), value)| (i, j, value)).collect();
         Coefficient::Sparse(SparseSymmetric::gather(order, entries))
     })
 }
@@ -70,10 +62,8 @@ fn vector(length: usize) -> impl Strategy<Value = SparseVector> {
 
 fn outer(order: usize) -> impl Strategy<Value = Coefficient> {
     prop::collection::vec((number(), vector(order)), 0..3).prop_map(move |terms| {
-        let terms = terms
-            .into_iter()
-            .map(|(weight, vector)| OuterTerm { weight, vector })
-            .collect();
+        let terms =
+            terms.into_iter().map(|(weight, vector)| OuterTerm { weight, vector }).collect();
         Coefficient::Outer(OuterSum { order, terms })
     })
 }
@@ -102,9 +92,8 @@ fn functional(
         let stored =
             |part: &Coefficient| !matches!(part, Coefficient::Sparse(m) if m.stored() == 0);
         let parts = parts.into_iter().enumerate();
-        let parts = parts
-            .filter_map(|(k, part)| part.filter(stored).map(|part| (k, part)))
-            .collect();
+        let parts =
+            parts.filter_map(|(k, part)| part.filter(stored).map(|part| (k, part))).collect();
         Functional { parts, orthant }
     })
 }
@@ -114,28 +103,14 @@ fn problem(storage: Storage) -> impl Strategy<Value = Problem> {
         .prop_flat_map(move |(orders, orthant, m)| {
             let one = functional(orders.clone(), orthant, storage);
             let many = prop::collection::vec(functional(orders.clone(), orthant, storage), m);
-            let ranks: Vec<_> = orders
-                .iter()
-                .map(|&order| prop::option::of(1..=order))
-                .collect();
-            (
-                Just(orders),
-                Just(orthant),
-                one,
-                many,
-                prop::collection::vec(number(), m),
-                ranks,
-            )
+            let ranks: Vec<_> = orders.iter().map(|&order| prop::option::of(1..=order)).collect();
+            (Just(orders), Just(orthant), one, many, prop::collection::vec(number(), m), ranks)
         })
         .prop_map(move |(orders, orthant, cost, constraints, rhs, ranks)| {
             let free = storage == Storage::SparseOnly;
             let blocks = orders.into_iter().zip(ranks);
-            let blocks = blocks
-                .map(|(order, rank)| Block {
-                    order,
-                    rank: rank.filter(|_| !free),
-                })
-                .collect();
+            let blocks =
+                blocks.map(|(order, rank)| Block { order, rank: rank.filter(|_| !free) }).collect();
             Problem::new(blocks, orthant, cost, constraints, rhs).expect("a sound problem")
         })
 }
@@ -232,10 +207,7 @@ proptest! {
 
 /// Gives a text to every reader; each must return, with an error that prints and has a position.
 fn all_readers(text: &str) {
-    let order_two = Block {
-        order: 2,
-        rank: None,
-    };
+    let order_two = Block { order: 2, rank: None };
     let problem = Problem::new(vec![order_two], 0, Functional::default(), vec![], vec![])
         .expect("a sound problem");
     let errors = [
@@ -248,13 +220,8 @@ fn all_readers(text: &str) {
         assert!(error.line >= 1 && error.column >= 1, "{error}");
         assert!(error.line <= text.matches('\n').count() + 1, "{error}");
         assert!(error.to_string().starts_with("text:"), "{error}");
-        let excerpt = error
-            .excerpt
-            .expect("an error at a position shows its line");
-        assert!(
-            excerpt.start + excerpt.length <= excerpt.text.len() + 1,
-            "{excerpt:?}"
-        );
+        let excerpt = error.excerpt.expect("an error at a position shows its line");
+        assert!(excerpt.start + excerpt.length <= excerpt.text.len() + 1, "{excerpt:?}");
     }
 }
 
@@ -262,37 +229,20 @@ fn all_readers(text: &str) {
 fn certified() -> Instance {
     let cost = SparseSymmetric::gather(2, vec![(0, 0, 1.0), (0, 1, -1.0), (1, 1, 1.0)]);
     let unit = |i| {
-        Functional::on_block(
-            0,
-            Coefficient::Sparse(SparseSymmetric::gather(2, vec![(i, i, 1.0)])),
-        )
+        Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(2, vec![(i, i, 1.0)])))
     };
     let cost = Functional::on_block(0, Coefficient::Sparse(cost));
-    let blocks = vec![Block {
-        order: 2,
-        rank: Some(1),
-    }];
+    let blocks = vec![Block { order: 2, rank: Some(1) }];
     let problem = Problem::new(blocks, 0, cost, vec![unit(0), unit(1)], vec![1.0, 1.0])
         .expect("a sound problem");
     let pair = BlockPair {
-        factor: IntegerFactor {
-            order: 2,
-            width: 1,
-            rows: vec![1, 1],
-        },
-        slack: vec![IntegerColumn {
-            indices: vec![0, 1],
-            values: vec![1, -1],
-        }],
+        factor: IntegerFactor { order: 2, width: 1, rows: vec![1, 1] },
+        slack: vec![IntegerColumn { indices: vec![0, 1], values: vec![1, -1] }],
         weights: vec![1],
     };
     let multipliers = vec![0, 0];
-    let certificate = DualPair {
-        blocks: vec![pair],
-        multipliers,
-        orthant: vec![],
-        orthant_slack: vec![],
-    };
+    let certificate =
+        DualPair { blocks: vec![pair], multipliers, orthant: vec![], orthant_slack: vec![] };
     Instance {
         problem,
         certificate: Some(Certificate::DualPair(certificate)),
@@ -326,37 +276,19 @@ fn every_dialect_reads_as_the_plain_spelling() {
         Ok(file) => assert_eq!(file.problem, plain, "{name}"),
         Err(error) => panic!("{error}"),
     };
-    check(
-        "comments",
-        &format!("\" quoted {{2}}\n* starred, 3\n{PLAIN}"),
-    );
+    check("comments", &format!("\" quoted {{2}}\n* starred, 3\n{PLAIN}"));
     check(
         "text after numbers",
-        &PLAIN.replacen(
-            "2\n2\n2 -2\n",
-            "  2  =  mDIM\n2 = nBLOCK\n2 -2 = bLOCKsTRUCT\n",
-            1,
-        ),
+        &PLAIN.replacen("2\n2\n2 -2\n", "  2  =  mDIM\n2 = nBLOCK\n2 -2 = bLOCKsTRUCT\n", 1),
     );
-    check(
-        "punctuation",
-        &PLAIN.replacen("2 -2\n1 4\n", "(2, -2)\n{1.0,4.0}\n", 1),
-    );
+    check("punctuation", &PLAIN.replacen("2 -2\n1 4\n", "(2, -2)\n{1.0,4.0}\n", 1));
     check(
         "plus signs",
-        &PLAIN
-            .replace("2 -2\n1 4", "+2 -2\n+1.0 +4")
-            .replace("1 1 1 1 1\n", "1 1 1 1 +1.0e+0\n"),
+        &PLAIN.replace("2 -2\n1 4", "+2 -2\n+1.0 +4").replace("1 1 1 1 1\n", "1 1 1 1 +1.0e+0\n"),
     );
-    check(
-        "blank lines and leading blanks",
-        &PLAIN.replace('\n', "\n\n  \t"),
-    );
+    check("blank lines and leading blanks", &PLAIN.replace('\n', "\n\n  \t"));
     check("carriage returns", &PLAIN.replace('\n', "\r\n"));
-    check(
-        "explicit zeros",
-        &format!("{PLAIN}0 1 1 1 0.0\n2 2 1 1 0\n"),
-    );
+    check("explicit zeros", &format!("{PLAIN}0 1 1 1 0.0\n2 2 1 1 0\n"));
     check("vector over lines", &PLAIN.replace("1 4\n", "1\n4\n"));
     check("sizes over lines", &PLAIN.replace("2 -2\n", "2\n-2\n"));
     check("no newline at the end", PLAIN.trim_end());
@@ -370,19 +302,14 @@ fn every_dialect_reads_as_the_plain_spelling() {
         "2 3 text\n3\n2 1 -1\n1 4\n0 1 1 2 1\n1 1 1 1 1\n1 2 1 1 1\n2 1 2 2 1\n2 3 1 1 1\n",
     );
     assert_eq!(plain.cost().part(0).unwrap().max_abs(), 1.0);
-    let Some(Coefficient::Sparse(cost)) = plain.cost().part(0) else {
-        panic!("a sparse cost")
-    };
+    let Some(Coefficient::Sparse(cost)) = plain.cost().part(0) else { panic!("a sparse cost") };
     assert_eq!(cost.iter().collect::<Vec<_>>(), [(0, 1, -1.0)]);
 }
 
 #[test]
 fn blocks_of_a_file_are_mapped_in_order() {
-    let file = sdpa::parse(
-        "1\n4\n2 -3 1 4\n1\n1 2 3 3 5\n1 3 1 1 6\n1 4 1 4 7\n",
-        "blocks",
-    )
-    .unwrap();
+    let file =
+        sdpa::parse("1\n4\n2 -3 1 4\n1\n1 2 3 3 5\n1 3 1 1 6\n1 4 1 4 7\n", "blocks").unwrap();
     let expected = [
         FileBlock::Psd { block: 0, order: 2 },
         FileBlock::Nonnegative { first: 0, count: 3 },
@@ -391,21 +318,13 @@ fn blocks_of_a_file_are_mapped_in_order() {
     ];
     assert_eq!(file.blocks, expected);
     let constraint = &file.problem.constraints()[0];
-    assert_eq!(
-        constraint.orthant,
-        SparseVector {
-            indices: vec![2, 3],
-            values: vec![5.0, 6.0]
-        }
-    );
+    assert_eq!(constraint.orthant, SparseVector { indices: vec![2, 3], values: vec![5.0, 6.0] });
     assert_eq!(constraint.parts[0].0, 1);
 }
 
 #[test]
 fn ranks_are_bounded_on_blocks_of_at_least_that_order() {
-    let free = sdpa::parse("1\n3\n2 5 3\n1\n1 1 1 1 1\n", "ranks")
-        .unwrap()
-        .problem;
+    let free = sdpa::parse("1\n3\n2 5 3\n1\n1 1 1 1 1\n", "ranks").unwrap().problem;
     let bounded = with_ranks(&free, 3).unwrap();
     let ranks: Vec<_> = bounded.blocks().iter().map(|block| block.rank).collect();
     assert_eq!(ranks, [None, Some(3), Some(3)]);
@@ -440,9 +359,7 @@ fn sdplib_files_have_the_published_sizes() {
     let Some(folder) = shared_data() else { return };
     for (name, m, n) in SDPLIB {
         let path = folder.join("sdplib").join(format!("{name}.dat-s"));
-        let problem = sdpa::read(&path)
-            .unwrap_or_else(|error| panic!("{error}"))
-            .problem;
+        let problem = sdpa::read(&path).unwrap_or_else(|error| panic!("{error}")).problem;
         assert_eq!(problem.constraints().len(), *m, "{name}");
         assert_eq!(problem.total_order(), *n, "{name}");
         let text = sdpa::write(&problem, name);
@@ -461,14 +378,9 @@ fn example_and_power_flow_files_are_read() {
     assert_eq!((example.constraints().len(), example.total_order()), (3, 2));
     assert_eq!(example.rhs(), [48.0, -8.0, 20.0]);
     for name in ["three-bus-50", "three-bus-60"] {
-        let problem = sdpa::read(&folder.join("opf").join(format!("{name}.dat-s")))
-            .unwrap()
-            .problem;
-        assert_eq!(
-            (problem.constraints().len(), problem.orthant()),
-            (34, 18),
-            "{name}"
-        );
+        let problem =
+            sdpa::read(&folder.join("opf").join(format!("{name}.dat-s"))).unwrap().problem;
+        assert_eq!((problem.constraints().len(), problem.orthant()), (34, 18), "{name}");
     }
 }
 
@@ -484,14 +396,8 @@ fn small_instances_have_their_sizes() {
     ];
     for (name, m, n) in sizes {
         let path = root().join("instances/small").join(format!("{name}.dat-s"));
-        let problem = sdpa::read(&path)
-            .unwrap_or_else(|error| panic!("{error}"))
-            .problem;
-        assert_eq!(
-            (problem.constraints().len(), problem.total_order()),
-            (m, n),
-            "{name}"
-        );
+        let problem = sdpa::read(&path).unwrap_or_else(|error| panic!("{error}")).problem;
+        assert_eq!((problem.constraints().len(), problem.total_order()), (m, n), "{name}");
     }
 }
 
@@ -501,21 +407,9 @@ type Broken = (&'static str, usize, usize, &'static str, Kind);
 const BROKEN_SDPA: &[Broken] = &[
     ("constraint-count-word", 2, 1, "three", Kind::Unexpected),
     ("constraint-count-zero", 2, 1, "0", Kind::OutOfRange),
-    (
-        "constraint-count-absurd",
-        2,
-        3,
-        "4000000000",
-        Kind::TooLarge,
-    ),
+    ("constraint-count-absurd", 2, 3, "4000000000", Kind::TooLarge),
     ("block-count-fraction", 3, 1, "2.5", Kind::Unexpected),
-    (
-        "block-count-absurd",
-        3,
-        1,
-        "99999999999999999999",
-        Kind::TooLarge,
-    ),
+    ("block-count-absurd", 3, 1, "99999999999999999999", Kind::TooLarge),
     ("block-size-zero", 4, 5, "0", Kind::OutOfRange),
     ("block-size-word", 4, 3, "two", Kind::Unexpected),
     ("block-size-absurd", 4, 3, "-9000000", Kind::TooLarge),
@@ -541,13 +435,7 @@ const BROKEN_SDPA: &[Broken] = &[
 const BROKEN_INSTANCES: &[Broken] = &[
     ("kind", 1, 12, "\"solution\"", Kind::Unexpected),
     ("version", 1, 35, "7", Kind::Unexpected),
-    (
-        "unknown-field",
-        4,
-        1,
-        "unknown field `nonnegativ`",
-        Kind::Unexpected,
-    ),
+    ("unknown-field", 4, 1, "unknown field `nonnegativ`", Kind::Unexpected),
     ("rank-beyond", 3, 30, "3", Kind::OutOfRange),
     ("order-absurd", 3, 21, "90000000", Kind::TooLarge),
     ("entry-beyond", 8, 43, "[2,3,1.0]", Kind::OutOfRange),
@@ -555,27 +443,13 @@ const BROKEN_INSTANCES: &[Broken] = &[
     ("entry-twice", 8, 43, "[1,1,1.0]", Kind::Duplicate),
     ("vector-order", 7, 63, "[1,-1.0]", Kind::OutOfRange),
     ("rhs-count", 9, 8, "[1.0]", Kind::OutOfRange),
-    (
-        "number-word",
-        7,
-        41,
-        "invalid type: string \"one\"",
-        Kind::Unexpected,
-    ),
-    (
-        "digest",
-        9,
-        29,
-        "\"000000000000000000000000000000000000000...",
-        Kind::Digest,
-    ),
+    ("number-word", 7, 41, "invalid type: string \"one\"", Kind::Unexpected),
+    ("digest", 9, 29, "\"000000000000000000000000000000000000000...", Kind::Digest),
     ("cut-short", 9, 13, "", Kind::EndOfFile),
 ];
 
 fn broken(name: &str, ending: &str) -> PathBuf {
-    root()
-        .join("tests/broken-instances")
-        .join(format!("{name}.{ending}"))
+    root().join("tests/broken-instances").join(format!("{name}.{ending}"))
 }
 
 #[test]
@@ -587,30 +461,16 @@ fn each_broken_file_is_refused_at_its_place() {
         assert!(!error.expected.is_empty(), "{name}");
         let place = format!("{name}.");
         assert!(error.to_string().contains(&place), "{error}");
-        assert!(
-            error
-                .to_string()
-                .contains(&format!(":{line}:{column}: expected ")),
-            "{error}"
-        );
+        assert!(error.to_string().contains(&format!(":{line}:{column}: expected ")), "{error}");
     };
     for row in BROKEN_SDPA {
         check(row, sdpa::read(&broken(row.0, "dat-s")).expect_err(row.0));
     }
     for row in BROKEN_INSTANCES {
-        check(
-            row,
-            instance::read(&broken(row.0, "assay.json")).expect_err(row.0),
-        );
+        check(row, instance::read(&broken(row.0, "assay.json")).expect_err(row.0));
     }
-    let files = std::fs::read_dir(root().join("tests/broken-instances"))
-        .unwrap()
-        .count();
-    assert_eq!(
-        files,
-        BROKEN_SDPA.len() + BROKEN_INSTANCES.len(),
-        "every broken file is tested"
-    );
+    let files = std::fs::read_dir(root().join("tests/broken-instances")).unwrap().count();
+    assert_eq!(files, BROKEN_SDPA.len() + BROKEN_INSTANCES.len(), "every broken file is tested");
 }
 
 #[test]
@@ -618,10 +478,7 @@ fn a_missing_file_and_a_folder_are_refused_by_name() {
     for path in [root().join("no-such-file.dat-s"), root().join("src")] {
         let error = sdpa::read(&path).unwrap_err();
         assert_eq!((error.kind, error.line), (Kind::Unreadable, 0));
-        assert!(
-            error.to_string().contains("expected a readable file"),
-            "{error}"
-        );
+        assert!(error.to_string().contains("expected a readable file"), "{error}");
     }
 }
 
@@ -629,39 +486,22 @@ fn a_missing_file_and_a_folder_are_refused_by_name() {
 fn absurd_sizes_are_refused_before_memory_is_taken() {
     let huge = MAX_TOTAL_ORDER + 1;
     assert_eq!(
-        sdpa::parse(&format!("1\n1\n{huge}\n1\n1 1 1 1 1\n"), "x")
-            .unwrap_err()
-            .kind,
+        sdpa::parse(&format!("1\n1\n{huge}\n1\n1 1 1 1 1\n"), "x").unwrap_err().kind,
         Kind::TooLarge
     );
     assert_eq!(
-        sdpa::parse("1\n1\n9223372036854775808\n1\n", "x")
-            .unwrap_err()
-            .kind,
+        sdpa::parse("1\n1\n9223372036854775808\n1\n", "x").unwrap_err().kind,
         Kind::TooLarge
     );
     assert_eq!(
-        sdpa::parse("1\n1\n-9223372036854775808\n1\n", "x")
-            .unwrap_err()
-            .kind,
+        sdpa::parse("1\n1\n-9223372036854775808\n1\n", "x").unwrap_err().kind,
         Kind::TooLarge
     );
-    assert_eq!(
-        sdpa::parse("18446744073709551616\n1\n1\n", "x")
-            .unwrap_err()
-            .kind,
-        Kind::TooLarge
-    );
+    assert_eq!(sdpa::parse("18446744073709551616\n1\n1\n", "x").unwrap_err().kind, Kind::TooLarge);
     let array = "%%MatrixMarket matrix array real general\n4000000 4000000\n1\n";
-    assert_eq!(
-        matrix_market::parse(array, "x").unwrap_err().kind,
-        Kind::TooLarge
-    );
+    assert_eq!(matrix_market::parse(array, "x").unwrap_err().kind, Kind::TooLarge);
     let coordinates = "%%MatrixMarket matrix coordinate real general\n4000000 4000000 1\n1 1 1\n";
-    assert_eq!(
-        matrix_market::parse(coordinates, "x").unwrap_err().kind,
-        Kind::TooLarge
-    );
+    assert_eq!(matrix_market::parse(coordinates, "x").unwrap_err().kind, Kind::TooLarge);
 }
 
 // ---------------------------------------------------------------------------------------------------
@@ -673,106 +513,38 @@ fn matrix_market_kinds_are_read() {
         matrix_market::parse(text, "x").map(|matrix| (matrix.rows, matrix.columns, matrix.data))
     };
     let general = "%%MatrixMarket matrix array real general\n% comment\n\n2 3\n1\n2\n3\n4\n5\n6\n";
-    assert_eq!(
-        parse(general),
-        Ok((2, 3, vec![1.0, 3.0, 5.0, 2.0, 4.0, 6.0]))
-    );
+    assert_eq!(parse(general), Ok((2, 3, vec![1.0, 3.0, 5.0, 2.0, 4.0, 6.0])));
     let symmetric = "%%MatrixMarket MATRIX Array Real Symmetric\n2 2\n1\n2\n3\n";
     assert_eq!(parse(symmetric), Ok((2, 2, vec![1.0, 2.0, 2.0, 3.0])));
     let sparse = "%%MatrixMarket matrix coordinate integer symmetric\n3 3 2\n2 1 7\n3 3 -1\n";
-    assert_eq!(
-        parse(sparse),
-        Ok((3, 3, vec![0.0, 7.0, 0.0, 7.0, 0.0, 0.0, 0.0, 0.0, -1.0]))
-    );
+    assert_eq!(parse(sparse), Ok((3, 3, vec![0.0, 7.0, 0.0, 7.0, 0.0, 0.0, 0.0, 0.0, -1.0])));
     let refused = [
-        (
-            "%%MatrixMarket matrix array complex general\n1 1\n1 0\n",
-            1,
-            29,
-            Kind::Unexpected,
-        ),
-        (
-            "%%MatrixMarket matrix array real\n1 1\n1\n",
-            1,
-            33,
-            Kind::EndOfLine,
-        ),
-        (
-            "%%MatrixMarket matrix array real general\n2 2\n1\n2\n3\n",
-            5,
-            2,
-            Kind::EndOfFile,
-        ),
-        (
-            "%%MatrixMarket matrix array real general\n1 1\n1\n2\n",
-            4,
-            1,
-            Kind::Unexpected,
-        ),
-        (
-            "%%MatrixMarket matrix array real general\n1 1\nnan\n",
-            3,
-            1,
-            Kind::NotFinite,
-        ),
-        (
-            "%%MatrixMarket matrix array real symmetric\n2 3\n1\n",
-            2,
-            3,
-            Kind::OutOfRange,
-        ),
-        (
-            "%%MatrixMarket matrix coordinate real symmetric\n2 2 1\n1 2 1\n",
-            3,
-            1,
-            Kind::OutOfRange,
-        ),
+        ("%%MatrixMarket matrix array complex general\n1 1\n1 0\n", 1, 29, Kind::Unexpected),
+        ("%%MatrixMarket matrix array real\n1 1\n1\n", 1, 33, Kind::EndOfLine),
+        ("%%MatrixMarket matrix array real general\n2 2\n1\n2\n3\n", 5, 2, Kind::EndOfFile),
+        ("%%MatrixMarket matrix array real general\n1 1\n1\n2\n", 4, 1, Kind::Unexpected),
+        ("%%MatrixMarket matrix array real general\n1 1\nnan\n", 3, 1, Kind::NotFinite),
+        ("%%MatrixMarket matrix array real symmetric\n2 3\n1\n", 2, 3, Kind::OutOfRange),
+        ("%%MatrixMarket matrix coordinate real symmetric\n2 2 1\n1 2 1\n", 3, 1, Kind::OutOfRange),
         (
             "%%MatrixMarket matrix coordinate real general\n2 2 2\n1 2 1\n1 2 1\n",
             4,
             1,
             Kind::Duplicate,
         ),
-        (
-            "%%MatrixMarket matrix coordinate real general\n2 2 1\n3 2 1\n",
-            3,
-            1,
-            Kind::OutOfRange,
-        ),
+        ("%%MatrixMarket matrix coordinate real general\n2 2 1\n3 2 1\n", 3, 1, Kind::OutOfRange),
     ];
     for (text, line, column, kind) in refused {
         let error = matrix_market::parse(text, "x").expect_err(text);
-        assert_eq!(
-            (error.line, error.column, error.kind),
-            (line, column, kind),
-            "{error}"
-        );
+        assert_eq!((error.line, error.column, error.kind), (line, column, kind), "{error}");
     }
 }
 
 fn two_blocks() -> Problem {
-    let blocks = vec![
-        Block {
-            order: 2,
-            rank: Some(1),
-        },
-        Block {
-            order: 1,
-            rank: None,
-        },
-    ];
-    let constraint = Functional::on_block(
-        0,
-        Coefficient::Sparse(SparseSymmetric::gather(2, vec![(0, 0, 1.0)])),
-    );
-    Problem::new(
-        blocks,
-        1,
-        Functional::default(),
-        vec![constraint],
-        vec![1.0],
-    )
-    .unwrap()
+    let blocks = vec![Block { order: 2, rank: Some(1) }, Block { order: 1, rank: None }];
+    let constraint =
+        Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(2, vec![(0, 0, 1.0)])));
+    Problem::new(blocks, 1, Functional::default(), vec![constraint], vec![1.0]).unwrap()
 }
 
 #[test]
@@ -827,20 +599,8 @@ fn solutions_with_one_thing_wrong_are_refused_at_its_place() {
         ("[[1], [2]]", "[[1], [2, 3]]", 2, 29, Kind::OutOfRange),
         ("[[1], [2]]", "[[1], [NaN]]", 2, 30, Kind::Unexpected),
         ("{\"factor\": [[1], [2]]}", "{}", 2, 12, Kind::Unexpected),
-        (
-            "{\"factor\": [[1], [2]]}",
-            "{\"matrix\": [[1], [2]]}",
-            2,
-            24,
-            Kind::OutOfRange,
-        ),
-        (
-            "{\"factor\": [[1], [2]]}",
-            "{\"entries\": [[1, 3, 1]]}",
-            2,
-            25,
-            Kind::OutOfRange,
-        ),
+        ("{\"factor\": [[1], [2]]}", "{\"matrix\": [[1], [2]]}", 2, 24, Kind::OutOfRange),
+        ("{\"factor\": [[1], [2]]}", "{\"entries\": [[1, 3, 1]]}", 2, 25, Kind::OutOfRange),
         (
             "{\"factor\": [[1], [2]]}",
             "{\"entries\": [[1, 2, 1], [2, 1, 1]]}",
@@ -865,10 +625,6 @@ fn solutions_with_one_thing_wrong_are_refused_at_its_place() {
         let text = sound.replacen(from, to, 1);
         assert_ne!(text, sound, "{to}");
         let error = parse(&text).expect_err(to);
-        assert_eq!(
-            (error.line, error.column, error.kind),
-            (line, column, kind),
-            "{to}: {error}"
-        );
+        assert_eq!((error.line, error.column, error.kind), (line, column, kind), "{to}: {error}");
     }
 }

@@ -1,9 +1,6 @@
 //! The referee on points whose quality is known, on cheats, and on wrong certificates.
 
-#![allow(
-    clippy::print_stderr,
-    reason = "a test says what it skipped or measured"
-)]
+#![allow(clippy::print_stderr, reason = "a test says what it skipped or measured")]
 
 use proptest::prelude::*;
 use rankassay::formats::sdpa;
@@ -17,21 +14,16 @@ use rankassay::referee::{
 };
 use std::path::PathBuf;
 
-const UNKNOWN: Known<'static> = Known {
-    optimum: KnownOptimum::Unknown,
-    dual: None,
-    unique_point: None,
-};
+const UNKNOWN: Known<'static> =
+    Known { optimum: KnownOptimum::Unknown, dual: None, unique_point: None };
 
 /// A small linear congruential generator (Knuth, TAOCP 2, section 3.3.4, MMIX constants; from memory).
 struct Draw(u64);
 
 impl Draw {
     fn next(&mut self, below: u64) -> u64 {
-        self.0 = self
-            .0
-            .wrapping_mul(6_364_136_223_846_793_005)
-            .wrapping_add(1_442_695_040_888_963_407);
+        self.0 =
+            self.0.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
         (self.0 >> 33) % below
     }
 
@@ -52,25 +44,16 @@ struct Balanced {
 }
 
 fn unit_entry(order: usize, i: usize) -> Functional {
-    Functional::on_block(
-        0,
-        Coefficient::Sparse(SparseSymmetric::gather(order, vec![(i, i, 1.0)])),
-    )
+    Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(order, vec![(i, i, 1.0)])))
 }
 
 fn balanced(n: usize, seed: u64) -> Balanced {
     let mut draw = Draw(seed);
-    let signs: Vec<f64> = (0..n)
-        .map(|_| if draw.next(2) == 0 { 1.0 } else { -1.0 })
-        .collect();
+    let signs: Vec<f64> = (0..n).map(|_| if draw.next(2) == 0 { 1.0 } else { -1.0 }).collect();
     let dual: Vec<f64> = (0..n).map(|_| draw.next(7) as f64 - 4.0).collect();
     let mut entries: Vec<(usize, usize, f64)> = (0..n).map(|i| (i, i, dual[i])).collect();
     for i in 0..2 * n {
-        let (a, b) = if i < n {
-            (i, (i + 1) % n)
-        } else {
-            (i - n, draw.next(n as u64) as usize)
-        };
+        let (a, b) = if i < n { (i, (i + 1) % n) } else { (i - n, draw.next(n as u64) as usize) };
         if a != b {
             let weight = 1.0 + draw.next(4) as f64;
             entries.push((a, a, weight));
@@ -80,18 +63,10 @@ fn balanced(n: usize, seed: u64) -> Balanced {
     }
     let cost = Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(n, entries)));
     let constraints = (0..n).map(|i| unit_entry(n, i)).collect();
-    let blocks = vec![Block {
-        order: n,
-        rank: Some(1),
-    }];
+    let blocks = vec![Block { order: n, rank: Some(1) }];
     let problem = Problem::new(blocks, 0, cost, constraints, vec![1.0; n]).unwrap();
     let optimum = dual.iter().sum();
-    Balanced {
-        problem,
-        signs,
-        dual,
-        optimum,
-    }
+    Balanced { problem, signs, dual, optimum }
 }
 
 impl Balanced {
@@ -104,11 +79,7 @@ impl Balanced {
     }
 
     fn unique(&self) -> Vec<Factor> {
-        vec![Factor {
-            order: self.signs.len(),
-            width: 1,
-            data: self.signs.clone(),
-        }]
+        vec![Factor { order: self.signs.len(), width: 1, data: self.signs.clone() }]
     }
 
     fn judge(&self, answer: &Answer) -> Judgement {
@@ -126,10 +97,7 @@ fn answer_of(blocks: Vec<BlockPoint>, orthant: Vec<f64>) -> Answer {
 }
 
 fn factor_answer(order: usize, width: usize, data: Vec<f64>) -> Answer {
-    answer_of(
-        vec![BlockPoint::Factor(Factor { order, width, data })],
-        vec![],
-    )
+    answer_of(vec![BlockPoint::Factor(Factor { order, width, data })], vec![])
 }
 
 fn dense_answer(matrix: Mat<f64>) -> Answer {
@@ -139,9 +107,7 @@ fn dense_answer(matrix: Mat<f64>) -> Answer {
 fn small(name: &str) -> Problem {
     let path =
         PathBuf::from(env!("CARGO_MANIFEST_DIR")).join(format!("instances/small/{name}.dat-s"));
-    sdpa::read(&path)
-        .unwrap_or_else(|error| panic!("{error}"))
-        .problem
+    sdpa::read(&path).unwrap_or_else(|error| panic!("{error}")).problem
 }
 
 // ---------------------------------------------------------------------------------------------------
@@ -151,10 +117,7 @@ fn small(name: &str) -> Problem {
 fn the_planted_point_is_solved_with_every_figure_right() {
     let instance = balanced(40, 1);
     let unique = instance.unique();
-    let known = Known {
-        unique_point: Some(&unique),
-        ..instance.known()
-    };
+    let known = Known { unique_point: Some(&unique), ..instance.known() };
     let mut answer = factor_answer(40, 1, instance.signs.clone());
     answer.multipliers = Some(instance.dual.clone());
     let judgement = judge(&instance.problem, &answer, &known, &Tolerance::default()).unwrap();
@@ -175,10 +138,7 @@ fn the_planted_point_is_solved_with_every_figure_right() {
         "{bound}"
     );
     let dimacs = judgement.dimacs.unwrap();
-    assert!(
-        dimacs.iter().all(|error| error.abs() <= 1e-13),
-        "{dimacs:?}"
-    );
+    assert!(dimacs.iter().all(|error| error.abs() <= 1e-13), "{dimacs:?}");
 }
 
 #[test]
@@ -188,21 +148,14 @@ fn a_dense_point_and_its_factor_are_judged_alike() {
     let width = 4;
     let noise = |draw: &mut Draw, size: f64| -> Vec<f64> {
         (0..30 * width)
-            .map(|k| {
-                if k % width == 0 {
-                    instance.signs[k / width]
-                } else {
-                    size * draw.unit()
-                }
-            })
+            .map(|k| if k % width == 0 { instance.signs[k / width] } else { size * draw.unit() })
             .collect()
     };
     for size in [0.0, 1e-5, 1e-3, 0.3] {
         let data = noise(&mut draw, size);
         let row = |i: usize| &data[i * width..(i + 1) * width];
-        let dense = Mat::from_fn(30, 30, |i, j| {
-            row(i).iter().zip(row(j)).map(|(a, b)| a * b).sum()
-        });
+        let dense =
+            Mat::from_fn(30, 30, |i, j| row(i).iter().zip(row(j)).map(|(a, b)| a * b).sum());
         let (a, b) = (
             instance.judge(&factor_answer(30, width, data.clone())),
             instance.judge(&dense_answer(dense)),
@@ -236,11 +189,7 @@ fn a_point_that_restoration_repairs_is_near() {
     assert_eq!(judgement.finding, Finding::Near);
     assert!(judgement.feasibility.unwrap() > 1e-5);
     assert!(judgement.restored_feasibility.unwrap() <= 1e-13);
-    assert!(
-        judgement.reason.contains("restoration"),
-        "{}",
-        judgement.reason
-    );
+    assert!(judgement.reason.contains("restoration"), "{}", judgement.reason);
 }
 
 #[test]
@@ -251,37 +200,18 @@ fn a_feasible_point_off_the_optimum_is_suboptimal() {
     let judgement = instance.judge(&factor_answer(20, 1, data));
     assert_eq!(judgement.finding, Finding::Suboptimal);
     assert_eq!(judgement.feasibility, Some(0.0));
-    assert!(
-        judgement.reason.contains("above the optimum"),
-        "{}",
-        judgement.reason
-    );
+    assert!(judgement.reason.contains("above the optimum"), "{}", judgement.reason);
 }
 
 #[test]
 fn spectra_give_ranks_and_tails_by_hand() {
     // X = diag(1, 1e-3, 1e-5, 1e-7) against cut-offs 1e-4, 1e-6, 1e-8; target rank 2.
-    let blocks = vec![Block {
-        order: 4,
-        rank: Some(2),
-    }];
-    let problem = Problem::new(
-        blocks,
-        0,
-        unit_entry(4, 0),
-        vec![unit_entry(4, 0)],
-        vec![1.0],
-    )
-    .unwrap();
+    let blocks = vec![Block { order: 4, rank: Some(2) }];
+    let problem =
+        Problem::new(blocks, 0, unit_entry(4, 0), vec![unit_entry(4, 0)], vec![1.0]).unwrap();
     let values = [1.0, 1e-3, 1e-5, 1e-7];
     let dense = Mat::from_fn(4, 4, |i, j| if i == j { values[i] } else { 0.0 });
-    let judgement = judge(
-        &problem,
-        &dense_answer(dense),
-        &UNKNOWN,
-        &Tolerance::default(),
-    )
-    .unwrap();
+    let judgement = judge(&problem, &dense_answer(dense), &UNKNOWN, &Tolerance::default()).unwrap();
     assert_eq!(judgement.ranks, Some([2, 3, 4]));
     let tail = (1e-5 + 1e-7) / (1.0 + 1e-3 + 1e-5 + 1e-7);
     assert!((judgement.tail_ratio.unwrap() - tail).abs() <= 1e-15);
@@ -295,14 +225,9 @@ fn a_reported_optimum_is_judged_at_its_accuracy() {
     let answer = factor_answer(12, 1, instance.signs.clone());
     let finding = |value: f64, accuracy: f64| {
         let optimum = KnownOptimum::Reported { value, accuracy };
-        judge(
-            &instance.problem,
-            &answer,
-            &Known { optimum, ..UNKNOWN },
-            &Tolerance::default(),
-        )
-        .unwrap()
-        .finding
+        judge(&instance.problem, &answer, &Known { optimum, ..UNKNOWN }, &Tolerance::default())
+            .unwrap()
+            .finding
     };
     let off = instance.optimum + 1e-4 * (1.0 + instance.optimum.abs());
     assert_eq!(finding(off, 1e-3), Finding::Solved);
@@ -320,23 +245,11 @@ fn a_high_rank_point_with_the_value_of_the_relaxation_is_not_solved() {
     let entries = entries.chain((0..5).map(|i| (i, i, -1.0))).collect();
     let cost = Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(5, entries)));
     let constraints: Vec<_> = (0..5).map(|i| unit_entry(5, i)).collect();
-    let blocks = vec![Block {
-        order: 5,
-        rank: Some(1),
-    }];
+    let blocks = vec![Block { order: 5, rank: Some(1) }];
     let problem = Problem::new(blocks, 0, cost, constraints, vec![1.0; 5]).unwrap();
-    let known = Known {
-        optimum: KnownOptimum::Certified(-6.0),
-        ..UNKNOWN
-    };
+    let known = Known { optimum: KnownOptimum::Certified(-6.0), ..UNKNOWN };
     let dense = Mat::from_fn(5, 5, |i, j| if i == j { 1.0 } else { -0.25 });
-    let judgement = judge(
-        &problem,
-        &dense_answer(dense),
-        &known,
-        &Tolerance::default(),
-    )
-    .unwrap();
+    let judgement = judge(&problem, &dense_answer(dense), &known, &Tolerance::default()).unwrap();
     assert_ne!(judgement.finding, Finding::Solved);
     assert!((judgement.raw_objective.unwrap() + 6.25).abs() <= 1e-14);
     assert!(judgement.raw_feasibility.unwrap() <= 1e-15);
@@ -365,10 +278,7 @@ fn scaled_and_empty_points_are_not_solved() {
     let judgement = instance.judge(&factor_answer(16, 1, scaled));
     assert!(judgement.objective.unwrap() < instance.optimum);
     assert_ne!(judgement.finding, Finding::Solved);
-    for empty in [
-        factor_answer(16, 1, vec![0.0; 16]),
-        factor_answer(16, 0, vec![]),
-    ] {
+    for empty in [factor_answer(16, 1, vec![0.0; 16]), factor_answer(16, 0, vec![])] {
         let judgement = instance.judge(&empty);
         assert_eq!(judgement.finding, Finding::Infeasible);
         assert_eq!(judgement.ranks, Some([0, 0, 0]));
@@ -400,10 +310,7 @@ fn unreadable_answers_are_malformed_with_a_reason() {
         (answer_of(vec![], vec![]), "0 blocks"),
         (
             Answer {
-                point: Point {
-                    orthant: vec![1.0],
-                    ..factor_answer(6, 1, signs()).point
-                },
+                point: Point { orthant: vec![1.0], ..factor_answer(6, 1, signs()).point },
                 ..with(0, 1.0)
             },
             "1 nonnegative",
@@ -414,11 +321,7 @@ fn unreadable_answers_are_malformed_with_a_reason() {
     for (answer, words) in cases {
         let judgement = instance.judge(&answer);
         assert_eq!(judgement.finding, Finding::Malformed, "{words}");
-        assert!(
-            judgement.reason.contains(words),
-            "{words}: {}",
-            judgement.reason
-        );
+        assert!(judgement.reason.contains(words), "{words}: {}", judgement.reason);
         assert_eq!(
             (judgement.feasibility, judgement.objective, judgement.digits),
             (None, None, None)
@@ -429,18 +332,9 @@ fn unreadable_answers_are_malformed_with_a_reason() {
 #[test]
 fn no_point_of_an_infeasible_problem_is_feasible() {
     let problem = small("infeasible");
-    for data in [
-        vec![1.0, 0.0, 0.0, 1.0],
-        vec![2.0, 1.0, 2.0, -1.0],
-        vec![1.0, 0.0, 1.0, 0.0],
-    ] {
-        let judgement = judge(
-            &problem,
-            &factor_answer(2, 2, data),
-            &UNKNOWN,
-            &Tolerance::default(),
-        )
-        .unwrap();
+    for data in [vec![1.0, 0.0, 0.0, 1.0], vec![2.0, 1.0, 2.0, -1.0], vec![1.0, 0.0, 1.0, 0.0]] {
+        let judgement =
+            judge(&problem, &factor_answer(2, 2, data), &UNKNOWN, &Tolerance::default()).unwrap();
         assert_eq!(judgement.finding, Finding::Infeasible);
         assert_eq!(judgement.tail_ratio, None);
     }
@@ -456,29 +350,15 @@ fn a_wrong_certificate_is_contradicted() {
     // A dual that is not feasible claims more than the optimum.
     let dual: Vec<f64> = instance.dual.iter().map(|y| y + 1e-6).collect();
     let claimed = dual.iter().sum();
-    let known = Known {
-        optimum: KnownOptimum::Certified(claimed),
-        dual: Some(&dual),
-        unique_point: None,
-    };
+    let known =
+        Known { optimum: KnownOptimum::Certified(claimed), dual: Some(&dual), unique_point: None };
     let error = judge(&instance.problem, &answer, &known, &Tolerance::default()).unwrap_err();
     assert_eq!(error.by, Contradicted::ByPoint);
-    assert!(
-        error
-            .to_string()
-            .contains("contradicts the certified optimum"),
-        "{error}"
-    );
-    let without = Known {
-        dual: None,
-        ..known.clone()
-    };
+    assert!(error.to_string().contains("contradicts the certified optimum"), "{error}");
+    let without = Known { dual: None, ..known.clone() };
     assert!(judge(&instance.problem, &answer, &without, &Tolerance::default()).is_err());
     // An optimum claimed too low is contradicted by a proved bound above it.
-    let known = Known {
-        optimum: KnownOptimum::Certified(instance.optimum - 0.5),
-        ..UNKNOWN
-    };
+    let known = Known { optimum: KnownOptimum::Certified(instance.optimum - 0.5), ..UNKNOWN };
     let mut with_dual = answer.clone();
     with_dual.multipliers = Some(instance.dual.clone());
     let error = judge(&instance.problem, &with_dual, &known, &Tolerance::default()).unwrap_err();
@@ -562,10 +442,7 @@ fn dense_slack(n: usize, seed: u64) -> Balanced {
     let mut product = Mat::<f64>::zeros(n, n);
     for k in 0..n - 1 {
         let mut column: Vec<f64> = (0..n).map(|_| sign()).collect();
-        let others: f64 = (0..n)
-            .filter(|i| *i != k)
-            .map(|i| signs[i] * column[i])
-            .sum();
+        let others: f64 = (0..n).filter(|i| *i != k).map(|i| signs[i] * column[i]).sum();
         column[k] = -signs[k] * others;
         for j in 0..n {
             for i in 0..n {
@@ -574,26 +451,15 @@ fn dense_slack(n: usize, seed: u64) -> Balanced {
         }
     }
     let entry = |i: usize, j: usize| product[(i, j)] + if i == j { dual[i] } else { 0.0 };
-    let entries = (0..n)
-        .flat_map(|j| (0..=j).map(move |i| (i, j)))
-        .map(|(i, j)| (i, j, entry(i, j)));
-    let cost = Functional::on_block(
-        0,
-        Coefficient::Sparse(SparseSymmetric::gather(n, entries.collect())),
-    );
+    let entries =
+        (0..n).flat_map(|j| (0..=j).map(move |i| (i, j))).map(|(i, j)| (i, j, entry(i, j)));
+    let cost =
+        Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(n, entries.collect())));
     let constraints = (0..n).map(|i| unit_entry(n, i)).collect();
-    let blocks = vec![Block {
-        order: n,
-        rank: Some(1),
-    }];
+    let blocks = vec![Block { order: n, rank: Some(1) }];
     let problem = Problem::new(blocks, 0, cost, constraints, vec![1.0; n]).unwrap();
     let optimum = dual.iter().sum();
-    Balanced {
-        problem,
-        signs,
-        dual,
-        optimum,
-    }
+    Balanced { problem, signs, dual, optimum }
 }
 
 #[test]
@@ -614,11 +480,7 @@ fn a_dense_singular_slack_gives_the_optimum_to_nine_digits() {
             corrupted[n / 2] += shift;
             let lower =
                 lower_bound(&instance.problem, &corrupted).expect("the trace is still bounded");
-            assert!(
-                lower <= instance.optimum,
-                "{n}, {shift}: {lower} above {}",
-                instance.optimum
-            );
+            assert!(lower <= instance.optimum, "{n}, {shift}: {lower} above {}", instance.optimum);
         }
     }
 }
@@ -635,9 +497,7 @@ fn a_spectral_bound_is_never_passed() {
     ];
     let weights = [-3.0, -1.0, 0.0, 2.0];
     let entry = |i: usize, j: usize| {
-        (0..4)
-            .map(|k| weights[k] * hadamard[k][i] * hadamard[k][j])
-            .sum::<f64>()
+        (0..4).map(|k| weights[k] * hadamard[k][i] * hadamard[k][j]).sum::<f64>()
     };
     let pairs: Vec<(usize, usize)> = (0..4).flat_map(|j| (0..=j).map(move |i| (i, j))).collect();
     let cost =
@@ -648,34 +508,17 @@ fn a_spectral_bound_is_never_passed() {
         parts: vec![(0, unit(i, j)), (1, unit(i, j))],
         orthant: SparseVector::default(),
     };
-    let rhs = pairs
-        .iter()
-        .map(|&(i, j)| if i == j { 4.0 } else { 0.0 })
-        .collect();
-    let blocks = vec![
-        Block {
-            order: 4,
-            rank: Some(2),
-        },
-        Block {
-            order: 4,
-            rank: None,
-        },
-    ];
+    let rhs = pairs.iter().map(|&(i, j)| if i == j { 4.0 } else { 0.0 }).collect();
+    let blocks = vec![Block { order: 4, rank: Some(2) }, Block { order: 4, rank: None }];
     let problem = Problem::new(blocks, 0, cost, pairs.iter().map(both).collect(), rhs).unwrap();
     let optimum = -64.0;
     // The optimal multipliers make S_X = C - Y the positive and S_Z = -Y the negative part of C.
     let negative = |i: usize, j: usize| -> f64 {
-        (0..4)
-            .map(|k| weights[k].min(0.0) * hadamard[k][i] * hadamard[k][j])
-            .sum()
+        (0..4).map(|k| weights[k].min(0.0) * hadamard[k][i] * hadamard[k][j]).sum()
     };
     let best: Vec<f64> = pairs.iter().map(|&(i, j)| negative(i, j)).collect();
     let bound = lower_bound(&problem, &best).unwrap();
-    assert!(
-        bound <= optimum && bound >= optimum - 1e-9 * 64.0,
-        "{bound}"
-    );
+    assert!(bound <= optimum && bound >= optimum - 1e-9 * 64.0, "{bound}");
     let mut draw = Draw(99);
     for trial in 0..200 {
         let size = 10f64.powi(trial % 12 - 9);
@@ -689,42 +532,24 @@ fn a_spectral_bound_is_never_passed() {
         BlockPoint::Factor(Factor::from_columns(4, &columns))
     };
     let answer = answer_of(vec![columns(0..2), columns(2..4)], vec![]);
-    let known = Known {
-        optimum: KnownOptimum::Certified(optimum),
-        ..UNKNOWN
-    };
+    let known = Known { optimum: KnownOptimum::Certified(optimum), ..UNKNOWN };
     let judgement = judge(&problem, &answer, &known, &Tolerance::default()).unwrap();
-    assert_eq!(
-        (judgement.finding, judgement.digits),
-        (Finding::Solved, Some(16.0))
-    );
+    assert_eq!((judgement.finding, judgement.digits), (Finding::Solved, Some(16.0)));
     // The whole of 4 I on the first block, which exceeds the rank, is no answer at rank 2.
-    let answer = answer_of(
-        vec![columns(0..4), BlockPoint::Dense(Mat::zeros(4, 4))],
-        vec![],
-    );
+    let answer = answer_of(vec![columns(0..4), BlockPoint::Dense(Mat::zeros(4, 4))], vec![]);
     let judgement = judge(&problem, &answer, &known, &Tolerance::default()).unwrap();
     assert_ne!(judgement.finding, Finding::Solved);
-    assert_eq!(
-        (judgement.ranks, judgement.tail_ratio),
-        (Some([4, 4, 4]), Some(0.5))
-    );
+    assert_eq!((judgement.ranks, judgement.tail_ratio), (Some([4, 4, 4]), Some(0.5)));
 }
 
 #[test]
 fn no_bound_is_given_where_the_trace_is_unbounded() {
     let constraint = |i: usize, j: usize| {
-        Functional::on_block(
-            0,
-            Coefficient::Sparse(SparseSymmetric::gather(2, vec![(i, j, 1.0)])),
-        )
+        Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(2, vec![(i, j, 1.0)])))
     };
     let identity = SparseSymmetric::gather(2, vec![(0, 0, 1.0), (1, 1, 1.0)]);
     let cost = Functional::on_block(0, Coefficient::Sparse(identity));
-    let blocks = vec![Block {
-        order: 2,
-        rank: None,
-    }];
+    let blocks = vec![Block { order: 2, rank: None }];
     // Only X_11 and X_12 are fixed: X_22 is free.
     let constraints = vec![constraint(0, 0), constraint(0, 1)];
     let problem = Problem::new(blocks, 0, cost, constraints, vec![1.0, 2.0]).unwrap();
@@ -739,10 +564,7 @@ fn no_bound_is_given_where_the_trace_is_unbounded() {
 /// Holds the bound from the closed-form multipliers against the closed-form value.
 fn check_bound(name: &str, y: &[f64], value: f64) {
     let bound = lower_bound(&small(name), y).expect("the trace is fixed");
-    assert!(
-        bound <= value + 1e-12 && bound >= value - 1e-9,
-        "{name}: {bound} against {value}"
-    );
+    assert!(bound <= value + 1e-12 && bound >= value - 1e-9, "{name}: {bound} against {value}");
 }
 
 #[test]
@@ -750,11 +572,7 @@ fn closed_forms_are_bounded_by_their_multipliers() {
     let root_five = 5f64.sqrt();
     // S = t I + c A - J: for C5 t = sqrt 5 and c = 2t/(1 + sqrt 5), for the Petersen graph t = 4, c = 2.
     let theta = |t: f64, c: f64, edges: usize| [vec![-t], vec![-c; edges]].concat();
-    check_bound(
-        "theta-c5",
-        &theta(root_five, 2.0 * root_five / (1.0 + root_five), 5),
-        -root_five,
-    );
+    check_bound("theta-c5", &theta(root_five, 2.0 * root_five / (1.0 + root_five), 5), -root_five);
     check_bound("theta-petersen", &theta(4.0, 2.0, 15), -4.0);
     // S = (lambda_max(L)/4) I - L/4.
     let c5 = 2.5 * (1.0 + (std::f64::consts::PI / 5.0).cos());
@@ -768,14 +586,9 @@ fn closed_forms_are_bounded_by_their_multipliers() {
 fn closed_form_points_are_solved() {
     // Max-cut on C5: X_ij = cos(4 pi (i - j)/5), rank 2.
     let angle = |i: usize| 4.0 * std::f64::consts::PI * i as f64 / 5.0;
-    let data = (0..5)
-        .flat_map(|i| [angle(i).cos(), angle(i).sin()])
-        .collect();
+    let data = (0..5).flat_map(|i| [angle(i).cos(), angle(i).sin()]).collect();
     let value = -2.5 * (1.0 + (std::f64::consts::PI / 5.0).cos());
-    let optimum = KnownOptimum::Reported {
-        value,
-        accuracy: 0.0,
-    };
+    let optimum = KnownOptimum::Reported { value, accuracy: 0.0 };
     let judgement = judge(
         &small("cut-c5"),
         &factor_answer(5, 2, data),
@@ -787,30 +600,16 @@ fn closed_form_points_are_solved() {
     assert!(judgement.digits.unwrap() >= 14.0, "{judgement:?}");
     // Two blocks: (1,2)(1,2)' with both slacks zero.
     let optimum = KnownOptimum::Certified(-4.0);
-    let known = Known {
-        optimum,
-        dual: Some(&[-2.0, -0.5]),
-        unique_point: None,
-    };
-    let block = BlockPoint::Factor(Factor {
-        order: 2,
-        width: 1,
-        data: vec![1.0, 2.0],
-    });
+    let known = Known { optimum, dual: Some(&[-2.0, -0.5]), unique_point: None };
+    let block = BlockPoint::Factor(Factor { order: 2, width: 1, data: vec![1.0, 2.0] });
     let answer = answer_of(vec![block.clone()], vec![0.0, 0.0]);
     let judgement = judge(&small("two-blocks"), &answer, &known, &Tolerance::default()).unwrap();
-    assert_eq!(
-        (judgement.finding, judgement.digits),
-        (Finding::Solved, Some(16.0))
-    );
+    assert_eq!((judgement.finding, judgement.digits), (Finding::Solved, Some(16.0)));
     // A negative scalar is reported and clipped.
     let answer = answer_of(vec![block], vec![0.0, -0.25]);
     let judgement = judge(&small("two-blocks"), &answer, &known, &Tolerance::default()).unwrap();
     assert_eq!(judgement.min_eigenvalue, Some(-0.25));
-    assert_eq!(
-        (judgement.finding, judgement.feasibility),
-        (Finding::Solved, Some(0.0))
-    );
+    assert_eq!((judgement.finding, judgement.feasibility), (Finding::Solved, Some(0.0)));
     assert!(judgement.raw_feasibility.unwrap() > 0.01);
 }
 
@@ -821,22 +620,9 @@ fn dimacs_errors_are_those_of_the_definition() {
     let dense = Mat::from_fn(2, 2, |i, j| if i == j { [0.5, 3.5][i] } else { 0.0 });
     let mut answer = answer_of(vec![BlockPoint::Dense(dense)], vec![0.0, -0.1]);
     answer.multipliers = Some(vec![0.0, 0.0]);
-    let judgement = judge(
-        &small("two-blocks"),
-        &answer,
-        &UNKNOWN,
-        &Tolerance::default(),
-    )
-    .unwrap();
+    let judgement = judge(&small("two-blocks"), &answer, &UNKNOWN, &Tolerance::default()).unwrap();
     // The scalar -0.1 adds to the second residual.
-    let expected = [
-        (0.25f64 + 0.36).sqrt() / 5.0,
-        0.1 / 5.0,
-        0.0,
-        1.0 / 2.0,
-        0.0,
-        0.0,
-    ];
+    let expected = [(0.25f64 + 0.36).sqrt() / 5.0, 0.1 / 5.0, 0.0, 1.0 / 2.0, 0.0, 0.0];
     for (found, expected) in judgement.dimacs.unwrap().iter().zip(expected) {
         assert!((found - expected).abs() <= 1e-14, "{:?}", judgement.dimacs);
     }
@@ -849,26 +635,16 @@ fn dimacs_errors_are_those_of_the_definition() {
 fn distances_are_resolved_far_below_the_square_root_of_the_roundoff() {
     let instance = balanced(25, 11);
     let unique = instance.unique();
-    let known = Known {
-        unique_point: Some(&unique),
-        ..instance.known()
-    };
+    let known = Known { unique_point: Some(&unique), ..instance.known() };
     for size in [1e-12, 1e-9, 1e-3] {
         // X = (1 + size)^2 tt': the distance is ((1 + size)^2 - 1) n / (1 + n).
         let data = instance.signs.iter().map(|t| t * (1.0 + size)).collect();
-        let judgement = judge(
-            &instance.problem,
-            &factor_answer(25, 1, data),
-            &known,
-            &Tolerance::default(),
-        )
-        .unwrap();
+        let judgement =
+            judge(&instance.problem, &factor_answer(25, 1, data), &known, &Tolerance::default())
+                .unwrap();
         let expected = (2.0 * size + size * size) * 25.0 / 26.0;
         let distance = judgement.distance.unwrap();
-        assert!(
-            (distance - expected).abs() <= 1e-15 + 1e-3 * expected,
-            "{distance} {expected}"
-        );
+        assert!((distance - expected).abs() <= 1e-15 + 1e-3 * expected, "{distance} {expected}");
     }
 }
 
@@ -877,10 +653,7 @@ fn a_sparse_problem_of_order_20000_is_judged_by_its_factor() {
     let n = 20_000;
     let instance = balanced(n, 12);
     let unique = instance.unique();
-    let known = Known {
-        unique_point: Some(&unique),
-        ..instance.known()
-    };
+    let known = Known { unique_point: Some(&unique), ..instance.known() };
     let data = instance
         .signs
         .iter()
@@ -891,10 +664,7 @@ fn a_sparse_problem_of_order_20000_is_judged_by_its_factor() {
     answer.multipliers = Some(instance.dual.clone());
     let start = std::time::Instant::now();
     let judgement = judge(&instance.problem, &answer, &known, &Tolerance::default()).unwrap();
-    eprintln!(
-        "order {n}: judged in {:.2} s",
-        start.elapsed().as_secs_f64()
-    );
+    eprintln!("order {n}: judged in {:.2} s", start.elapsed().as_secs_f64());
     assert_eq!(judgement.finding, Finding::Solved);
     assert!(judgement.distance.unwrap() <= 1e-8);
     let bound = judgement.lower_bound.unwrap();
@@ -910,16 +680,9 @@ fn a_sparse_problem_of_order_20000_is_judged_by_its_factor() {
         .map(|(i, t)| t * (1.0 + 0.01 * (i as f64).cos()))
         .collect();
     let start = std::time::Instant::now();
-    let judgement = judge(
-        &instance.problem,
-        &factor_answer(n, 1, rough),
-        &known,
-        &Tolerance::default(),
-    )
-    .unwrap();
-    eprintln!(
-        "order {n}: judged with restoration in {:.2} s",
-        start.elapsed().as_secs_f64()
-    );
+    let judgement =
+        judge(&instance.problem, &factor_answer(n, 1, rough), &known, &Tolerance::default())
+            .unwrap();
+    eprintln!("order {n}: judged with restoration in {:.2} s", start.elapsed().as_secs_f64());
     assert_eq!(judgement.finding, Finding::Near);
 }

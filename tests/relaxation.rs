@@ -144,9 +144,8 @@ fn entry(n: usize, i: usize, j: usize, value: f64) -> Functional {
 fn theta(n: usize, edges: &Edges) -> Problem {
     let all = (0..n).flat_map(|j| (0..=j).map(move |i| (i, j, -1.0))).collect();
     let identity = (0..n).map(|i| (i, i, 1.0)).collect();
-    let sparse = |entries| {
-        Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(n, entries)))
-    };
+    let sparse =
+        |entries| Functional::on_block(0, Coefficient::Sparse(SparseSymmetric::gather(n, entries)));
     let mut constraints = vec![sparse(identity)];
     constraints.extend(edges.iter().map(|&(i, j)| entry(n, i, j, 1.0)));
     let mut rhs = vec![0.0; constraints.len()];

@@ -142,11 +142,7 @@ pub fn parse(text: &str, file: &str) -> Result<Instance, FormatError> {
             return checker.refuse(&[Step::Key("digest")], Kind::Digest, expected);
         }
     }
-    Ok(Instance {
-        problem,
-        certificate: raw.certificate,
-        origin: raw.origin,
-    })
+    Ok(Instance { problem, certificate: raw.certificate, origin: raw.origin })
 }
 
 struct Checker<'a> {
@@ -185,17 +181,11 @@ impl Checker<'_> {
                 let expected = format!("orders that sum to at most {MAX_TOTAL_ORDER}");
                 return self.refuse(&path("order"), Kind::TooLarge, expected);
             }
-            if block
-                .rank
-                .is_some_and(|rank| rank == 0 || rank > block.order)
-            {
+            if block.rank.is_some_and(|rank| rank == 0 || rank > block.order) {
                 let expected = format!("a rank bound from 1 to {}", block.order);
                 return self.refuse(&path("rank"), Kind::OutOfRange, expected);
             }
-            blocks.push(Block {
-                order: block.order,
-                rank: block.rank,
-            });
+            blocks.push(Block { order: block.order, rank: block.rank });
         }
         Ok(blocks)
     }
@@ -221,11 +211,7 @@ impl Checker<'_> {
             let block = part.block - 1;
             if parts.last().is_some_and(|(last, _)| *last >= block) {
                 let expected = "blocks in ascending order, each once";
-                return self.refuse(
-                    &join(&path, &[Step::Key("block")]),
-                    Kind::Duplicate,
-                    expected,
-                );
+                return self.refuse(&join(&path, &[Step::Key("block")]), Kind::Duplicate, expected);
             }
             let order = blocks[block].order;
             let coefficient = match (&part.entries, &part.outer) {
@@ -236,10 +222,7 @@ impl Checker<'_> {
             parts.push((block, coefficient));
         }
         let path = join(path, &[Step::Key("nonnegative")]);
-        Ok(Functional {
-            parts,
-            orthant: self.vector(&raw.nonnegative, orthant, &path)?,
-        })
+        Ok(Functional { parts, orthant: self.vector(&raw.nonnegative, orthant, &path)? })
     }
 
     fn entries(
@@ -281,10 +264,7 @@ impl Checker<'_> {
     ) -> Result<Coefficient, FormatError> {
         let mut out = Vec::with_capacity(terms.len());
         for (index, term) in terms.iter().enumerate() {
-            let path = join(
-                path,
-                &[Step::Key("outer"), Step::Item(index), Step::Key("vector")],
-            );
+            let path = join(path, &[Step::Key("outer"), Step::Item(index), Step::Key("vector")]);
             out.push(OuterTerm {
                 weight: term.weight,
                 vector: self.vector(&term.vector, order, &path)?,
@@ -322,21 +302,14 @@ pub fn write(instance: &Instance) -> String {
     let blocks: Vec<BlockText> = problem
         .blocks()
         .iter()
-        .map(|block| BlockText {
-            order: block.order,
-            rank: block.rank,
-        })
+        .map(|block| BlockText { order: block.order, rank: block.rank })
         .collect();
     let mut text = String::new();
     let _ = writeln!(text, "{{ \"assay\": \"instance\", \"version\": {VERSION},");
     let _ = writeln!(text, "\"origin\": {},", json(&instance.origin));
     let _ = writeln!(text, "\"blocks\": {},", json(&blocks));
     let _ = writeln!(text, "\"nonnegative\": {},", problem.orthant());
-    let _ = writeln!(
-        text,
-        "\"cost\": {},",
-        json(&functional_text(problem.cost()))
-    );
+    let _ = writeln!(text, "\"cost\": {},", json(&functional_text(problem.cost())));
     text.push_str("\"constraints\": [");
     for (index, constraint) in problem.constraints().iter().enumerate() {
         text.push_str(if index == 0 { "\n" } else { ",\n" });
@@ -372,19 +345,11 @@ fn functional_text(functional: &Functional) -> FunctionalText {
         .map(|(block, coefficient)| match coefficient {
             Coefficient::Sparse(matrix) => PartText {
                 block: block + 1,
-                entries: Some(
-                    matrix
-                        .iter()
-                        .map(|(i, j, value)| (i + 1, j + 1, value))
-                        .collect(),
-                ),
+                entries: Some(matrix.iter().map(|(i, j, value)| (i + 1, j + 1, value)).collect()),
                 outer: None,
             },
             Coefficient::Outer(sum) => {
-                let term = |t: &OuterTerm| TermText {
-                    weight: t.weight,
-                    vector: pairs(&t.vector),
-                };
+                let term = |t: &OuterTerm| TermText { weight: t.weight, vector: pairs(&t.vector) };
                 PartText {
                     block: block + 1,
                     entries: None,
@@ -393,10 +358,7 @@ fn functional_text(functional: &Functional) -> FunctionalText {
             }
         })
         .collect();
-    FunctionalText {
-        parts,
-        nonnegative: pairs(&functional.orthant),
-    }
+    FunctionalText { parts, nonnegative: pairs(&functional.orthant) }
 }
 
 /// Writes an instance to a file; see [`write`].

@@ -26,10 +26,7 @@ fn translate(source: Source<'_>, error: &serde_json::Error) -> FormatError {
     }
     let (found, expected) = match message.split_once(", expected ") {
         Some((found, expected)) => (Some(found), expected.to_owned()),
-        None => match message
-            .strip_prefix("missing ")
-            .or(message.strip_prefix("expected "))
-        {
+        None => match message.strip_prefix("missing ").or(message.strip_prefix("expected ")) {
             Some(expected) => (None, expected.to_owned()),
             None => (None, format!("JSON that fits this place ({message})")),
         },
@@ -79,10 +76,7 @@ pub(super) fn error_at(
     kind: Kind,
     expected: impl Into<String>,
 ) -> FormatError {
-    let mut scanner = Scanner {
-        bytes: source.text.as_bytes(),
-        at: 0,
-    };
+    let mut scanner = Scanner { bytes: source.text.as_bytes(), at: 0 };
     scanner.skip_blanks();
     for step in path {
         let before = scanner.at;

@@ -51,15 +51,8 @@ pub fn parse(text: &str, file: &str) -> Result<RealMatrix, FormatError> {
     let source = Source { file, text };
     let header_end = text.find('\n').unwrap_or(text.len());
     let (layout, symmetry) = read_header(source, &text[..header_end])?;
-    let mut words = Words {
-        source,
-        at: header_end,
-        last: (0, 0),
-    };
-    let size_line = 1 + text[..words.peek_position()]
-        .bytes()
-        .filter(|&byte| byte == b'\n')
-        .count();
+    let mut words = Words { source, at: header_end, last: (0, 0) };
+    let size_line = 1 + text[..words.peek_position()].bytes().filter(|&byte| byte == b'\n').count();
     let rows = words.count("the number of rows")?;
     let (columns, column_at) = (words.count("the number of columns")?, words.last);
     let refuse_size =
@@ -80,10 +73,7 @@ pub fn parse(text: &str, file: &str) -> Result<RealMatrix, FormatError> {
         }
         Layout::Coordinate => {
             if cells > MAX_DENSE_ORDER * MAX_DENSE_ORDER {
-                return refuse_size(format!(
-                    "at most {} cells",
-                    MAX_DENSE_ORDER * MAX_DENSE_ORDER
-                ));
+                return refuse_size(format!("at most {} cells", MAX_DENSE_ORDER * MAX_DENSE_ORDER));
             }
             let entries = words.count("the number of entries")?;
             read_coordinates(&mut words, rows, columns, entries, symmetry)
@@ -101,16 +91,9 @@ fn finish(
 ) -> Result<RealMatrix, FormatError> {
     match words.next() {
         Some((at, word)) => {
-            Err(words
-                .source
-                .error(at, word.len(), Kind::Unexpected, "the end of the file"))
+            Err(words.source.error(at, word.len(), Kind::Unexpected, "the end of the file"))
         }
-        None => Ok(RealMatrix {
-            rows,
-            columns,
-            data,
-            size_line,
-        }),
+        None => Ok(RealMatrix { rows, columns, data, size_line }),
     }
 }
 
@@ -118,18 +101,12 @@ fn read_header(source: Source<'_>, line: &str) -> Result<(Layout, Symmetry), For
     let mut at = 0;
     let mut next = |expected: &str, allowed: &[&str]| {
         let start = at + line[at..].len() - line[at..].trim_start().len();
-        let length = line[start..]
-            .find(char::is_whitespace)
-            .unwrap_or(line.len() - start);
+        let length = line[start..].find(char::is_whitespace).unwrap_or(line.len() - start);
         at = start + length;
         let word = line[start..at].to_ascii_lowercase();
         let found = allowed.iter().position(|candidate| *candidate == word);
         found.ok_or_else(|| {
-            let kind = if length == 0 {
-                Kind::EndOfLine
-            } else {
-                Kind::Unexpected
-            };
+            let kind = if length == 0 { Kind::EndOfLine } else { Kind::Unexpected };
             source.error(start, length, kind, expected)
         })
     };
@@ -138,19 +115,8 @@ fn read_header(source: Source<'_>, line: &str) -> Result<(Layout, Symmetry), For
     let layout = next("`array` or `coordinate`", &["array", "coordinate"])?;
     next("`real` or `integer`", &["real", "integer"])?;
     let symmetry = next("`general` or `symmetric`", &["general", "symmetric"])?;
-    let layout = if layout == 0 {
-        Layout::Array
-    } else {
-        Layout::Coordinate
-    };
-    Ok((
-        layout,
-        if symmetry == 0 {
-            Symmetry::General
-        } else {
-            Symmetry::Symmetric
-        },
-    ))
+    let layout = if layout == 0 { Layout::Array } else { Layout::Coordinate };
+    Ok((layout, if symmetry == 0 { Symmetry::General } else { Symmetry::Symmetric }))
 }
 
 /// The words after the header, comment lines left out.
@@ -174,9 +140,7 @@ impl<'a> Words<'a> {
             let start = self.at + (rest.len() - rest.trim_start().len());
             let rest = &text[start..];
             if rest.starts_with('%') && starts_its_line(text, start) {
-                self.at = rest
-                    .find('\n')
-                    .map_or(text.len(), |position| start + position);
+                self.at = rest.find('\n').map_or(text.len(), |position| start + position);
                 continue;
             }
             let length = rest.find(char::is_whitespace).unwrap_or(rest.len());
@@ -194,12 +158,8 @@ impl<'a> Words<'a> {
         let (at, word) = self.next().ok_or_else(|| self.source.end_error(expected))?;
         match word.parse::<usize>() {
             Ok(value) if (least..=most).contains(&value) => Ok(value),
-            Ok(_) => Err(self
-                .source
-                .error(at, word.len(), Kind::OutOfRange, expected)),
-            Err(_) => Err(self
-                .source
-                .error(at, word.len(), Kind::Unexpected, expected)),
+            Ok(_) => Err(self.source.error(at, word.len(), Kind::OutOfRange, expected)),
+            Err(_) => Err(self.source.error(at, word.len(), Kind::Unexpected, expected)),
         }
     }
 
@@ -208,12 +168,8 @@ impl<'a> Words<'a> {
         let (at, word) = self.next().ok_or_else(|| self.source.end_error(expected))?;
         match word.parse::<f64>() {
             Ok(value) if value.is_finite() => Ok(value),
-            Ok(_) => Err(self
-                .source
-                .error(at, word.len(), Kind::NotFinite, "a finite number")),
-            Err(_) => Err(self
-                .source
-                .error(at, word.len(), Kind::Unexpected, expected)),
+            Ok(_) => Err(self.source.error(at, word.len(), Kind::NotFinite, "a finite number")),
+            Err(_) => Err(self.source.error(at, word.len(), Kind::Unexpected, expected)),
         }
     }
 }
@@ -231,11 +187,7 @@ fn read_array(
 ) -> Result<Vec<f64>, FormatError> {
     let mut data = vec![0.0; rows * columns];
     for j in 0..columns {
-        let first = if symmetry == Symmetry::Symmetric {
-            j
-        } else {
-            0
-        };
+        let first = if symmetry == Symmetry::Symmetric { j } else { 0 };
         for i in first..rows {
             let value = words.number()?;
             data[i * columns + j] = value;
@@ -262,15 +214,11 @@ fn read_coordinates(
         let j = words.index(columns, &format!("a column from 1 to {columns}"), 1)? - 1;
         if symmetry == Symmetry::Symmetric && i < j {
             let expected = "an entry of the lower triangle of a symmetric matrix";
-            return Err(words
-                .source
-                .error(row_at.0, row_at.1, Kind::OutOfRange, expected));
+            return Err(words.source.error(row_at.0, row_at.1, Kind::OutOfRange, expected));
         }
         if std::mem::replace(&mut given[i * columns + j], true) {
             let expected = "a position that no earlier entry gives";
-            return Err(words
-                .source
-                .error(row_at.0, row_at.1, Kind::Duplicate, expected));
+            return Err(words.source.error(row_at.0, row_at.1, Kind::Duplicate, expected));
         }
         let value = words.number()?;
         data[i * columns + j] = value;

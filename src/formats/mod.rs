@@ -138,9 +138,7 @@ impl<'a> Source<'a> {
         let end = self.boundary((offset + length).min(self.text.len()));
         let before = &self.text[..offset];
         let line_start = before.rfind('\n').map_or(0, |position| position + 1);
-        let line_end = self.text[offset..]
-            .find('\n')
-            .map_or(self.text.len(), |at| offset + at);
+        let line_end = self.text[offset..].find('\n').map_or(self.text.len(), |at| offset + at);
         let from = self.boundary(line_start.max(offset.saturating_sub(EXCERPT_REACH)));
         let until = self.boundary(line_end.min(offset + EXCERPT_REACH));
         let shown_end = end.min(until).max(offset);
@@ -196,10 +194,7 @@ fn read_text(path: &Path) -> Result<String, FormatError> {
     }
     if metadata.len() > MAX_FILE_BYTES {
         let reason = format!("{} bytes, more than {MAX_FILE_BYTES}", metadata.len());
-        return Err(FormatError {
-            kind: FormatErrorKind::TooLarge,
-            ..unreadable(&reason)
-        });
+        return Err(FormatError { kind: FormatErrorKind::TooLarge, ..unreadable(&reason) });
     }
     let bytes = std::fs::read(path).map_err(|error| unreadable(&error))?;
     text_of(bytes, &file)
@@ -211,16 +206,12 @@ fn text_of(bytes: Vec<u8>, file: &str) -> Result<String, FormatError> {
         let good = error.utf8_error().valid_up_to();
         let bytes = error.into_bytes();
         let line = 1 + bytes[..good].iter().filter(|&&byte| byte == b'\n').count();
-        let line_start = bytes[..good]
-            .iter()
-            .rposition(|&byte| byte == b'\n')
-            .map_or(0, |at| at + 1);
+        let line_start =
+            bytes[..good].iter().rposition(|&byte| byte == b'\n').map_or(0, |at| at + 1);
         FormatError {
             file: file.to_owned(),
             line,
-            column: 1 + String::from_utf8_lossy(&bytes[line_start..good])
-                .chars()
-                .count(),
+            column: 1 + String::from_utf8_lossy(&bytes[line_start..good]).chars().count(),
             token: format!("byte 0x{:02x}", bytes[good]),
             expected: "UTF-8 text".to_owned(),
             kind: FormatErrorKind::NotText,
@@ -241,10 +232,7 @@ pub fn with_ranks(problem: &Problem, rank: usize) -> Result<Problem, ProblemErro
     let blocks = problem
         .blocks()
         .iter()
-        .map(|block| Block {
-            order: block.order,
-            rank: (block.order >= rank).then_some(rank),
-        })
+        .map(|block| Block { order: block.order, rank: (block.order >= rank).then_some(rank) })
         .collect();
     Problem::new(
         blocks,

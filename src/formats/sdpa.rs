@@ -79,9 +79,7 @@ pub fn parse(text: &str, file: &str) -> Result<SdpaFile, FormatError> {
     let rhs = reader.read_rhs(constraints)?;
     let entries = reader.read_entries(constraints, &blocks)?;
     let problem = assemble(&blocks, rhs, &entries).map_err(|error| {
-        reader
-            .source
-            .error(0, 0, FormatErrorKind::Unexpected, error.to_string())
+        reader.source.error(0, 0, FormatErrorKind::Unexpected, error.to_string())
     })?;
     Ok(SdpaFile { problem, blocks })
 }
@@ -98,10 +96,7 @@ fn assemble(
         let functional = &mut functionals[group[0].matrix];
         match blocks[group[0].block] {
             FileBlock::Psd { block, order } => {
-                let triples = group
-                    .iter()
-                    .map(|e| (e.row, e.column, sign * e.value))
-                    .collect();
+                let triples = group.iter().map(|e| (e.row, e.column, sign * e.value)).collect();
                 let matrix = SparseSymmetric::gather(order, triples);
                 if matrix.stored() > 0 {
                     functional.parts.push((block, Coefficient::Sparse(matrix)));
@@ -141,20 +136,13 @@ pub fn write(problem: &Problem, comment: &str) -> String {
     }
     let blocks = problem.blocks().len() + usize::from(problem.orthant() > 0);
     let _ = writeln!(text, "{}\n{blocks}", problem.constraints().len());
-    let mut sizes: Vec<String> = problem
-        .blocks()
-        .iter()
-        .map(|block| block.order.to_string())
-        .collect();
+    let mut sizes: Vec<String> =
+        problem.blocks().iter().map(|block| block.order.to_string()).collect();
     if problem.orthant() > 0 {
         sizes.push(format!("-{}", problem.orthant()));
     }
     let _ = writeln!(text, "{}", sizes.join(" "));
-    let rhs: Vec<String> = problem
-        .rhs()
-        .iter()
-        .map(|value| format!("{value:?}"))
-        .collect();
+    let rhs: Vec<String> = problem.rhs().iter().map(|value| format!("{value:?}")).collect();
     let _ = writeln!(text, "{}", rhs.join(" "));
     write_functional(&mut text, 0, problem.cost(), problem.blocks().len());
     for (index, constraint) in problem.constraints().iter().enumerate() {
@@ -175,26 +163,13 @@ fn write_functional(text: &mut String, matrix: usize, functional: &Functional, p
             }
         };
         for (i, j, value) in sparse.iter() {
-            let _ = writeln!(
-                text,
-                "{matrix} {} {} {} {:?}",
-                block + 1,
-                i + 1,
-                j + 1,
-                sign * value
-            );
+            let _ = writeln!(text, "{matrix} {} {} {} {:?}", block + 1, i + 1, j + 1, sign * value);
         }
     }
     let orthant: &SparseVector = &functional.orthant;
     for (i, value) in orthant.iter() {
-        let _ = writeln!(
-            text,
-            "{matrix} {} {} {} {:?}",
-            psd_blocks + 1,
-            i + 1,
-            i + 1,
-            sign * value
-        );
+        let _ =
+            writeln!(text, "{matrix} {} {} {} {:?}", psd_blocks + 1, i + 1, i + 1, sign * value);
     }
 }
 

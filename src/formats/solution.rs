@@ -137,22 +137,10 @@ pub fn parse(
         return refuse(&[Step::Key("nonnegative")], Kind::OutOfRange, expected);
     }
     let m = problem.constraints().len();
-    if raw
-        .multipliers
-        .as_ref()
-        .is_some_and(|multipliers| multipliers.len() != m)
-    {
-        return refuse(
-            &[Step::Key("multipliers")],
-            Kind::OutOfRange,
-            format!("{m} multipliers"),
-        );
+    if raw.multipliers.as_ref().is_some_and(|multipliers| multipliers.len() != m) {
+        return refuse(&[Step::Key("multipliers")], Kind::OutOfRange, format!("{m} multipliers"));
     }
-    let Some(stop) = raw
-        .stop
-        .as_deref()
-        .map_or(Some(StopReason::Converged), stop_reason)
-    else {
+    let Some(stop) = raw.stop.as_deref().map_or(Some(StopReason::Converged), stop_reason) else {
         let words: Vec<&str> = STOP_REASONS.iter().map(|reason| reason.word()).collect();
         return refuse(
             &[Step::Key("stop")],
@@ -165,18 +153,10 @@ pub fn parse(
         let order = problem.blocks()[index].order;
         blocks.push(read_block(source, folder, block, index, order)?);
     }
-    let point = Point {
-        blocks,
-        orthant: raw.nonnegative,
-    };
+    let point = Point { blocks, orthant: raw.nonnegative };
     let note = raw.note.replace(['\n', '\r'], " ");
     Ok(Solution {
-        answer: Answer {
-            point,
-            multipliers: raw.multipliers,
-            stop,
-            note,
-        },
+        answer: Answer { point, multipliers: raw.multipliers, stop, note },
         effort: raw.effort,
     })
 }
@@ -192,9 +172,7 @@ const STOP_REASONS: [StopReason; 7] = [
 ];
 
 fn stop_reason(word: &str) -> Option<StopReason> {
-    STOP_REASONS
-        .into_iter()
-        .find(|reason| reason.word() == word)
+    STOP_REASONS.into_iter().find(|reason| reason.word() == word)
 }
 
 fn read_block(
@@ -206,20 +184,9 @@ fn read_block(
 ) -> Result<BlockPoint, FormatError> {
     let here = [Step::Key("blocks"), Step::Item(index)];
     let refuse = |steps: &[Step<'_>], kind, expected: String| {
-        Err(json::error_at(
-            source,
-            &[&here[..], steps].concat(),
-            kind,
-            expected,
-        ))
+        Err(json::error_at(source, &[&here[..], steps].concat(), kind, expected))
     };
-    match (
-        &block.factor,
-        &block.matrix,
-        &block.entries,
-        &block.file,
-        block.holds,
-    ) {
+    match (&block.factor, &block.matrix, &block.entries, &block.file, block.holds) {
         (Some(rows), None, None, None, None) => {
             let width = rows.first().map_or(0, Vec::len);
             let data = rectangle(
@@ -234,9 +201,7 @@ fn read_block(
         (None, Some(rows), None, None, None) => {
             let path = [&here[..], &[Step::Key("matrix")]].concat();
             let data = rectangle(source, &path, rows, order, order)?;
-            Ok(BlockPoint::Dense(Mat::from_fn(order, order, |i, j| {
-                data[i * order + j]
-            })))
+            Ok(BlockPoint::Dense(Mat::from_fn(order, order, |i, j| data[i * order + j])))
         }
         (None, None, Some(entries), None, None) => {
             if order > MAX_DENSE_ORDER {
@@ -251,11 +216,7 @@ fn read_block(
             for (position, &(i, j, value)) in entries.iter().enumerate() {
                 let step = [Step::Key("entries"), Step::Item(position)];
                 if i == 0 || j == 0 || i > order || j > order {
-                    return refuse(
-                        &step,
-                        Kind::OutOfRange,
-                        format!("indices from 1 to {order}"),
-                    );
+                    return refuse(&step, Kind::OutOfRange, format!("indices from 1 to {order}"));
                 }
                 if given[(i - 1) * order + j - 1] {
                     let expected = "a pair of indices that no earlier entry gives".to_owned();
@@ -315,11 +276,8 @@ fn block_from_file(path: &Path, holds: Holds, order: usize) -> Result<BlockPoint
     let matrix = matrix_market::read(path)?;
     let fits = matrix.rows == order && (holds == Holds::Factor || matrix.columns == order);
     if !fits {
-        let shape = if holds == Holds::Factor {
-            "any number of".to_owned()
-        } else {
-            order.to_string()
-        };
+        let shape =
+            if holds == Holds::Factor { "any number of".to_owned() } else { order.to_string() };
         return Err(FormatError {
             file: path.display().to_string(),
             line: matrix.size_line,
@@ -331,14 +289,12 @@ fn block_from_file(path: &Path, holds: Holds, order: usize) -> Result<BlockPoint
         });
     }
     Ok(match holds {
-        Holds::Factor => BlockPoint::Factor(Factor {
-            order,
-            width: matrix.columns,
-            data: matrix.data,
-        }),
-        Holds::Matrix => BlockPoint::Dense(Mat::from_fn(order, order, |i, j| {
-            matrix.data[i * order + j]
-        })),
+        Holds::Factor => {
+            BlockPoint::Factor(Factor { order, width: matrix.columns, data: matrix.data })
+        }
+        Holds::Matrix => {
+            BlockPoint::Dense(Mat::from_fn(order, order, |i, j| matrix.data[i * order + j]))
+        }
     })
 }
 
@@ -360,12 +316,8 @@ pub fn write(solution: &Solution) -> String {
         note: answer.note.clone(),
         effort: solution.effort,
     };
-    let finite = |values: &[f64]| {
-        assert!(
-            values.iter().all(|v| v.is_finite()),
-            "a number is not finite"
-        )
-    };
+    let finite =
+        |values: &[f64]| assert!(values.iter().all(|v| v.is_finite()), "a number is not finite");
     finite(&answer.point.orthant);
     finite(answer.multipliers.as_deref().unwrap_or_default());
     serde_json::to_string(&text).expect("plain data serialise") + "\n"
@@ -375,15 +327,9 @@ pub fn write(solution: &Solution) -> String {
 fn block_text(block: &BlockPoint) -> BlockText {
     match block {
         BlockPoint::Factor(factor) => {
-            assert!(
-                factor.data.iter().all(|value| value.is_finite()),
-                "a number is not finite"
-            );
+            assert!(factor.data.iter().all(|value| value.is_finite()), "a number is not finite");
             let rows = (0..factor.order).map(|i| factor.row(i).to_vec()).collect();
-            BlockText {
-                factor: Some(rows),
-                ..BlockText::default()
-            }
+            BlockText { factor: Some(rows), ..BlockText::default() }
         }
         BlockPoint::Dense(matrix) => {
             let mut entries = Vec::new();
@@ -396,10 +342,7 @@ fn block_text(block: &BlockPoint) -> BlockText {
                     }
                 }
             }
-            BlockText {
-                entries: Some(entries),
-                ..BlockText::default()
-            }
+            BlockText { entries: Some(entries), ..BlockText::default() }
         }
     }
 }

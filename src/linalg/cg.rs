@@ -61,12 +61,9 @@ impl CgWorkspace {
     }
 
     fn resize(&mut self, n: usize) {
-        for v in [
-            &mut self.residual,
-            &mut self.preconditioned,
-            &mut self.direction,
-            &mut self.image,
-        ] {
+        for v in
+            [&mut self.residual, &mut self.preconditioned, &mut self.direction, &mut self.image]
+        {
             v.resize(n, 0.0);
         }
     }
@@ -173,11 +170,7 @@ pub fn solve_preconditioned<A: LinearOperator + ?Sized, M: LinearOperator + ?Siz
             axpy(-length, &ws.image, &mut ws.residual);
             if norm2(&ws.residual) <= limit {
                 residual_norm = refresh_residual(a, b, x, ws);
-                futile = if residual_norm <= 0.5 * last_refreshed {
-                    0
-                } else {
-                    futile + 1
-                };
+                futile = if residual_norm <= 0.5 * last_refreshed { 0 } else { futile + 1 };
                 last_refreshed = residual_norm;
                 if futile >= FUTILE_REFRESHES && residual_norm > limit {
                     break 'restart Outcome::Stagnated;
@@ -194,11 +187,7 @@ pub fn solve_preconditioned<A: LinearOperator + ?Sized, M: LinearOperator + ?Siz
         Outcome::Converged | Outcome::Stagnated => residual_norm,
         _ => refresh_residual(a, b, x, ws),
     };
-    Info {
-        steps,
-        residual,
-        outcome,
-    }
+    Info { steps, residual, outcome }
 }
 
 /// Sets the residual to b - A x and returns its norm.

@@ -32,11 +32,7 @@ pub struct NotPositive {
 #[track_caller]
 pub fn factor_in_place(mut a: MatMut<'_, f64>, ws: &mut Workspace) -> Result<(), NotPositive> {
     let order = a.nrows();
-    assert_eq!(
-        order,
-        a.ncols(),
-        "Cholesky factorisation of a matrix that is not square"
-    );
+    assert_eq!(order, a.ncols(), "Cholesky factorisation of a matrix that is not square");
     let request =
         llt::factor::cholesky_in_place_scratch::<f64>(order, Par::Seq, Default::default());
     let outcome = llt::factor::cholesky_in_place(
@@ -115,11 +111,7 @@ pub fn solve_lower_transpose_matrix(l: MatRef<'_, f64>, rhs: MatMut<'_, f64>) {
 #[track_caller]
 pub fn invert_from_factor(l: MatRef<'_, f64>, mut out: MatMut<'_, f64>, ws: &mut Workspace) {
     assert_square_with_rows(l, out.nrows());
-    assert_eq!(
-        out.nrows(),
-        out.ncols(),
-        "inverse written to a matrix that is not square"
-    );
+    assert_eq!(out.nrows(), out.ncols(), "inverse written to a matrix that is not square");
     let request = llt::inverse::inverse_scratch::<f64>(l.nrows(), Par::Seq);
     llt::inverse::inverse(out.as_mut(), l, Par::Seq, ws.stack(request));
     mirror_lower(out);
@@ -193,11 +185,7 @@ impl WithSimd for BackwardSolve<'_> {
         let n = x.len();
         let mut next = n;
         while next > 0 {
-            let width = if next.is_multiple_of(PANEL) {
-                PANEL
-            } else {
-                next % PANEL
-            };
+            let width = if next.is_multiple_of(PANEL) { PANEL } else { next % PANEL };
             let first = next - width;
             let (above, below) = x.split_at_mut(next);
             if width == PANEL {

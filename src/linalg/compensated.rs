@@ -132,10 +132,6 @@ impl Accumulator {
         // Twice 5 times the least subnormal number for each product (Ogita, Rump, Oishi, section 5, from memory).
         let underflow = self.terms as f64 * 10.0 * f64::from_bits(1);
         let bound = UNIT_ROUNDOFF * self.value().abs() + gamma * gamma * self.absolute + underflow;
-        if bound.is_finite() {
-            bound
-        } else {
-            f64::INFINITY
-        }
+        if bound.is_finite() { bound } else { f64::INFINITY }
     }
 }

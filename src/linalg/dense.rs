@@ -35,10 +35,7 @@ impl From<Accumulate> for Accum {
 #[inline]
 #[track_caller]
 pub fn column<'a>(a: MatRef<'a, f64>, j: usize) -> &'a [f64] {
-    a.col(j)
-        .try_as_col_major()
-        .expect("column: rows are not contiguous")
-        .as_slice()
+    a.col(j).try_as_col_major().expect("column: rows are not contiguous").as_slice()
 }
 
 /// Returns column `j` of `a` as a mutable slice.
@@ -47,10 +44,7 @@ pub fn column<'a>(a: MatRef<'a, f64>, j: usize) -> &'a [f64] {
 #[inline]
 #[track_caller]
 pub fn column_mut<'a>(a: MatMut<'a, f64>, j: usize) -> &'a mut [f64] {
-    a.col_mut(j)
-        .try_as_col_major_mut()
-        .expect("column_mut: rows are not contiguous")
-        .as_slice_mut()
+    a.col_mut(j).try_as_col_major_mut().expect("column_mut: rows are not contiguous").as_slice_mut()
 }
 
 /// Computes `dst = alpha a b` or `dst += alpha a b` in 2mnk flops.
@@ -156,11 +150,7 @@ pub fn symmetrise(m: MatMut<'_, f64>) {
 /// Applies `visit` to (m_ij, m_ji) for all i > j, tile by tile.
 #[track_caller]
 fn for_each_pair(mut m: MatMut<'_, f64>, visit: impl Fn(&mut f64, &mut f64)) {
-    assert_eq!(
-        m.nrows(),
-        m.ncols(),
-        "triangles of a matrix that is not square"
-    );
+    assert_eq!(m.nrows(), m.ncols(), "triangles of a matrix that is not square");
     let n = m.nrows();
     for first_column in (0..n).step_by(TILE) {
         let last_column = (first_column + TILE).min(n);
@@ -184,9 +174,7 @@ fn for_each_pair(mut m: MatMut<'_, f64>, visit: impl Fn(&mut f64, &mut f64)) {
 #[track_caller]
 pub fn dot_symmetric(a: MatRef<'_, f64>, b: MatRef<'_, f64>) -> f64 {
     assert_same_shape(a, b);
-    (0..a.ncols())
-        .map(|j| vector::dot(column(a, j), column(b, j)))
-        .sum()
+    (0..a.ncols()).map(|j| vector::dot(column(a, j), column(b, j))).sum()
 }
 
 /// Adds `alpha * x` to `y`. Panics when the shapes differ.

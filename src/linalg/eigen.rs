@@ -132,11 +132,7 @@ impl SymmetricEigen {
     /// Returns the eigenvalues, ascending. Panics before the first successful decomposition.
     #[track_caller]
     pub fn values(&self) -> &[f64] {
-        assert_ne!(
-            self.holds,
-            Holds::Nothing,
-            "values of a matrix that was not decomposed"
-        );
+        assert_ne!(self.holds, Holds::Nothing, "values of a matrix that was not decomposed");
         &self.values
     }
 
@@ -172,26 +168,17 @@ impl SymmetricEigen {
         if exponent != 0 {
             self.fill_scaled(a, exponent);
         }
-        let input = if exponent == 0 {
-            a
-        } else {
-            self.scaled.as_ref()
-        };
+        let input = if exponent == 0 { a } else { self.scaled.as_ref() };
         let vectors = (what == ComputeEigenvectors::Yes).then(|| self.vectors.as_mut());
         let stack = self.workspace.stack(request);
         let values = DiagMut::from_slice_mut(&mut self.values);
         self_adjoint_evd(input, values, vectors, Par::Seq, stack, Default::default())
             .map_err(|EvdError::NoConvergence| EigenError::NoConvergence { order: n })?;
         if exponent != 0 {
-            self.values
-                .iter_mut()
-                .for_each(|v| *v = times_power_of_two(*v, exponent));
+            self.values.iter_mut().for_each(|v| *v = times_power_of_two(*v, exponent));
         }
-        self.holds = if what == ComputeEigenvectors::Yes {
-            Holds::Everything
-        } else {
-            Holds::Values
-        };
+        self.holds =
+            if what == ComputeEigenvectors::Yes { Holds::Everything } else { Holds::Values };
         Ok(())
     }
 
@@ -231,11 +218,7 @@ fn largest_in_lower(a: MatRef<'_, f64>) -> Result<f64, EigenError> {
         let column_largest = super::vector::norm_max(part);
         if !column_largest.is_finite() {
             let offset = part.iter().position(|v| !v.is_finite()).unwrap_or(0);
-            return Err(EigenError::NonFinite {
-                row: j + offset,
-                column: j,
-                value: part[offset],
-            });
+            return Err(EigenError::NonFinite { row: j + offset, column: j, value: part[offset] });
         }
         largest = largest.max(column_largest);
     }

@@ -8,9 +8,7 @@ use faer::MatRef;
 
 /// Computes the Frobenius norm of `a` (all entries), without overflow or harmful underflow.
 pub fn frobenius(a: MatRef<'_, f64>) -> f64 {
-    let squared: f64 = (0..a.ncols())
-        .map(|j| vector::norm2_squared(column(a, j)))
-        .sum();
+    let squared: f64 = (0..a.ncols()).map(|j| vector::norm2_squared(column(a, j))).sum();
     if (1e-280..=f64::MAX).contains(&squared) || squared.is_nan() {
         return squared.sqrt();
     }
@@ -18,24 +16,18 @@ pub fn frobenius(a: MatRef<'_, f64>) -> f64 {
     if largest == 0.0 || !largest.is_finite() {
         return largest;
     }
-    let sum: f64 = (0..a.ncols())
-        .map(|j| (vector::norm2(column(a, j)) / largest).powi(2))
-        .sum();
+    let sum: f64 = (0..a.ncols()).map(|j| (vector::norm2(column(a, j)) / largest).powi(2)).sum();
     largest * sum.sqrt()
 }
 
 /// Computes the largest absolute entry of `a`, 0 for an empty matrix.
 pub fn max_abs(a: MatRef<'_, f64>) -> f64 {
-    (0..a.ncols())
-        .map(|j| vector::norm_max(column(a, j)))
-        .fold(0.0, larger)
+    (0..a.ncols()).map(|j| vector::norm_max(column(a, j))).fold(0.0, larger)
 }
 
 /// Computes the largest absolute column sum of `a`, an upper bound of the spectral norm when `a` is symmetric.
 pub fn one_norm(a: MatRef<'_, f64>) -> f64 {
-    (0..a.ncols())
-        .map(|j| vector::norm1(column(a, j)))
-        .fold(0.0, larger)
+    (0..a.ncols()).map(|j| vector::norm1(column(a, j))).fold(0.0, larger)
 }
 
 /// Computes the Euclidean norm of a vector.

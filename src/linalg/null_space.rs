@@ -65,31 +65,17 @@ pub fn null_space(a: MatRef<'_, f64>, tau: f64) -> Result<NullSpace, NullSpaceEr
     check_finite(a)?;
     let (m, k) = (a.nrows(), a.ncols());
     if m == 0 || k == 0 {
-        return Ok(NullSpace {
-            basis: Mat::identity(k, k),
-            singular_values: Vec::new(),
-        });
+        return Ok(NullSpace { basis: Mat::identity(k, k), singular_values: Vec::new() });
     }
     if max_abs(a) == 0.0 {
-        return Ok(NullSpace {
-            basis: Mat::identity(k, k),
-            singular_values: vec![0.0; m.min(k)],
-        });
+        return Ok(NullSpace { basis: Mat::identity(k, k), singular_values: vec![0.0; m.min(k)] });
     }
     let mut ws = Workspace::new();
-    let (reduced, order) = if m > k {
-        pivoted_triangle(a, &mut ws)
-    } else {
-        (a.to_owned(), (0..k).collect())
-    };
+    let (reduced, order) =
+        if m > k { pivoted_triangle(a, &mut ws) } else { (a.to_owned(), (0..k).collect()) };
     let mut values = vec![0.0; m.min(k)];
     let mut right = Mat::zeros(k, k);
-    decompose(
-        reduced.as_ref(),
-        &mut values,
-        Vectors::Right(&mut right),
-        &mut ws,
-    )?;
+    decompose(reduced.as_ref(), &mut values, Vectors::Right(&mut right), &mut ws)?;
     let rank = rank_of(&values, tau);
     let mut basis = Mat::zeros(k, k - rank);
     for j in rank..k {
@@ -98,10 +84,7 @@ pub fn null_space(a: MatRef<'_, f64>, tau: f64) -> Result<NullSpace, NullSpaceEr
             basis[(order[i], j - rank)] = right[(i, j)];
         }
     }
-    Ok(NullSpace {
-        basis,
-        singular_values: values,
-    })
+    Ok(NullSpace { basis, singular_values: values })
 }
 
 /// Counts the singular values with sigma_i > `tau` * sigma_max. Fails and panics as [`null_space`] does.
@@ -131,30 +114,17 @@ pub fn least_squares(
     tau: f64,
 ) -> Result<LeastSquares, NullSpaceError> {
     assert!(tau >= 0.0, "least_squares: threshold {tau}");
-    assert_eq!(
-        a.nrows(),
-        b.nrows(),
-        "least_squares: row numbers of matrix and right side"
-    );
+    assert_eq!(a.nrows(), b.nrows(), "least_squares: row numbers of matrix and right side");
     check_finite(a)?;
     let (m, k) = (a.nrows(), a.ncols());
     let size = m.min(k);
     let mut solution = Mat::zeros(k, b.ncols());
     if size == 0 {
-        return Ok(LeastSquares {
-            solution,
-            rank: 0,
-            singular_values: Vec::new(),
-        });
+        return Ok(LeastSquares { solution, rank: 0, singular_values: Vec::new() });
     }
     let mut values = vec![0.0; size];
     let (mut left, mut right) = (Mat::zeros(m, size), Mat::zeros(k, size));
-    decompose(
-        a,
-        &mut values,
-        Vectors::Thin(&mut left, &mut right),
-        &mut Workspace::new(),
-    )?;
+    decompose(a, &mut values, Vectors::Thin(&mut left, &mut right), &mut Workspace::new())?;
     let rank = rank_of(&values, tau);
     let mut coefficients = Mat::<f64>::zeros(rank, b.ncols());
     gemm(
@@ -176,11 +146,7 @@ pub fn least_squares(
         right.as_ref().subcols(0, rank),
         coefficients.as_ref(),
     );
-    Ok(LeastSquares {
-        solution,
-        rank,
-        singular_values: values,
-    })
+    Ok(LeastSquares { solution, rank, singular_values: values })
 }
 
 /// Counts the values above `tau` times the first, none when all are zero.
@@ -235,18 +201,12 @@ fn decompose(
     let (m, k) = (a.nrows(), a.ncols());
     let (compute_left, compute_right, mut left, mut right) = match vectors {
         Vectors::Neither => (ComputeSvdVectors::No, ComputeSvdVectors::No, None, None),
-        Vectors::Right(v) => (
-            ComputeSvdVectors::No,
-            ComputeSvdVectors::Full,
-            None,
-            Some(v.as_mut()),
-        ),
-        Vectors::Thin(u, v) => (
-            ComputeSvdVectors::Thin,
-            ComputeSvdVectors::Thin,
-            Some(u.as_mut()),
-            Some(v.as_mut()),
-        ),
+        Vectors::Right(v) => {
+            (ComputeSvdVectors::No, ComputeSvdVectors::Full, None, Some(v.as_mut()))
+        }
+        Vectors::Thin(u, v) => {
+            (ComputeSvdVectors::Thin, ComputeSvdVectors::Thin, Some(u.as_mut()), Some(v.as_mut()))
+        }
     };
     let largest = max_abs(a);
     if largest == 0.0 {
@@ -260,11 +220,7 @@ fn decompose(
         }
         return Ok(());
     }
-    let exponent = if (1e-100..=1e100).contains(&largest) {
-        0
-    } else {
-        largest.log2() as i32
-    };
+    let exponent = if (1e-100..=1e100).contains(&largest) { 0 } else { largest.log2() as i32 };
     let scaled;
     let input = if exponent == 0 {
         a
@@ -272,32 +228,13 @@ fn decompose(
         scaled = Mat::from_fn(m, k, |i, j| times_power_of_two(a[(i, j)], -exponent));
         scaled.as_ref()
     };
-    let request = svd_scratch::<f64>(
-        m,
-        k,
-        compute_left,
-        compute_right,
-        Par::Seq,
-        Default::default(),
-    );
+    let request =
+        svd_scratch::<f64>(m, k, compute_left, compute_right, Par::Seq, Default::default());
     let stack = ws.stack(request);
-    svd(
-        input,
-        DiagMut::from_slice_mut(values),
-        left,
-        right,
-        Par::Seq,
-        stack,
-        Default::default(),
-    )
-    .map_err(|SvdError::NoConvergence| NullSpaceError::NoConvergence {
-        rows: m,
-        columns: k,
-    })?;
+    svd(input, DiagMut::from_slice_mut(values), left, right, Par::Seq, stack, Default::default())
+        .map_err(|SvdError::NoConvergence| NullSpaceError::NoConvergence { rows: m, columns: k })?;
     if exponent != 0 {
-        values
-            .iter_mut()
-            .for_each(|v| *v = times_power_of_two(*v, exponent));
+        values.iter_mut().for_each(|v| *v = times_power_of_two(*v, exponent));
     }
     Ok(())
 }
@@ -306,11 +243,7 @@ fn check_finite(a: MatRef<'_, f64>) -> Result<(), NullSpaceError> {
     for j in 0..a.ncols() {
         let entries = column(a, j);
         if let Some(row) = entries.iter().position(|v| !v.is_finite()) {
-            return Err(NullSpaceError::NonFinite {
-                row,
-                column: j,
-                value: entries[row],
-            });
+            return Err(NullSpaceError::NonFinite { row, column: j, value: entries[row] });
         }
     }
     Ok(())

@@ -37,10 +37,7 @@ pub fn packed_index(n: usize, row: usize, column: usize) -> usize {
 /// Returns (row, column), row >= column, of packed index `index`. Panics when the index is not below the packed length.
 #[track_caller]
 pub fn packed_position(n: usize, index: usize) -> (usize, usize) {
-    assert!(
-        index < packed_len(n),
-        "packed index {index} of a matrix of order {n}"
-    );
+    assert!(index < packed_len(n), "packed index {index} of a matrix of order {n}");
     let mut column = 0;
     let mut size = n;
     let mut start = 0;

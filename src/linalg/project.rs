@@ -43,12 +43,7 @@ pub fn psd_projection(
     ws: &mut Workspace,
 ) -> usize {
     let n = eig.order();
-    assert!(
-        a.nrows() == n && a.ncols() == n,
-        "matrix {} x {} for order {n}",
-        a.nrows(),
-        a.ncols()
-    );
+    assert!(a.nrows() == n && a.ncols() == n, "matrix {} x {} for order {n}", a.nrows(), a.ncols());
     let (positive, negative) = (positive_count(eig), negative_count(eig));
     if positive <= negative {
         scaled_sum(eig, n - positive..n, out, ws);
@@ -104,11 +99,7 @@ pub fn factor_of_rank(eig: &SymmetricEigen, rank: usize) -> Mat<f64> {
 #[track_caller]
 pub fn factor_of_rank_into(eig: &SymmetricEigen, mut factor: MatMut<'_, f64>) {
     let (n, rank) = (eig.order(), factor.ncols());
-    assert!(
-        factor.nrows() == n && rank <= n,
-        "factor {} x {rank} for order {n}",
-        factor.nrows()
-    );
+    assert!(factor.nrows() == n && rank <= n, "factor {} x {rank} for order {n}", factor.nrows());
     for k in 0..rank {
         let index = n - 1 - k;
         scaled_column(eig, index, column_mut(factor.as_mut(), k));

@@ -42,11 +42,8 @@ pub(super) fn dot_kernel<S: Simd>(simd: S, x: &[f64], y: &[f64]) -> f64 {
         s0 = simd.mul_add_e_f64s(*x0, *y0, s0);
     }
     if !x_tail.is_empty() {
-        s1 = simd.mul_add_e_f64s(
-            simd.partial_load_f64s(x_tail),
-            simd.partial_load_f64s(y_tail),
-            s1,
-        );
+        s1 =
+            simd.mul_add_e_f64s(simd.partial_load_f64s(x_tail), simd.partial_load_f64s(y_tail), s1);
     }
     simd.reduce_sum_f64s(simd.add_f64s(simd.add_f64s(s0, s1), simd.add_f64s(s2, s3)))
 }
@@ -136,10 +133,7 @@ pub fn scale(alpha: f64, x: &mut [f64]) {
 #[inline]
 #[track_caller]
 pub fn sub_into(a: &[f64], b: &[f64], out: &mut [f64]) {
-    assert!(
-        a.len() == b.len() && a.len() == out.len(),
-        "sub_into: vectors of different length"
-    );
+    assert!(a.len() == b.len() && a.len() == out.len(), "sub_into: vectors of different length");
     dispatch_elementwise(a.len(), || {
         for ((o, x), y) in out.iter_mut().zip(a).zip(b) {
             *o = x - y;
@@ -151,10 +145,7 @@ pub fn sub_into(a: &[f64], b: &[f64], out: &mut [f64]) {
 #[inline]
 #[track_caller]
 pub fn add_into(a: &[f64], b: &[f64], out: &mut [f64]) {
-    assert!(
-        a.len() == b.len() && a.len() == out.len(),
-        "add_into: vectors of different length"
-    );
+    assert!(a.len() == b.len() && a.len() == out.len(), "add_into: vectors of different length");
     dispatch_elementwise(a.len(), || {
         for ((o, x), y) in out.iter_mut().zip(a).zip(b) {
             *o = x + y;
@@ -240,19 +231,11 @@ pub fn norm_max(x: &[f64]) -> f64 {
                 let a = chunk[lane].abs();
                 largest[lane] = if a > largest[lane] { a } else { largest[lane] };
                 // NaN is lost by the comparison; this stays 0 unless a NaN comes by.
-                poison[lane] = if chunk[lane].is_nan() {
-                    f64::NAN
-                } else {
-                    poison[lane]
-                };
+                poison[lane] = if chunk[lane].is_nan() { f64::NAN } else { poison[lane] };
             }
         }
         for a in rest {
-            largest[0] = if a.abs() > largest[0] {
-                a.abs()
-            } else {
-                largest[0]
-            };
+            largest[0] = if a.abs() > largest[0] { a.abs() } else { largest[0] };
             poison[0] = if a.is_nan() { f64::NAN } else { poison[0] };
         }
     });

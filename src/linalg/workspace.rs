@@ -13,10 +13,7 @@ pub struct Workspace {
 impl Workspace {
     /// Creates an empty workspace; the first request allocates.
     pub fn new() -> Self {
-        Self {
-            buffer: MemBuffer::new(StackReq::EMPTY),
-            held: StackReq::EMPTY,
-        }
+        Self { buffer: MemBuffer::new(StackReq::EMPTY), held: StackReq::EMPTY }
     }
 
     /// Returns scratch memory of at least the size and alignment of `request`, allocating only when it exceeds all earlier ones.
@@ -47,8 +44,6 @@ impl Default for Workspace {
 
 impl std::fmt::Debug for Workspace {
     fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
-        f.debug_struct("Workspace")
-            .field("bytes", &self.bytes())
-            .finish()
+        f.debug_struct("Workspace").field("bytes", &self.bytes()).finish()
     }
 }

@@ -130,7 +130,11 @@ impl Problem {
         for (index, block) in blocks.iter().enumerate() {
             let rank_fits = block.rank.is_none_or(|rank| (1..=block.order).contains(&rank));
             if block.order == 0 || !rank_fits {
-                return Err(ProblemError::Block { block: index, order: block.order, rank: block.rank });
+                return Err(ProblemError::Block {
+                    block: index,
+                    order: block.order,
+                    rank: block.rank,
+                });
             }
         }
         if constraints.len() != rhs.len() {
@@ -209,7 +213,11 @@ fn check_functional(
             return Err(shape("blocks are not in ascending order".to_owned()));
         }
         if part.order() != block.order {
-            return Err(shape(format!("order {} in a block of order {}", part.order(), block.order)));
+            return Err(shape(format!(
+                "order {} in a block of order {}",
+                part.order(),
+                block.order
+            )));
         }
         if !part.is_finite() {
             return Err(ProblemError::NotFinite { place: place() });

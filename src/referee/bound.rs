@@ -63,11 +63,7 @@ const TRIALS: usize = 14;
 /// bound, a slack too large to evaluate, or numbers that overflow.
 #[track_caller]
 pub fn lower_bound(problem: &Problem, y: &[f64]) -> Option<f64> {
-    assert_eq!(
-        y.len(),
-        problem.constraints().len(),
-        "one multiplier a constraint"
-    );
+    assert_eq!(y.len(), problem.constraints().len(), "one multiplier a constraint");
     let limits = Limits::of(problem);
     let mut total = Accumulator::new();
     for (rhs, multiplier) in problem.rhs().iter().zip(y) {
@@ -101,11 +97,8 @@ struct Limits {
 
 impl Limits {
     fn of(problem: &Problem) -> Self {
-        let mut diagonals: Vec<Vec<f64>> = problem
-            .blocks()
-            .iter()
-            .map(|block| vec![f64::INFINITY; block.order])
-            .collect();
+        let mut diagonals: Vec<Vec<f64>> =
+            problem.blocks().iter().map(|block| vec![f64::INFINITY; block.order]).collect();
         let mut traces = vec![f64::INFINITY; problem.blocks().len()];
         let mut scalars = vec![f64::INFINITY; problem.orthant()];
         for (constraint, &rhs) in problem.constraints().iter().zip(problem.rhs()) {
@@ -113,17 +106,10 @@ impl Limits {
                 continue;
             };
             let limit = |coefficient: f64| {
-                if rhs > 0.0 {
-                    (rhs / coefficient).next_up()
-                } else {
-                    0.0
-                }
+                if rhs > 0.0 { (rhs / coefficient).next_up() } else { 0.0 }
             };
             for (block, entries) in parts {
-                let least = entries
-                    .iter()
-                    .map(|entry| entry.1)
-                    .fold(f64::INFINITY, f64::min);
+                let least = entries.iter().map(|entry| entry.1).fold(f64::INFINITY, f64::min);
                 if entries.len() == problem.blocks()[block].order {
                     traces[block] = traces[block].min(limit(least));
                 }
@@ -231,9 +217,7 @@ fn verified_cholesky(block: &SlackBlock) -> Option<f64> {
     let inflate = 1.0 + (n + 8) as f64 * f64::EPSILON;
     let radius = radii.iter().copied().fold(0.0, f64::max) * inflate;
     let least = spectral::least(&matrix).ok()?;
-    let largest = (0..n)
-        .map(|i| (matrix[(i, i)] - least).abs())
-        .fold(least.abs(), f64::max);
+    let largest = (0..n).map(|i| (matrix[(i, i)] - least).abs()).fold(least.abs(), f64::max);
     let mut margin = 4.0 * UNIT_ROUNDOFF * (n as f64).sqrt() * largest + radius + f64::MIN_POSITIVE;
     let mut factor = vec![0.0; n * n];
     for _ in 0..TRIALS {
@@ -309,12 +293,7 @@ fn runs_to_completion(a: &mut [f64], n: usize) -> bool {
 fn laned_dot(x: &[f64], y: &[f64]) -> f64 {
     let mut lanes = [0.0; 8];
     let (x_blocks, y_blocks) = (x.chunks_exact(8), y.chunks_exact(8));
-    let rest: f64 = x_blocks
-        .remainder()
-        .iter()
-        .zip(y_blocks.remainder())
-        .map(|(a, b)| a * b)
-        .sum();
+    let rest: f64 = x_blocks.remainder().iter().zip(y_blocks.remainder()).map(|(a, b)| a * b).sum();
     for (a, b) in x_blocks.zip(y_blocks) {
         for k in 0..8 {
             lanes[k] += a[k] * b[k];

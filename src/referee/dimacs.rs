@@ -24,28 +24,18 @@ pub(super) fn errors(
     residual: &[f64],
     least: f64,
 ) -> Option<[f64; 6]> {
-    if problem
-        .blocks()
-        .iter()
-        .any(|block| block.order > DENSE_ORDER)
-    {
+    if problem.blocks().iter().any(|block| block.order > DENSE_ORDER) {
         return None;
     }
     let mut slack_least = f64::INFINITY;
     for (index, block) in problem.blocks().iter().enumerate() {
         let slack = slack::block(problem, y, index)?;
         let mut matrix = Mat::zeros(block.order, block.order);
-        slack
-            .entries
-            .iter()
-            .for_each(|entry| matrix[(entry.column, entry.row)] = entry.value);
+        slack.entries.iter().for_each(|entry| matrix[(entry.column, entry.row)] = entry.value);
         slack_least = slack_least.min(spectral::least(&matrix).ok()?);
     }
     let scalars = slack::orthant(problem, y);
-    slack_least = scalars
-        .iter()
-        .map(|scalar| scalar.0)
-        .fold(slack_least, f64::min);
+    slack_least = scalars.iter().map(|scalar| scalar.0).fold(slack_least, f64::min);
     let mut dual = Accumulator::new();
     let mut gap = Accumulator::new();
     gap.add(objective);
@@ -65,8 +55,5 @@ pub(super) fn errors(
         (objective - dual.value()) / size,
         gap.value() / size,
     ];
-    errors
-        .iter()
-        .all(|error| error.is_finite())
-        .then_some(errors)
+    errors.iter().all(|error| error.is_finite()).then_some(errors)
 }

@@ -19,11 +19,7 @@ pub(super) fn relative(found: &[Factor], known: &[Factor]) -> f64 {
     let work: u64 = found
         .iter()
         .zip(known)
-        .map(|(r, v)| {
-            (r.order as u64)
-                .pow(2)
-                .saturating_mul((r.width + v.width) as u64)
-        })
+        .map(|(r, v)| (r.order as u64).pow(2).saturating_mul((r.width + v.width) as u64))
         .fold(0, u64::saturating_add);
     for (r, v) in found.iter().zip(known) {
         assert_eq!(r.order, v.order, "the known point has another order");
@@ -63,7 +59,6 @@ fn cross_squared(v: &Factor, r: &Factor) -> f64 {
         }
     }
     let mut total = Accumulator::new();
-    sums.iter()
-        .for_each(|sum| total.add_product(sum.value(), sum.value()));
+    sums.iter().for_each(|sum| total.add_product(sum.value(), sum.value()));
     total.value()
 }

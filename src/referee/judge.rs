@@ -121,11 +121,7 @@ pub fn judge(
         );
     }
     if let Some(point) = known.unique_point {
-        assert_eq!(
-            point.len(),
-            problem.blocks().len(),
-            "one factor of the unique point a block"
-        );
+        assert_eq!(point.len(), problem.blocks().len(), "one factor of the unique point a block");
     }
     let truncated =
         shape::check(problem, answer).and_then(|()| truncate::truncate(problem, &answer.point));
@@ -152,16 +148,12 @@ pub fn judge(
         judgement.lower_bound = bound::lower_bound(problem, y);
         check_bound(judgement.lower_bound, known)?;
     }
-    judgement.distance = known
-        .unique_point
-        .and_then(|known| finite(distance::relative(&point.factors, known)));
+    judgement.distance =
+        known.unique_point.and_then(|known| finite(distance::relative(&point.factors, known)));
     conclude(&point, &restored, size, known, tolerance, &mut judgement);
     if judgement.reason.is_empty() && judgement.finding != Finding::Solved {
         let rank = rank_over(problem, &truncated.spectra, tolerance.rank).unwrap_or(0);
-        judgement.reason = format!(
-            "rank {rank} at cut-off {:e} before truncation",
-            tolerance.rank
-        );
+        judgement.reason = format!("rank {rank} at cut-off {:e} before truncation", tolerance.rank);
     }
     Ok(judgement)
 }
@@ -230,11 +222,8 @@ fn conclude(
     let feasible = feasibility <= tolerance.feasibility;
     let restorable = restored_feasibility <= tolerance.feasibility;
     let Some((value, objective_tolerance)) = optimum else {
-        judgement.finding = if feasible || restorable {
-            Finding::Feasible
-        } else {
-            Finding::Infeasible
-        };
+        judgement.finding =
+            if feasible || restorable { Finding::Feasible } else { Finding::Infeasible };
         judgement.reason = residual_reason(feasible, restorable, feasibility, restored_feasibility);
         return;
     };
@@ -256,11 +245,7 @@ fn conclude(
     judgement.reason = match judgement.finding {
         Finding::Solved => String::new(),
         Finding::Suboptimal => {
-            let off = if feasible {
-                point.objective - value
-            } else {
-                restored.objective - value
-            };
+            let off = if feasible { point.objective - value } else { restored.objective - value };
             let side = if off < 0.0 { "below" } else { "above" };
             format!("the objective lies {:.2e} {side} the optimum", off.abs())
         }
@@ -323,12 +308,7 @@ impl Measured {
     fn of(problem: &Problem, factors: Vec<Factor>, orthant: Vec<f64>) -> Self {
         let view = View::of_factors(problem, &factors, &orthant);
         let (residual, objective) = (view.residual(problem), view.value(problem.cost()));
-        Measured {
-            factors,
-            orthant,
-            residual,
-            objective,
-        }
+        Measured { factors, orthant, residual, objective }
     }
 
     /// Refuses an objective below a certified optimum that the residual does not explain; see [`judge`].
@@ -338,34 +318,21 @@ impl Measured {
         };
         let contradiction = |allowance| {
             let value = self.objective;
-            Err(Contradiction {
-                by: Contradicted::ByPoint,
-                value,
-                optimum,
-                allowance,
-            })
+            Err(Contradiction { by: Contradicted::ByPoint, value, optimum, allowance })
         };
         let Some(y) = known.dual else {
             let residual =
                 norms::euclidean(&self.residual) / (1.0 + norms::euclidean(problem.rhs()));
             let allowance = ALARM_OBJECTIVE * (1.0 + optimum.abs());
             let alarm = residual <= ALARM_RESIDUAL && self.objective < optimum - allowance;
-            return if alarm {
-                contradiction(allowance)
-            } else {
-                Ok(())
-            };
+            return if alarm { contradiction(allowance) } else { Ok(()) };
         };
         let explained = dot2(y, &self.residual).abs();
         if self.objective >= optimum - explained {
             return Ok(());
         }
         let allowance = explained + self.rounding(problem, y, optimum);
-        if self.objective < optimum - allowance {
-            contradiction(allowance)
-        } else {
-            Ok(())
-        }
+        if self.objective < optimum - allowance { contradiction(allowance) } else { Ok(()) }
     }
 
     /// Bounds the rounding of `<C,X> - p* + y'(b - A(X))`.
@@ -384,12 +351,7 @@ impl Measured {
             let value = measure::scale(constraint, &norms, &self.orthant) + rhs.abs();
             size.add_product(multiplier.abs(), value);
         }
-        let width = self
-            .factors
-            .iter()
-            .map(|factor| factor.width)
-            .max()
-            .unwrap_or(1);
+        let width = self.factors.iter().map(|factor| factor.width).max().unwrap_or(1);
         (width + 64) as f64 * f64::EPSILON * size.value()
     }
 }
@@ -397,12 +359,9 @@ impl Measured {
 /// Refuses a rigorous lower bound above a certified optimum.
 fn check_bound(bound: Option<f64>, known: &Known<'_>) -> Result<(), Contradiction> {
     match (bound, known.optimum) {
-        (Some(value), KnownOptimum::Certified(optimum)) if value > optimum => Err(Contradiction {
-            by: Contradicted::ByBound,
-            value,
-            optimum,
-            allowance: 0.0,
-        }),
+        (Some(value), KnownOptimum::Certified(optimum)) if value > optimum => {
+            Err(Contradiction { by: Contradicted::ByBound, value, optimum, allowance: 0.0 })
+        }
         _ => Ok(()),
     }
 }

@@ -67,10 +67,9 @@ impl<'a> View<'a> {
             .zip(visits)
             .map(|(block, visits)| match block {
                 BlockPoint::Factor(factor) => hold_factor(factor, visits),
-                BlockPoint::Dense(matrix) => Held {
-                    factor: None,
-                    packed: Some(Packed::of_dense(matrix)),
-                },
+                BlockPoint::Dense(matrix) => {
+                    Held { factor: None, packed: Some(Packed::of_dense(matrix)) }
+                }
             })
             .collect();
         View { blocks, orthant }
@@ -102,9 +101,7 @@ impl<'a> View<'a> {
     /// Computes b - A(X).
     pub fn residual(&self, problem: &Problem) -> Vec<f64> {
         let pairs = problem.constraints().iter().zip(problem.rhs());
-        pairs
-            .map(|(constraint, rhs)| rhs - self.value(constraint))
-            .collect()
+        pairs.map(|(constraint, rhs)| rhs - self.value(constraint)).collect()
     }
 }
 
@@ -124,19 +121,12 @@ fn sparse_visits(problem: &Problem) -> Vec<usize> {
 fn hold_factor(factor: &Factor, visits: usize) -> Held<'_> {
     let triangle = factor.order.saturating_mul(factor.order + 1) / 2;
     let packed = (factor.width > 1 && visits >= triangle).then(|| Packed::of_factor(factor));
-    Held {
-        factor: Some(factor),
-        packed,
-    }
+    Held { factor: Some(factor), packed }
 }
 
 fn row_dot(factor: &Factor, i: usize, j: usize) -> f64 {
     let (x, y) = (factor.row(i), factor.row(j));
-    if factor.width <= COMPENSATED_WIDTH {
-        dot2(x, y)
-    } else {
-        plain_dot(x, y)
-    }
+    if factor.width <= COMPENSATED_WIDTH { dot2(x, y) } else { plain_dot(x, y) }
 }
 
 impl Held<'_> {
@@ -211,11 +201,7 @@ pub(super) fn scale(functional: &Functional, row_norms: &[Vec<f64>], orthant: &[
             }
         }
     }
-    sum + functional
-        .orthant
-        .iter()
-        .map(|(i, value)| value.abs() * orthant[i])
-        .sum::<f64>()
+    sum + functional.orthant.iter().map(|(i, value)| value.abs() * orthant[i]).sum::<f64>()
 }
 
 /// Computes the Euclidean norms of the rows of each factor.
@@ -223,9 +209,7 @@ pub(super) fn row_norms(factors: &[Factor]) -> Vec<Vec<f64>> {
     factors
         .iter()
         .map(|factor| {
-            (0..factor.order)
-                .map(|i| plain_dot(factor.row(i), factor.row(i)).sqrt())
-                .collect()
+            (0..factor.order).map(|i| plain_dot(factor.row(i), factor.row(i)).sqrt()).collect()
         })
         .collect()
 }

@@ -44,11 +44,7 @@ pub struct Tolerance {
 
 impl Default for Tolerance {
     fn default() -> Self {
-        Tolerance {
-            feasibility: 1e-6,
-            objective: 1e-6,
-            rank: 1e-6,
-        }
+        Tolerance { feasibility: 1e-6, objective: 1e-6, rank: 1e-6 }
     }
 }
 

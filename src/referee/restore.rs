@@ -62,23 +62,14 @@ impl Stacked {
     fn plus(&self, scale: f64, step: &Stacked) -> Stacked {
         let mut out = self.clone();
         for (target, source) in out.factors.iter_mut().zip(&step.factors) {
-            target
-                .data
-                .iter_mut()
-                .zip(&source.data)
-                .for_each(|(t, s)| *t += scale * s);
+            target.data.iter_mut().zip(&source.data).for_each(|(t, s)| *t += scale * s);
         }
-        out.roots
-            .iter_mut()
-            .zip(&step.roots)
-            .for_each(|(t, s)| *t += scale * s);
+        out.roots.iter_mut().zip(&step.roots).for_each(|(t, s)| *t += scale * s);
         out
     }
 
     fn clear(&mut self) {
-        self.factors
-            .iter_mut()
-            .for_each(|factor| factor.data.fill(0.0));
+        self.factors.iter_mut().for_each(|factor| factor.data.fill(0.0));
         self.roots.fill(0.0);
     }
 }
@@ -117,16 +108,8 @@ pub(super) fn restore(
             break;
         }
     }
-    let orthant = if moved {
-        point.squares()
-    } else {
-        orthant.to_vec()
-    };
-    Restored {
-        factors: point.factors,
-        orthant,
-        residual,
-    }
+    let orthant = if moved { point.squares() } else { orthant.to_vec() };
+    Restored { factors: point.factors, orthant, residual }
 }
 
 /// Computes the step J'u with (J J')u = `residual` by conjugate gradients.
@@ -185,11 +168,7 @@ fn application_cost(problem: &Problem, point: &Stacked) -> u64 {
             let stored = match coefficient {
                 Coefficient::Sparse(matrix) => 2 * matrix.stored(),
                 Coefficient::Outer(sum) => {
-                    2 * sum
-                        .terms
-                        .iter()
-                        .map(|term| term.vector.len())
-                        .sum::<usize>()
+                    2 * sum.terms.iter().map(|term| term.vector.len()).sum::<usize>()
                 }
             };
             cost += 2 * stored as u64 * width;
@@ -220,10 +199,7 @@ fn adjoint(problem: &Problem, point: &Stacked, u: &[f64], out: &mut Stacked) {
 /// Adds `weight * A R` to `out`.
 fn add_product(coefficient: &Coefficient, weight: f64, factor: &Factor, out: &mut Factor) {
     let mut add = |to: usize, scale: f64, from: &[f64]| {
-        out.row_mut(to)
-            .iter_mut()
-            .zip(from)
-            .for_each(|(target, value)| *target += scale * value);
+        out.row_mut(to).iter_mut().zip(from).for_each(|(target, value)| *target += scale * value);
     };
     match coefficient {
         Coefficient::Sparse(matrix) => {
@@ -250,10 +226,7 @@ fn add_product(coefficient: &Coefficient, weight: f64, factor: &Factor, out: &mu
 fn image_of(vector: &crate::problem::SparseVector, factor: &Factor, image: &mut [f64]) {
     image.fill(0.0);
     for (i, a) in vector.iter() {
-        image
-            .iter_mut()
-            .zip(factor.row(i))
-            .for_each(|(sum, value)| *sum += a * value);
+        image.iter_mut().zip(factor.row(i)).for_each(|(sum, value)| *sum += a * value);
     }
 }
 
@@ -272,11 +245,8 @@ fn derivative(constraint: &Functional, point: &Stacked, step: &Stacked) -> f64 {
             Coefficient::Sparse(matrix) => {
                 for (i, j, value) in matrix.iter() {
                     let one_way = plain_dot(factor.row(i), change.row(j));
-                    let other_way = if i == j {
-                        0.0
-                    } else {
-                        plain_dot(factor.row(j), change.row(i))
-                    };
+                    let other_way =
+                        if i == j { 0.0 } else { plain_dot(factor.row(j), change.row(i)) };
                     sum += value * (one_way + other_way);
                 }
             }

@@ -11,11 +11,7 @@ pub(super) const LARGEST: f64 = 1e100;
 pub(super) fn check(problem: &Problem, answer: &Answer) -> Result<(), String> {
     let (blocks, expected) = (&answer.point.blocks, problem.blocks());
     if blocks.len() != expected.len() {
-        return Err(format!(
-            "{} blocks where the problem has {}",
-            blocks.len(),
-            expected.len()
-        ));
+        return Err(format!("{} blocks where the problem has {}", blocks.len(), expected.len()));
     }
     for (index, (point, block)) in blocks.iter().zip(expected).enumerate() {
         let place = || format!("block {}", index + 1);
@@ -53,9 +49,7 @@ pub(super) fn check(problem: &Problem, answer: &Answer) -> Result<(), String> {
     }
     if answer.point.orthant.len() != problem.orthant() {
         let (found, expected) = (answer.point.orthant.len(), problem.orthant());
-        return Err(format!(
-            "{found} nonnegative scalars where the problem has {expected}"
-        ));
+        return Err(format!("{found} nonnegative scalars where the problem has {expected}"));
     }
     check_numbers(&answer.point.orthant, || "the nonnegative part".to_owned())?;
     if let Some(multipliers) = &answer.multipliers {
@@ -69,15 +63,11 @@ pub(super) fn check(problem: &Problem, answer: &Answer) -> Result<(), String> {
 }
 
 fn check_numbers(numbers: &[f64], place: impl Fn() -> String) -> Result<(), String> {
-    match numbers
-        .iter()
-        .find(|value| value.is_nan() || value.abs() > LARGEST)
-    {
+    match numbers.iter().find(|value| value.is_nan() || value.abs() > LARGEST) {
         None => Ok(()),
-        Some(value) if value.is_finite() => Err(format!(
-            "{} holds {value:e}, beyond {LARGEST:e} in magnitude",
-            place()
-        )),
+        Some(value) if value.is_finite() => {
+            Err(format!("{} holds {value:e}, beyond {LARGEST:e} in magnitude", place()))
+        }
         Some(value) => Err(format!("{} holds {value}", place())),
     }
 }

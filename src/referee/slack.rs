@@ -41,21 +41,14 @@ struct Term {
 pub(super) fn block(problem: &Problem, y: &[f64], block: usize) -> Option<SlackBlock> {
     let order = problem.blocks()[block].order;
     let parts: Vec<(&Coefficient, f64)> = std::iter::once((problem.cost(), 1.0))
-        .chain(
-            problem
-                .constraints()
-                .iter()
-                .zip(y.iter().map(|value| -value)),
-        )
+        .chain(problem.constraints().iter().zip(y.iter().map(|value| -value)))
         .filter(|(_, multiplier)| *multiplier != 0.0)
         .filter_map(|(functional, multiplier)| {
             functional.part(block).map(|part| (part, multiplier))
         })
         .collect();
-    let terms: usize = parts
-        .iter()
-        .map(|(part, _)| term_count(part))
-        .fold(0, usize::saturating_add);
+    let terms: usize =
+        parts.iter().map(|(part, _)| term_count(part)).fold(0, usize::saturating_add);
     if order <= FULL_ORDER && terms >= order * (order + 1) / 2 {
         Some(accumulate(order, &parts))
     } else if terms <= MOST_TERMS {
@@ -70,10 +63,7 @@ fn term_count(coefficient: &Coefficient) -> usize {
         Coefficient::Sparse(matrix) => matrix.stored(),
         Coefficient::Outer(sum) => {
             let pairs = |n: usize| n.saturating_mul(n + 1) / 2;
-            sum.terms
-                .iter()
-                .map(|term| pairs(term.vector.len()))
-                .fold(0, usize::saturating_add)
+            sum.terms.iter().map(|term| pairs(term.vector.len())).fold(0, usize::saturating_add)
         }
     }
 }
@@ -82,9 +72,7 @@ fn term_count(coefficient: &Coefficient) -> usize {
 /// within `error` of `value`.
 fn visit_terms(coefficient: &Coefficient, mut visit: impl FnMut(usize, usize, f64, f64)) {
     let sparse = |matrix: &SparseSymmetric, visit: &mut dyn FnMut(usize, usize, f64, f64)| {
-        matrix
-            .iter()
-            .for_each(|(i, j, value)| visit(i, j, value, 0.0));
+        matrix.iter().for_each(|(i, j, value)| visit(i, j, value, 0.0));
     };
     match coefficient {
         Coefficient::Sparse(matrix) => sparse(matrix, &mut visit),
@@ -116,12 +104,7 @@ fn product_error(value: f64, first: f64, second: f64) -> f64 {
 fn close(row: usize, column: usize, sum: &Accumulator, slack: f64) -> Entry {
     // The slack is a sum of rounded nonnegative numbers: one part in 2^20 covers its rounding.
     let radius = (sum.error_bound() + slack) * (1.0 + 1.0 / 1048576.0);
-    Entry {
-        row,
-        column,
-        value: sum.value(),
-        radius,
-    }
+    Entry { row, column, value: sum.value(), radius }
 }
 
 fn accumulate(order: usize, parts: &[(&Coefficient, f64)]) -> SlackBlock {
@@ -169,12 +152,7 @@ fn gather(order: usize, parts: &[(&Coefficient, f64)]) -> SlackBlock {
             slack += term.slack;
         }
         let key = group[0].key;
-        entries.push(close(
-            (key & 0xffff_ffff) as usize,
-            (key >> 32) as usize,
-            &sum,
-            slack,
-        ));
+        entries.push(close((key & 0xffff_ffff) as usize, (key >> 32) as usize, &sum, slack));
     }
     SlackBlock { order, entries }
 }
@@ -190,7 +168,5 @@ pub(super) fn orthant(problem: &Problem, y: &[f64]) -> Vec<(f64, f64)> {
             sums[i].add_product(value, -multiplier);
         }
     }
-    sums.iter()
-        .map(|sum| (sum.value(), sum.error_bound()))
-        .collect()
+    sums.iter().map(|sum| (sum.value(), sum.error_bound())).collect()
 }

@@ -63,12 +63,7 @@ fn symmetrised(matrix: &Mat<f64>) -> Mat<f64> {
 fn truncate_dense(matrix: &Mat<f64>, rank: usize) -> Result<(Factor, Vec<f64>), String> {
     let spectrum = spectral::decompose(matrix)?;
     let order = matrix.nrows();
-    let width = spectrum
-        .values
-        .iter()
-        .take(rank)
-        .filter(|value| **value > 0.0)
-        .count();
+    let width = spectrum.values.iter().take(rank).filter(|value| **value > 0.0).count();
     let mut factor = Factor::zeros(order, width);
     for column in 0..width {
         let root = spectrum.values[column].sqrt();
@@ -84,10 +79,7 @@ fn truncate_factor(factor: &Factor, rank: usize) -> Result<(Factor, Vec<f64>), S
     if width > order {
         let product = Mat::from_fn(order, order, |i, j| plain_dot(factor.row(i), factor.row(j)));
         let (truncated, values) = truncate_dense(&product, rank)?;
-        return Ok((
-            truncated,
-            values.into_iter().map(|value| value.max(0.0)).collect(),
-        ));
+        return Ok((truncated, values.into_iter().map(|value| value.max(0.0)).collect()));
     }
     let spectrum = spectral::decompose(&gram(factor))?;
     // V'V is PSD: what rounding leaves below zero is no eigenvalue of V V'.
@@ -98,9 +90,7 @@ fn truncate_factor(factor: &Factor, rank: usize) -> Result<(Factor, Vec<f64>), S
     let mut truncated = Factor::zeros(order, rank);
     for i in 0..order {
         for column in 0..rank {
-            let sum = (0..width)
-                .map(|k| factor.row(i)[k] * spectrum.vectors[(k, column)])
-                .sum();
+            let sum = (0..width).map(|k| factor.row(i)[k] * spectrum.vectors[(k, column)]).sum();
             truncated.row_mut(i)[column] = sum;
         }
     }
@@ -134,19 +124,12 @@ pub(super) fn rank_at(spectrum: &[f64], cut: f64) -> usize {
     if largest <= 0.0 {
         return 0;
     }
-    spectrum
-        .iter()
-        .filter(|value| **value > cut * largest)
-        .count()
+    spectrum.iter().filter(|value| **value > cut * largest).count()
 }
 
 /// Computes the share of the nonnegative spectrum that lies behind the first `rank` values.
 pub(super) fn tail_share(spectrum: &[f64], rank: usize) -> f64 {
     let positive = |values: &[f64]| values.iter().map(|value| value.max(0.0)).sum::<f64>();
     let total = positive(spectrum);
-    if total <= 0.0 {
-        0.0
-    } else {
-        positive(&spectrum[rank.min(spectrum.len())..]) / total
-    }
+    if total <= 0.0 { 0.0 } else { positive(&spectrum[rank.min(spectrum.len())..]) / total }
 }

@@ -1,8 +1,6 @@
 //! Newton system of one iteration: right sides, multipliers, directions and step lengths.
 
-use super::iterate::{
-    BlockState, add_product_by_entries, add_scaled, inner, slack_times_dense,
-};
+use super::iterate::{BlockState, add_product_by_entries, add_scaled, inner, slack_times_dense};
 use super::schur::SchurPlan;
 use crate::budget::Effort;
 use crate::linalg::cholesky;
@@ -110,7 +108,8 @@ impl State {
         for (block, state) in self.op.blocks.iter().zip(&mut self.blocks) {
             fill_full(block, &self.y, 1.0, &mut state.rd, &mut state.outer_scratch);
             add_scaled(-1.0, &state.s, &mut state.rd);
-            if let (Some(weight), SlackStore::Dense(matrix)) = (&state.weight, &mut state.rd.store) {
+            if let (Some(weight), SlackStore::Dense(matrix)) = (&state.weight, &mut state.rd.store)
+            {
                 dense::axpy_matrix(1.0, weight.as_ref(), matrix.as_mut());
             }
         }

@@ -146,12 +146,12 @@ impl BlockPlan {
                 self.rows[start..end].iter().chain(&self.columns[start..end]).copied().collect();
             support.sort_unstable();
             support.dedup();
-            let (own, later, s) = ((end - start) as f64, (total - start) as f64, support.len() as f64);
+            let (own, later, s) =
+                ((end - start) as f64, (total - start) as f64, support.len() as f64);
             let size = n as f64;
             let pairs = PAIR_NS * own * later;
             let gather = GATHER_NS * later;
-            let thin =
-                CALL_NS + 2.0 * AXPY_NS * own * size + PRODUCT_NS * size * size * s + gather;
+            let thin = CALL_NS + 2.0 * AXPY_NS * own * size + PRODUCT_NS * size * size * s + gather;
             let full = 2.0 * CALL_NS + 2.0 * PRODUCT_NS * size.powi(3) + gather + size * size;
             let (formation, work) = if pairs <= thin && pairs <= full {
                 (Formation::Pairs, 8.0 * own * later)

@@ -387,13 +387,8 @@ impl Run<'_> {
             }
         }
         if figures.primal < 0.0 {
-            let image: f64 = state
-                .b
-                .iter()
-                .zip(&state.rp)
-                .map(|(b, r)| (b - r) * (b - r))
-                .sum::<f64>()
-                .sqrt();
+            let image: f64 =
+                state.b.iter().zip(&state.rp).map(|(b, r)| (b - r) * (b - r)).sum::<f64>().sqrt();
             if image / -figures.primal <= INFEASIBLE {
                 return Some(Outcome::DualInfeasible);
             }

@@ -161,7 +161,8 @@ impl Hook for TailWeight {
             tail: Some(ratio),
         });
         let tolerance = self.params.tolerance;
-        if started && ratio < tolerance && residuals.primal < tolerance && residuals.gap < tolerance {
+        if started && ratio < tolerance && residuals.primal < tolerance && residuals.gap < tolerance
+        {
             return Steering::Stop;
         }
         if self.info.steered >= self.params.patience {

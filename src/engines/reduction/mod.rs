@@ -195,7 +195,8 @@ pub fn reduce(
         meter.effort.flops += 4 * m * k * k.min(m);
         meter.effort.factorisations += 1;
         meter.effort.inner_steps += 1;
-        let space = null_space(system.as_ref(), params.null).map_err(|e| Halt::Failed(e.to_string()))?;
+        let space =
+            null_space(system.as_ref(), params.null).map_err(|e| Halt::Failed(e.to_string()))?;
         info.free_directions = space.basis.ncols();
         if info.free_directions == 0 {
             return Ok(info);
@@ -417,6 +418,7 @@ pub fn uniqueness(
         kernel.parts.push(Part { basis, values: vec![1.0; null] });
     }
     let system = face_system(problem, op, &kernel);
-    let space = null_space(system.as_ref(), params.null).map_err(|e| Halt::Failed(e.to_string()))?;
+    let space =
+        null_space(system.as_ref(), params.null).map_err(|e| Halt::Failed(e.to_string()))?;
     Ok(UniquenessTest { kernel: kernel.total_rank(), unseen: space.basis.ncols() })
 }

@@ -53,9 +53,7 @@ impl<'a> Reader<'a> {
 
     /// Reads a positive count that stands first on its line, with any text after it.
     fn read_count(&mut self, what: &str) -> Result<usize, FormatError> {
-        let line = self
-            .next_line()
-            .ok_or_else(|| self.source.end_error(what))?;
+        let line = self.next_line().ok_or_else(|| self.source.end_error(what))?;
         let token = tokens(line).next().expect("the line has a token");
         let count =
             leading_integer(token.1).ok_or_else(|| self.error(token, Kind::Unexpected, what))?;
@@ -84,13 +82,9 @@ impl<'a> Reader<'a> {
         let mut blocks = Vec::with_capacity(count);
         let (mut psd, mut orthant, mut total) = (0, 0, 0usize);
         while blocks.len() < count {
-            let expected = format!(
-                "the size of block {} of {count}, a whole number but 0",
-                blocks.len() + 1
-            );
-            let line = self
-                .next_line()
-                .ok_or_else(|| self.source.end_error(&expected))?;
+            let expected =
+                format!("the size of block {} of {count}, a whole number but 0", blocks.len() + 1);
+            let line = self.next_line().ok_or_else(|| self.source.end_error(&expected))?;
             for token in tokens(line).take(count - blocks.len()) {
                 let expected = format!(
                     "the size of block {} of {count}, a whole number but 0",
@@ -111,10 +105,7 @@ impl<'a> Reader<'a> {
                     blocks.push(FileBlock::Psd { block: psd, order });
                     psd += 1;
                 } else {
-                    blocks.push(FileBlock::Nonnegative {
-                        first: orthant,
-                        count: order,
-                    });
+                    blocks.push(FileBlock::Nonnegative { first: orthant, count: order });
                     orthant += order;
                 }
             }
@@ -126,9 +117,7 @@ impl<'a> Reader<'a> {
         let mut rhs = Vec::with_capacity(count);
         while rhs.len() < count {
             let expected = format!("number {} of the {count} of the vector c", rhs.len() + 1);
-            let line = self
-                .next_line()
-                .ok_or_else(|| self.source.end_error(&expected))?;
+            let line = self.next_line().ok_or_else(|| self.source.end_error(&expected))?;
             for token in tokens(line) {
                 if rhs.len() == count {
                     let expected =
@@ -160,18 +149,10 @@ impl<'a> Reader<'a> {
             entries.push(self.read_entry(line, constraints, blocks)?);
         }
         if entries.is_empty() {
-            return Err(self
-                .source
-                .end_error("an entry: matrix, block, row, column and value"));
+            return Err(self.source.end_error("an entry: matrix, block, row, column and value"));
         }
         entries.sort_by_key(|entry| {
-            (
-                entry.matrix,
-                entry.block,
-                entry.column,
-                entry.row,
-                entry.offset,
-            )
+            (entry.matrix, entry.block, entry.column, entry.row, entry.offset)
         });
         let repeated = entries
             .windows(2)
@@ -182,10 +163,7 @@ impl<'a> Reader<'a> {
             .map(|pair| pair[1])
             .min_by_key(|entry| entry.offset);
         if let Some(entry) = repeated {
-            let line = self.source.text[entry.offset..]
-                .lines()
-                .next()
-                .unwrap_or_default();
+            let line = self.source.text[entry.offset..].lines().next().unwrap_or_default();
             let expected = "a position that no earlier line gives";
             return Err(self.error((entry.offset, line), Kind::Duplicate, expected));
         }
@@ -201,9 +179,7 @@ impl<'a> Reader<'a> {
         let mut parts = tokens(line);
         let mut next = |expected: &str| {
             let end = line.0 + line.1.trim_end().len();
-            parts
-                .next()
-                .ok_or_else(|| self.source.error(end, 0, Kind::EndOfLine, expected))
+            parts.next().ok_or_else(|| self.source.error(end, 0, Kind::EndOfLine, expected))
         };
         let expected = format!("a matrix number from 0 to {constraints}");
         let token = next(&expected)?;
@@ -239,14 +215,7 @@ impl<'a> Reader<'a> {
                 "the end of the line after five numbers",
             ));
         }
-        Ok(Entry {
-            matrix,
-            block,
-            row: row - 1,
-            column: column - 1,
-            value,
-            offset,
-        })
+        Ok(Entry { matrix, block, row: row - 1, column: column - 1, value, offset })
     }
 
     fn index(
@@ -274,21 +243,13 @@ fn tokens<'a>(line: Token<'a>) -> impl Iterator<Item = Token<'a>> {
     let (start, text) = line;
     text.split(|c: char| c.is_whitespace() || matches!(c, ',' | '(' | ')' | '{' | '}'))
         .filter(|token| !token.is_empty())
-        .map(move |token| {
-            (
-                start + (token.as_ptr() as usize - text.as_ptr() as usize),
-                token,
-            )
-        })
+        .map(move |token| (start + (token.as_ptr() as usize - text.as_ptr() as usize), token))
 }
 
 /// Reads the whole number a token starts with; a sign such as `=` may follow it, a letter, digit or point may not.
 fn leading_integer(token: &str) -> Option<i64> {
     let unsigned = token.strip_prefix(['+', '-']).unwrap_or(token);
-    let digits = unsigned.len()
-        - unsigned
-            .trim_start_matches(|c: char| c.is_ascii_digit())
-            .len();
+    let digits = unsigned.len() - unsigned.trim_start_matches(|c: char| c.is_ascii_digit()).len();
     let rest = &unsigned[digits..];
     if digits == 0
         || rest.starts_with(|c: char| c.is_alphanumeric() || matches!(c, '.' | '+' | '-'))
@@ -297,10 +258,6 @@ fn leading_integer(token: &str) -> Option<i64> {
     }
     let number = &token[..token.len() - rest.len()];
     // Saturates: a number this long is refused as too large in its place.
-    let limit = if token.starts_with('-') {
-        i64::MIN
-    } else {
-        i64::MAX
-    };
+    let limit = if token.starts_with('-') { i64::MIN } else { i64::MAX };
     Some(number.parse().unwrap_or(limit))
 }

@@ -95,11 +95,7 @@ pub fn smallest_eigenpair<A: LinearOperator + ?Sized>(
 ) -> Extreme {
     let n = op.order();
     assert!(n > 0, "eigenpair of an operator of order 0");
-    assert!(
-        start.is_empty() || start.len() == n,
-        "start of length {} for order {n}",
-        start.len()
-    );
+    assert!(start.is_empty() || start.len() == n, "start of length {} for order {n}", start.len());
     let left = n - fill_deflated(params.deflate, n, &mut ws.deflated);
     assert!(left > 0, "the deflated vectors leave nothing of order {n}");
     Run::new(op, params, left, ws).run(start)
@@ -279,9 +275,8 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
             let closed = remainder <= 8.0 * f64::EPSILON * self.norm_estimate || remainder == 0.0;
             if closed {
                 // The space is invariant, but eigenvalues may lie outside it: go on in a new direction.
-                self.believe_from = self
-                    .believe_from
-                    .max((self.steps + LEAST_STEPS).min(self.left));
+                self.believe_from =
+                    self.believe_from.max((self.steps + LEAST_STEPS).min(self.left));
                 if !self.place_random(self.size) {
                     return if self.solve_projected() {
                         Expansion::Candidate(0.0)
@@ -377,10 +372,7 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
             Default::default(),
         );
         let finite = values.iter().all(|v| v.is_finite());
-        self.norm_estimate = self
-            .norm_estimate
-            .max(values[0].abs())
-            .max(values[k - 1].abs());
+        self.norm_estimate = self.norm_estimate.max(values[0].abs()).max(values[k - 1].abs());
         outcome.is_ok() && finite
     }
 
@@ -414,11 +406,7 @@ impl<'a, 'p, A: LinearOperator + ?Sized> Run<'a, 'p, A> {
                 MatMut::from_column_major_slice_mut(&mut block[..rows * keep], rows, keep);
             let part = basis.as_ref().subrows(first, rows);
             gemm(product.as_mut(), Accumulate::Replace, 1.0, part, weights);
-            basis
-                .as_mut()
-                .subrows_mut(first, rows)
-                .subcols_mut(0, keep)
-                .copy_from(product);
+            basis.as_mut().subrows_mut(first, rows).subcols_mut(0, keep).copy_from(product);
         }
         self.ws.small = block;
         self.ws.basis.copy_within(k * n..(k + 1) * n, keep * n);

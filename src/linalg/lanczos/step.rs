@@ -23,11 +23,7 @@ pub struct StepParams {
 
 impl Default for StepParams {
     fn default() -> Self {
-        Self {
-            tolerance: 1e-3,
-            max_steps: 0,
-            seed: 0,
-        }
+        Self { tolerance: 1e-3, max_steps: 0, seed: 0 }
     }
 }
 
@@ -57,19 +53,10 @@ pub fn step_bound<A: LinearOperator + ?Sized>(
 ) -> StepBound {
     let n = op.order();
     if n == 0 {
-        return StepBound {
-            upper: f64::NEG_INFINITY,
-            ritz: f64::NEG_INFINITY,
-            steps: 0,
-        };
+        return StepBound { upper: f64::NEG_INFINITY, ritz: f64::NEG_INFINITY, steps: 0 };
     }
     let rule = n.min(30).max((n as f64).sqrt().round() as usize);
-    let limit = if params.max_steps == 0 {
-        rule
-    } else {
-        params.max_steps
-    }
-    .min(n);
+    let limit = if params.max_steps == 0 { rule } else { params.max_steps }.min(n);
     ws.basis.resize((limit + 1) * n, 0.0);
     ws.small.resize(5 * limit, 0.0);
     let (diagonal, rest) = ws.small.split_at_mut(limit);
@@ -98,11 +85,7 @@ pub fn step_bound<A: LinearOperator + ?Sized>(
             let (ritz, delta) = safe_margin(&diagonal[..steps], &off[..steps], last, work);
             let done = delta <= params.tolerance * ritz.abs().max(1.0);
             if done || closed || steps == limit || !delta.is_finite() {
-                return StepBound {
-                    upper: ritz + delta,
-                    ritz,
-                    steps,
-                };
+                return StepBound { upper: ritz + delta, ritz, steps };
             }
         }
         scale(off[j].recip(), next);
@@ -141,16 +124,10 @@ fn safe_margin(diagonal: &[f64], off: &[f64], last_off: f64, work: &mut [f64]) -
     if !eigen_with_last_row(values, offs, lasts) {
         return (f64::NAN, f64::NAN);
     }
-    let first = (0..k)
-        .max_by(|&a, &b| values[a].total_cmp(&values[b]))
-        .unwrap_or(0);
-    let second = (0..k)
-        .filter(|&i| i != first)
-        .max_by(|&a, &b| values[a].total_cmp(&values[b]));
+    let first = (0..k).max_by(|&a, &b| values[a].total_cmp(&values[b])).unwrap_or(0);
+    let second = (0..k).filter(|&i| i != first).max_by(|&a, &b| values[a].total_cmp(&values[b]));
     let residual = |i: usize| (last_off * lasts[i]).abs();
-    let gap = second
-        .map_or(0.0, |i| values[first] - values[i] - residual(i))
-        .max(f64::EPSILON);
+    let gap = second.map_or(0.0, |i| values[first] - values[i] - residual(i)).max(f64::EPSILON);
     let rho = residual(first);
     (values[first], rho.min(rho * rho / gap))
 }

@@ -14,11 +14,7 @@ fn positive(n: usize) -> Vec<(&'static str, Mat<f64>)> {
 }
 
 fn lower(l: &Mat<f64>) -> Mat<f64> {
-    Mat::from_fn(
-        l.nrows(),
-        l.ncols(),
-        |i, j| if i < j { 0.0 } else { l[(i, j)] },
-    )
+    Mat::from_fn(l.nrows(), l.ncols(), |i, j| if i < j { 0.0 } else { l[(i, j)] })
 }
 
 #[test]
@@ -36,12 +32,7 @@ fn factors_reproduce_the_matrix_and_leave_the_upper_triangle_alone() {
             }
             let l = lower(&l);
             let again = product(l.as_ref(), l.transpose());
-            assert_ratio(
-                difference(again.as_ref(), a.as_ref()),
-                n,
-                frobenius(a.as_ref()),
-                name,
-            );
+            assert_ratio(difference(again.as_ref(), a.as_ref()), n, frobenius(a.as_ref()), name);
         }
     }
 }
@@ -64,12 +55,7 @@ fn solves_are_backward_stable() {
             let v = Mat::from_fn(n, 1, |i, _| v[i]);
             let image = product(a.as_ref(), v.as_ref());
             let norm = frobenius(a.as_ref()) * frobenius(v.as_ref());
-            assert_ratio(
-                difference(image.as_ref(), b.as_ref().subcols(0, 1)),
-                n,
-                norm,
-                name,
-            );
+            assert_ratio(difference(image.as_ref(), b.as_ref().subcols(0, 1)), n, norm, name);
         }
     }
 }
@@ -133,12 +119,7 @@ fn inverses_are_symmetric_and_accurate() {
             }
             let unit = product(a.as_ref(), inverse.as_ref());
             let norm = frobenius(a.as_ref()) * frobenius(inverse.as_ref());
-            assert_ratio(
-                difference(unit.as_ref(), Mat::identity(n, n).as_ref()),
-                n,
-                norm,
-                name,
-            );
+            assert_ratio(difference(unit.as_ref(), Mat::identity(n, n).as_ref()), n, norm, name);
         }
     }
 }
@@ -174,10 +155,7 @@ fn the_first_pivot_that_fails_is_named() {
                 a[(bad, bad)] = value;
                 assert_eq!(
                     factor_in_place(a.as_mut(), &mut ws),
-                    Err(NotPositive {
-                        index: bad,
-                        order: n
-                    }),
+                    Err(NotPositive { index: bad, order: n }),
                     "{value}"
                 );
             }
@@ -185,10 +163,7 @@ fn the_first_pivot_that_fails_is_named() {
     }
     // The leading minors are 1 and 1 - 4 < 0.
     let mut a = Mat::from_fn(2, 2, |i, j| if i == j { 1.0 } else { 2.0 });
-    assert_eq!(
-        factor_in_place(a.as_mut(), &mut ws),
-        Err(NotPositive { index: 1, order: 2 })
-    );
+    assert_eq!(factor_in_place(a.as_mut(), &mut ws), Err(NotPositive { index: 1, order: 2 }));
 }
 
 #[test]

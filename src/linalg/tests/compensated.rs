@@ -14,17 +14,10 @@ fn fixed(x: f64) -> BigInt {
     let bits = x.to_bits();
     let field = ((bits >> 52) & 0x7ff) as i32;
     let fraction = bits & ((1 << 52) - 1);
-    let (mantissa, exponent) = if field == 0 {
-        (fraction, -1074)
-    } else {
-        (fraction | 1 << 52, field - 1075)
-    };
+    let (mantissa, exponent) =
+        if field == 0 { (fraction, -1074) } else { (fraction | 1 << 52, field - 1075) };
     let magnitude = BigInt::from(mantissa) << (exponent + POINT);
-    if x.is_sign_negative() {
-        -magnitude
-    } else {
-        magnitude
-    }
+    if x.is_sign_negative() { -magnitude } else { magnitude }
 }
 
 /// x * y * 2^POINT as an integer.
@@ -64,11 +57,7 @@ fn ill_conditioned(n: usize, cancelled: i32, seed: u64) -> (Vec<f64>, Vec<f64>) 
         };
         x.push((noise[2 * n + i] + 1.5) * 2f64.powi(spread));
         let raw = noise[3 * n + i] * 2f64.powi(spread);
-        y.push(if i < half {
-            raw
-        } else {
-            (raw - rounded(&exact)) / x[i]
-        });
+        y.push(if i < half { raw } else { (raw - rounded(&exact)) / x[i] });
         exact += fixed_product(x[i], y[i]);
     }
     (x, y)
@@ -89,10 +78,7 @@ fn dot2_meets_its_bound_where_a_plain_sum_is_worthless() {
                     * (1.0 + 1e-9);
                 let result = dot2(&x, &y);
                 let error = rounded(&(fixed(result) - &exact)).abs();
-                assert!(
-                    error <= bound,
-                    "n {n}, {cancelled} bits: error {error:e} above {bound:e}"
-                );
+                assert!(error <= bound, "n {n}, {cancelled} bits: error {error:e} above {bound:e}");
                 let mut accumulator = Accumulator::new();
                 accumulator.add_dot(&x, &y);
                 assert_eq!(accumulator.value(), result);

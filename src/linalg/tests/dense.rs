@@ -8,10 +8,7 @@ use crate::linalg::{norms, packed, vector};
 fn vector_kernels_agree_with_plain_loops_at_every_length() {
     for n in 0..=200 {
         let data = random(n, 3, n as u64);
-        let (x, y) = (
-            dense::column(data.as_ref(), 0),
-            dense::column(data.as_ref(), 1),
-        );
+        let (x, y) = (dense::column(data.as_ref(), 0), dense::column(data.as_ref(), 1));
         let plain: f64 = (0..n).map(|i| x[i] * y[i]).sum();
         let magnitude: f64 = (0..n).map(|i| (x[i] * y[i]).abs()).sum();
         assert!(
@@ -21,10 +18,7 @@ fn vector_kernels_agree_with_plain_loops_at_every_length() {
         let mut z = y.to_vec();
         vector::axpy(-0.75, x, &mut z);
         for i in 0..n {
-            assert!(
-                (z[i] - (y[i] - 0.75 * x[i])).abs() <= 2.0 * f64::EPSILON,
-                "axpy {n}, {i}"
-            );
+            assert!((z[i] - (y[i] - 0.75 * x[i])).abs() <= 2.0 * f64::EPSILON, "axpy {n}, {i}");
         }
         let mut z = y.to_vec();
         vector::axpby(2.0, x, 0.5, &mut z);
@@ -45,10 +39,7 @@ fn vector_kernels_agree_with_plain_loops_at_every_length() {
         let squares: f64 = difference.iter().map(|d| d * d).sum();
         let near = |a: f64, b: f64| (a - b).abs() <= (n + 1) as f64 * f64::EPSILON * b.abs();
         assert!(near(vector::distance(x, y), squares.sqrt()), "distance {n}");
-        assert!(
-            near(vector::norm1(x), x.iter().map(|v| v.abs()).sum()),
-            "norm1 {n}"
-        );
+        assert!(near(vector::norm1(x), x.iter().map(|v| v.abs()).sum()), "norm1 {n}");
         assert!(
             (vector::sum(x) - x.iter().sum::<f64>()).abs()
                 <= n as f64 * f64::EPSILON * vector::norm1(x)
@@ -60,10 +51,7 @@ fn vector_kernels_agree_with_plain_loops_at_every_length() {
         );
         let mut unit = x.to_vec();
         let norm = vector::normalise(&mut unit);
-        assert!(
-            near(norm, x.iter().map(|v| v * v).sum::<f64>().sqrt()),
-            "norm {n}"
-        );
+        assert!(near(norm, x.iter().map(|v| v * v).sum::<f64>().sqrt()), "norm {n}");
         assert!(n == 0 || (vector::norm2(&unit) - 1.0).abs() <= (n + 4) as f64 * f64::EPSILON);
     }
 }
@@ -95,10 +83,7 @@ fn norms_survive_extreme_magnitudes_and_report_nan() {
             assert!(norms::max_abs(a.as_ref()).is_nan() && norms::frobenius(a.as_ref()).is_nan());
             assert!(norms::one_norm(a.as_ref()).is_nan());
             x[place] = f64::INFINITY;
-            assert_eq!(
-                (vector::norm_max(&x), vector::norm2(&x)),
-                (f64::INFINITY, f64::INFINITY)
-            );
+            assert_eq!((vector::norm_max(&x), vector::norm2(&x)), (f64::INFINITY, f64::INFINITY));
         }
     }
     assert_eq!(vector::norm2(&[0.0; 30]), 0.0);
@@ -116,25 +101,12 @@ fn matrix_norms_of_a_small_matrix_are_exact() {
 
 #[test]
 fn products_agree_with_plain_loops() {
-    for (m, n, k) in [
-        (1, 1, 1),
-        (2, 3, 5),
-        (17, 1, 9),
-        (50, 17, 3),
-        (33, 64, 120),
-        (5, 5, 0),
-    ] {
+    for (m, n, k) in [(1, 1, 1), (2, 3, 5), (17, 1, 9), (50, 17, 3), (33, 64, 120), (5, 5, 0)] {
         let (a, b, c) = (random(m, k, 1), random(k, n, 2), random(m, n, 3));
         let expected = product(a.as_ref(), b.as_ref());
         let norm = frobenius(a.as_ref()) * frobenius(b.as_ref());
         let mut replaced = Mat::from_fn(m, n, |_, _| f64::NAN);
-        dense::gemm(
-            replaced.as_mut(),
-            Accumulate::Replace,
-            2.0,
-            a.as_ref(),
-            b.as_ref(),
-        );
+        dense::gemm(replaced.as_mut(), Accumulate::Replace, 2.0, a.as_ref(), b.as_ref());
         let doubled = Mat::from_fn(m, n, |i, j| 2.0 * expected[(i, j)]);
         assert_ratio(
             difference(replaced.as_ref(), doubled.as_ref()),
@@ -143,13 +115,7 @@ fn products_agree_with_plain_loops() {
             "gemm replace",
         );
         let mut added = c.clone();
-        dense::gemm(
-            added.as_mut(),
-            Accumulate::Add,
-            -1.0,
-            a.as_ref(),
-            b.as_ref(),
-        );
+        dense::gemm(added.as_mut(), Accumulate::Add, -1.0, a.as_ref(), b.as_ref());
         let sum = Mat::from_fn(m, n, |i, j| c[(i, j)] - expected[(i, j)]);
         assert_ratio(
             difference(added.as_ref(), sum.as_ref()),
@@ -200,11 +166,7 @@ fn triangles_are_mirrored_and_averaged_across_tile_edges() {
         for j in 0..n {
             for i in 0..n {
                 assert_eq!(mirrored[(i, j)], a[(i.max(j), i.min(j))]);
-                let mean = if i == j {
-                    a[(i, i)]
-                } else {
-                    0.5 * (a[(i, j)] + a[(j, i)])
-                };
+                let mean = if i == j { a[(i, i)] } else { 0.5 * (a[(i, j)] + a[(j, i)]) };
                 assert_eq!(averaged[(i, j)], mean);
             }
         }
@@ -256,9 +218,7 @@ fn packed_indices_are_a_bijection() {
         assert_eq!(packed::packed_len(n), next);
         assert_eq!(packed::order_of_packed_len(next), Some(n));
     }
-    let valid: Vec<usize> = (0..30)
-        .filter(|&l| packed::order_of_packed_len(l).is_some())
-        .collect();
+    let valid: Vec<usize> = (0..30).filter(|&l| packed::order_of_packed_len(l).is_some()).collect();
     assert_eq!(valid, [0, 1, 3, 6, 10, 15, 21, 28]);
 }
 
@@ -270,17 +230,10 @@ fn packing_keeps_inner_products_and_is_undone() {
         let (mut p, mut q) = (vec![0.0; length], vec![0.0; length]);
         packed::svec(poison_upper(&a).as_ref(), &mut p);
         packed::svec(b.as_ref(), &mut q);
-        let inner: f64 = (0..n)
-            .flat_map(|i| (0..n).map(move |j| (i, j)))
-            .map(|e| a[e] * b[e])
-            .sum();
+        let inner: f64 =
+            (0..n).flat_map(|i| (0..n).map(move |j| (i, j))).map(|e| a[e] * b[e]).sum();
         let norm = frobenius(a.as_ref()) * frobenius(b.as_ref());
-        assert_ratio(
-            (vector::dot(&p, &q) - inner).abs(),
-            n,
-            norm,
-            "packed inner product",
-        );
+        assert_ratio((vector::dot(&p, &q) - inner).abs(), n, norm, "packed inner product");
         let mut back = Mat::zeros(n, n);
         packed::smat(&p, back.as_mut());
         for j in 0..n {

@@ -24,8 +24,7 @@ fn decompositions_are_backward_stable_on_all_spectra() {
                 assert_ratio((found - planted).abs(), n, norm, &what);
             }
             let full = eig.values().to_vec();
-            eig.decompose_values_only(poison_upper(&a).as_ref())
-                .unwrap();
+            eig.decompose_values_only(poison_upper(&a).as_ref()).unwrap();
             for (alone, with_vectors) in eig.values().iter().zip(&full) {
                 assert_ratio((alone - with_vectors).abs(), n, norm, &what);
             }
@@ -47,12 +46,7 @@ fn second_differences_have_their_known_eigenvalues() {
         eig.decompose(a.as_ref()).unwrap();
         for (k, value) in eig.values().iter().enumerate() {
             let angle = (k + 1) as f64 * std::f64::consts::PI / (2 * (n + 1)) as f64;
-            assert_ratio(
-                (value - 4.0 * angle.sin().powi(2)).abs(),
-                n,
-                4.0,
-                "second differences",
-            );
+            assert_ratio((value - 4.0 * angle.sin().powi(2)).abs(), n, 4.0, "second differences");
         }
     }
 }
@@ -73,12 +67,7 @@ fn wilkinson_matrix_shows_its_close_pair() {
         (top[0] - 10.746194182903).abs() < 1e-12 && (top[1] - 10.746194182903).abs() < 1e-12,
         "{top:?}"
     );
-    assert_ratio(
-        orthogonality_defect(eig.vectors()),
-        21,
-        1.0,
-        "vectors of the close pair",
-    );
+    assert_ratio(orthogonality_defect(eig.vectors()), 21, 1.0, "vectors of the close pair");
 }
 
 #[test]
@@ -93,19 +82,9 @@ fn extreme_magnitudes_are_scaled() {
             let mut eig = SymmetricEigen::new(n);
             eig.decompose(scaled.as_ref()).unwrap();
             for (found, base) in eig.values().iter().zip(reference.values()) {
-                assert_ratio(
-                    (found / factor - base).abs(),
-                    n,
-                    frobenius(a.as_ref()),
-                    "scaled",
-                );
+                assert_ratio((found / factor - base).abs(), n, frobenius(a.as_ref()), "scaled");
             }
-            assert_ratio(
-                orthogonality_defect(eig.vectors()),
-                n,
-                1.0,
-                "scaled vectors",
-            );
+            assert_ratio(orthogonality_defect(eig.vectors()), n, 1.0, "scaled vectors");
         }
     }
 }
@@ -117,11 +96,8 @@ fn entries_that_are_not_finite_are_located() {
             let mut a = random_symmetric(n, 1);
             a[(row, column)] = value;
             let mut eig = SymmetricEigen::new(n);
-            let EigenError::NonFinite {
-                row: r,
-                column: c,
-                value: v,
-            } = eig.decompose(a.as_ref()).unwrap_err()
+            let EigenError::NonFinite { row: r, column: c, value: v } =
+                eig.decompose(a.as_ref()).unwrap_err()
             else {
                 panic!("another error");
             };
@@ -135,8 +111,7 @@ fn entries_that_are_not_finite_are_located() {
 fn vectors_are_not_given_out_after_values_only() {
     let mut eig = SymmetricEigen::new(2);
     eig.decompose(Mat::identity(2, 2).as_ref()).unwrap();
-    eig.decompose_values_only(Mat::identity(2, 2).as_ref())
-        .unwrap();
+    eig.decompose_values_only(Mat::identity(2, 2).as_ref()).unwrap();
     eig.vectors();
 }
 
@@ -150,19 +125,11 @@ fn an_empty_matrix_has_an_empty_spectrum() {
 #[test]
 fn flop_conventions_are_as_documented() {
     assert_eq!(
-        (
-            flops::eigen(10),
-            flops::cholesky(30),
-            flops::inverse_from_factor(30)
-        ),
+        (flops::eigen(10), flops::cholesky(30), flops::inverse_from_factor(30)),
         (9_000, 9_000, 18_000)
     );
     assert_eq!(
-        (
-            flops::gemm(2, 3, 4),
-            flops::triangular_solve(10, 3),
-            flops::eigenvalues(30)
-        ),
+        (flops::gemm(2, 3, 4), flops::triangular_solve(10, 3), flops::eigenvalues(30)),
         (48, 300, 36_000)
     );
 }

@@ -16,9 +16,8 @@ fn step_bounds_lie_within_the_tolerance_of_the_largest_eigenvalue() {
     let mut ws = LanczosWorkspace::new();
     let params = StepParams::default();
     for n in (1..=12).chain([17, 30, 50, 120, 300]) {
-        let mut cases: Vec<(String, Mat<f64>)> = (0..4)
-            .map(|seed| (format!("random {seed}"), random_symmetric(n, seed)))
-            .collect();
+        let mut cases: Vec<(String, Mat<f64>)> =
+            (0..4).map(|seed| (format!("random {seed}"), random_symmetric(n, seed))).collect();
         for (name, spectrum) in spectra(n) {
             cases.push((name.to_string(), with_spectrum(&spectrum, 2)));
         }
@@ -35,11 +34,7 @@ fn step_bounds_lie_within_the_tolerance_of_the_largest_eigenvalue() {
             if bound.steps < limit || limit == n {
                 assert!(bound.upper <= top + margin, "{what}");
             }
-            let all = StepParams {
-                tolerance: 0.0,
-                max_steps: n,
-                ..params
-            };
+            let all = StepParams { tolerance: 0.0, max_steps: n, ..params };
             let exact = step_bound(&mut DenseOperator { matrix: a.as_ref() }, &mut ws, &all);
             assert!(
                 (exact.upper - top).abs() <= 10.0 * rounding,
@@ -53,21 +48,12 @@ fn step_bounds_lie_within_the_tolerance_of_the_largest_eigenvalue() {
 fn step_bounds_end_at_once_on_multiples_of_the_identity_and_report_nan() {
     let mut ws = LanczosWorkspace::new();
     for factor in [0.0, -2.5, 1e-200, 3e100] {
-        let mut op = Diagonal {
-            entries: vec![factor; 60],
-        };
+        let mut op = Diagonal { entries: vec![factor; 60] };
         let bound = step_bound(&mut op, &mut ws, &StepParams::default());
         assert_eq!(bound.steps, 1);
-        assert!(
-            (bound.upper - factor).abs() <= 100.0 * f64::EPSILON * factor.abs(),
-            "{bound:?}"
-        );
+        assert!((bound.upper - factor).abs() <= 100.0 * f64::EPSILON * factor.abs(), "{bound:?}");
     }
-    assert!(
-        !step_bound(&mut Broken(40), &mut ws, &StepParams::default())
-            .upper
-            .is_finite()
-    );
+    assert!(!step_bound(&mut Broken(40), &mut ws, &StepParams::default()).upper.is_finite());
     assert_eq!(
         step_bound(&mut Broken(0), &mut ws, &StepParams::default()).upper,
         f64::NEG_INFINITY
@@ -86,20 +72,13 @@ fn extreme_pairs_agree_with_dense_eigenvalues() {
             };
             let a = with_spectrum(&spectrum, 6);
             let values = dense_values(&a);
-            let params = ExtremeParams {
-                tolerance: 1e-10,
-                ..ExtremeParams::default()
-            };
+            let params = ExtremeParams { tolerance: 1e-10, ..ExtremeParams::default() };
             let mut op = DenseOperator { matrix: a.as_ref() };
             let what = format!("{name} of order {n}");
             let least = smallest_eigenpair(&mut op, &[], &params, &mut ws);
             let most = largest_eigenpair(&mut op, &[], &params, &mut ws);
             for (found, expected) in [(&least, values[0]), (&most, values[n - 1])] {
-                assert_eq!(
-                    found.outcome,
-                    ExtremeOutcome::Converged,
-                    "{what}: {found:?}"
-                );
+                assert_eq!(found.outcome, ExtremeOutcome::Converged, "{what}: {found:?}");
                 assert!(
                     (found.value - expected).abs() <= 1e-9,
                     "{what}: {} for {expected}",
@@ -123,9 +102,7 @@ fn extreme_pairs_agree_with_dense_eigenvalues() {
 #[test]
 fn deflation_walks_up_through_a_multiple_eigenvalue() {
     let mut ws = LanczosWorkspace::new();
-    let spectrum: Vec<f64> = (0..60)
-        .map(|i| if i < 4 { -1.0 } else { i as f64 / 60.0 })
-        .collect();
+    let spectrum: Vec<f64> = (0..60).map(|i| if i < 4 { -1.0 } else { i as f64 / 60.0 }).collect();
     let a = with_spectrum(&spectrum, 3);
     let mut known = Mat::<f64>::zeros(60, 0);
     for expected in [-1.0, -1.0, -1.0, -1.0, 4.0 / 60.0, 5.0 / 60.0] {
@@ -135,26 +112,18 @@ fn deflation_walks_up_through_a_multiple_eigenvalue() {
             deflate: Some(known.as_ref()),
             ..ExtremeParams::default()
         };
-        let pair = smallest_eigenpair(
-            &mut DenseOperator { matrix: a.as_ref() },
-            &[],
-            &params,
-            &mut ws,
-        );
+        let pair =
+            smallest_eigenpair(&mut DenseOperator { matrix: a.as_ref() }, &[], &params, &mut ws);
         assert_eq!(pair.outcome, ExtremeOutcome::Converged);
-        assert!(
-            (pair.value - expected).abs() <= 1e-9,
-            "{} for {expected}",
-            pair.value
-        );
+        assert!((pair.value - expected).abs() <= 1e-9, "{} for {expected}", pair.value);
         let count = known.ncols();
-        known = Mat::from_fn(60, count + 1, |i, j| {
-            if j < count {
-                known[(i, j)]
-            } else {
-                pair.vector[i]
-            }
-        });
+        known = Mat::from_fn(
+            60,
+            count + 1,
+            |i, j| {
+                if j < count { known[(i, j)] } else { pair.vector[i] }
+            },
+        );
         assert!(orthogonality_defect(known.as_ref()) <= 1e-10);
     }
 }
@@ -163,15 +132,10 @@ fn deflation_walks_up_through_a_multiple_eigenvalue() {
 fn deflation_down_to_one_dimension_leaves_the_last_eigenvalue() {
     let mut ws = LanczosWorkspace::new();
     for n in [2, 3, 9] {
-        let mut op = Diagonal {
-            entries: (0..n).map(|i| i as f64).collect(),
-        };
+        let mut op = Diagonal { entries: (0..n).map(|i| i as f64).collect() };
         // Scaled and repeated vectors: they need not be orthonormal.
         let known = Mat::from_fn(n, 2 * (n - 1), |i, j| if i == j / 2 { 3.0 } else { 0.0 });
-        let params = ExtremeParams {
-            deflate: Some(known.as_ref()),
-            ..ExtremeParams::default()
-        };
+        let params = ExtremeParams { deflate: Some(known.as_ref()), ..ExtremeParams::default() };
         let pair = smallest_eigenpair(&mut op, &vec![1.0; n], &params, &mut ws);
         assert!((pair.value - (n - 1) as f64).abs() <= 1e-12, "{pair:?}");
         assert_eq!(pair.outcome, ExtremeOutcome::Converged);
@@ -183,17 +147,12 @@ fn a_start_at_a_wrong_eigenvector_does_not_hide_the_smallest() {
     let mut ws = LanczosWorkspace::new();
     for n in [2, 3, 30, 200] {
         let mut op = Diagonal {
-            entries: (0..n)
-                .map(|i| if i == n / 2 { -1e-3 } else { i as f64 })
-                .collect(),
+            entries: (0..n).map(|i| if i == n / 2 { -1e-3 } else { i as f64 }).collect(),
         };
         for wrong in [0, n - 1] {
             let mut start = vec![0.0; n];
             start[wrong] = 7.0;
-            let params = ExtremeParams {
-                tolerance: 1e-8,
-                ..ExtremeParams::default()
-            };
+            let params = ExtremeParams { tolerance: 1e-8, ..ExtremeParams::default() };
             let expected = op.entries.iter().copied().fold(f64::INFINITY, f64::min);
             let pair = smallest_eigenpair(&mut op, &start, &params, &mut ws);
             assert!(
@@ -213,21 +172,15 @@ fn grid_laplacians_show_their_clustered_lower_end() {
         let n = rows * columns;
         let mut op = Grid { rows, columns };
         let ones = Mat::from_fn(n, 1, |_, _| 1.0);
-        let params = ExtremeParams {
-            tolerance: 1e-8,
-            max_steps: 20_000,
-            ..ExtremeParams::default()
-        };
+        let params =
+            ExtremeParams { tolerance: 1e-8, max_steps: 20_000, ..ExtremeParams::default() };
         let zero = smallest_eigenpair(&mut op, &[], &params, &mut ws);
         assert!(
             zero.value.abs() <= 8e-8 && zero.outcome == ExtremeOutcome::Converged,
             "{}",
             zero.value
         );
-        let params = ExtremeParams {
-            deflate: Some(ones.as_ref()),
-            ..params
-        };
+        let params = ExtremeParams { deflate: Some(ones.as_ref()), ..params };
         let fiedler = smallest_eigenpair(&mut op, &[], &params, &mut ws);
         let longest = rows.max(columns);
         let expected = 4.0 * (pi / (2 * longest) as f64).sin().powi(2);
@@ -249,11 +202,7 @@ fn grid_laplacians_show_their_clustered_lower_end() {
     let grid = Mat::from_fn(12, 12, |i, j| {
         let (mut x, mut y) = (vec![0.0; 12], vec![0.0; 12]);
         x[j] = 1.0;
-        Grid {
-            rows: 3,
-            columns: 4,
-        }
-        .apply(&x, &mut y);
+        Grid { rows: 3, columns: 4 }.apply(&x, &mut y);
         y[i]
     });
     let expected = 4.0 * (pi / 8.0).sin().powi(2);
@@ -263,20 +212,8 @@ fn grid_laplacians_show_their_clustered_lower_end() {
 #[test]
 fn limits_and_broken_operators_are_reported() {
     let mut ws = LanczosWorkspace::new();
-    let params = ExtremeParams {
-        tolerance: 1e-14,
-        max_steps: 10,
-        ..ExtremeParams::default()
-    };
-    let pair = smallest_eigenpair(
-        &mut Grid {
-            rows: 30,
-            columns: 30,
-        },
-        &[],
-        &params,
-        &mut ws,
-    );
+    let params = ExtremeParams { tolerance: 1e-14, max_steps: 10, ..ExtremeParams::default() };
+    let pair = smallest_eigenpair(&mut Grid { rows: 30, columns: 30 }, &[], &params, &mut ws);
     assert_eq!(pair.outcome, ExtremeOutcome::StepLimit);
     assert!(pair.residual > 1e-14 && pair.value >= -1e-12);
     let broken = smallest_eigenpair(&mut Broken(30), &[], &params, &mut ws);

@@ -82,17 +82,10 @@ fn spectra(n: usize) -> Vec<(&'static str, Vec<f64>)> {
         (
             "clustered",
             by(&|i| {
-                if i % 3 == 0 {
-                    1.0
-                } else {
-                    1.0 + 1e-13 * share(i)
-                }
+                if i % 3 == 0 { 1.0 } else { 1.0 + 1e-13 * share(i) }
             }),
         ),
-        (
-            "rank deficient",
-            by(&|i| if i < n / 2 { 1.0 + share(i) } else { 0.0 }),
-        ),
+        ("rank deficient", by(&|i| if i < n / 2 { 1.0 + share(i) } else { 0.0 })),
         ("indefinite", by(&|i| share(i) - 0.4)),
         ("zero", vec![0.0; n]),
     ]
@@ -133,9 +126,7 @@ fn orthogonality_defect(q: MatRef<'_, f64>) -> f64 {
 }
 
 fn poison_upper(a: &Mat<f64>) -> Mat<f64> {
-    Mat::from_fn(a.nrows(), a.ncols(), |i, j| {
-        if i < j { f64::NAN } else { a[(i, j)] }
-    })
+    Mat::from_fn(a.nrows(), a.ncols(), |i, j| if i < j { f64::NAN } else { a[(i, j)] })
 }
 
 /// Laplacian of a rows x columns grid: eigenvalues 4 sin^2(i pi / (2 rows)) + 4 sin^2(j pi / (2 columns)), the Kronecker sum of
@@ -155,10 +146,8 @@ impl LinearOperator for Grid {
         for r in 0..self.rows {
             for c in 0..self.columns {
                 let i = r * self.columns + c;
-                let neighbours = [
-                    (c + 1 < self.columns, i + 1),
-                    (r + 1 < self.rows, i + self.columns),
-                ];
+                let neighbours =
+                    [(c + 1 < self.columns, i + 1), (r + 1 < self.rows, i + self.columns)];
                 for (_, j) in neighbours.into_iter().filter(|n| n.0) {
                     let d = x[i] - x[j];
                     y[i] += d;

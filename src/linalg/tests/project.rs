@@ -17,9 +17,7 @@ fn minus(a: &Mat<f64>, b: &Mat<f64>) -> Mat<f64> {
 }
 
 fn inner(a: &Mat<f64>, b: &Mat<f64>) -> f64 {
-    (0..a.ncols())
-        .map(|j| (0..a.nrows()).map(|i| a[(i, j)] * b[(i, j)]).sum::<f64>())
-        .sum()
+    (0..a.ncols()).map(|j| (0..a.nrows()).map(|i| a[(i, j)] * b[(i, j)]).sum::<f64>()).sum()
 }
 
 #[test]

@@ -108,7 +108,9 @@ fn slots_of(pattern: &Pattern, entries: &Entries) -> Vec<u32> {
         .rows
         .iter()
         .zip(&entries.columns)
-        .map(|(&i, &j)| pattern.slot(i as usize, j as usize).expect("entry of the aggregate") as u32)
+        .map(|(&i, &j)| {
+            pattern.slot(i as usize, j as usize).expect("entry of the aggregate") as u32
+        })
         .collect()
 }
 

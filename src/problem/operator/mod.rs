@@ -278,7 +278,8 @@ impl BlockOperator {
             Some(pattern) => 4 * pattern.stored() as u64,
             None => 2 * (self.order * self.order) as u64,
         };
-        let outer = self.outer.as_ref().map_or(0, |outer| 4 * (self.order * outer.ids.len()) as u64);
+        let outer =
+            self.outer.as_ref().map_or(0, |outer| 4 * (self.order * outer.ids.len()) as u64);
         pattern + outer + 4 * self.entries.values.len() as u64
     }
 }
@@ -301,4 +302,3 @@ fn transposed_products(v: &Factor, vectors: &Mat<f64>) -> Mat<f64> {
     dense::gemm(out.as_mut(), dense::Accumulate::Replace, 1.0, v_t, vectors.as_ref());
     out
 }
-

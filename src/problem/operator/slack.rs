@@ -115,11 +115,7 @@ impl BlockOperator {
             }
             SlackStore::Dense(matrix) => {
                 let v_t = MatRef::from_column_major_slice(&v.data, width, self.order);
-                let out_t = MatMut::from_column_major_slice_mut(
-                    &mut out.data,
-                    width,
-                    self.order,
-                );
+                let out_t = MatMut::from_column_major_slice_mut(&mut out.data, width, self.order);
                 dense::gemm(out_t, dense::Accumulate::Replace, 1.0, v_t, matrix.as_ref());
             }
         }
@@ -129,11 +125,7 @@ impl BlockOperator {
                 let weight = slack.outer_weights[k];
                 coefficients.col_as_slice_mut(k).iter_mut().for_each(|value| *value *= weight);
             }
-            let out_t = MatMut::from_column_major_slice_mut(
-                &mut out.data,
-                width,
-                self.order,
-            );
+            let out_t = MatMut::from_column_major_slice_mut(&mut out.data, width, self.order);
             dense::gemm(
                 out_t,
                 dense::Accumulate::Add,
