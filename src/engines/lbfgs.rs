@@ -77,7 +77,7 @@ impl Lbfgs {
         }
         let curvature = dot(step, change);
         let (ss, tt) = (dot(step, step), dot(change, change));
-        if !(curvature > CURVATURE * (ss * tt).sqrt()) {
+        if curvature <= CURVATURE * (ss * tt).sqrt() || curvature.is_nan() {
             return Kept::No;
         }
         self.inverse_curvatures[self.next] = 1.0 / curvature;

@@ -33,6 +33,9 @@ use system::System;
 pub struct NewtonParams {
     /// Stops when the merit is at most this.
     pub tolerance: f64,
+    /// Stops at this merit already when a step gained less than tenfold: convergence is then linear, as where
+    /// the optimum or the multipliers are not unique.
+    pub enough: f64,
     /// Most Newton steps.
     pub steps: usize,
     /// Systems of at most this order (unknowns of R and u, plus m) are solved densely.
@@ -47,6 +50,7 @@ impl Default for NewtonParams {
     fn default() -> Self {
         NewtonParams {
             tolerance: 1e-13,
+            enough: 1e-11,
             steps: 30,
             dense_order: 3000,
             krylov_steps: 1000,
@@ -103,13 +107,12 @@ pub fn polish(
     let widths: Vec<usize> = factors.iter().map(|factor| factor.width).collect();
     let mut l = Lagrangian::new(problem, op, &widths);
     l.import(factors, orthant, y);
-    let info = run(problem, op, l, params, meter, |l| {
+    run(problem, op, l, params, meter, |l| {
         let (new_factors, new_orthant, new_y) = l.export();
         factors.clone_from_slice(&new_factors);
         orthant.copy_from_slice(&new_orthant);
         y.copy_from_slice(&new_y);
-    });
-    info
+    })
 }
 
 /// Runs the iteration on a loaded Lagrangian and hands the final one to `take`.
@@ -168,7 +171,12 @@ fn run(
                 // Steps that gain less than a thousandth are the noise of the arithmetic.
                 let futile = new > 0.999 * merit;
                 factor = if new < 0.1 * merit { 0.2 * factor } else { 2.0 * factor };
+                let linear = new > 0.1 * merit;
                 merit = new;
+                if linear && merit <= params.enough {
+                    info.end = NewtonEnd::Converged;
+                    break;
+                }
                 attempts = if futile { attempts + 1 } else { 0 };
                 if attempts > 3 {
                     info.end = NewtonEnd::Stalled;

@@ -27,7 +27,7 @@ memory.",
 constraint each, with no other constraint, take the path with unit rows.",
     cost: "One inner step: one product with S and one pass for A(RD'+DR') and A(DD') together, about \
 10 (nnz(C) + sum nnz(A_i)) p flops for sparse data, 6 n^2 p for dense; 2 (pairs) + 6 vectors of length n p. \
-Newton finish: dense of order n p + m up to 1500, MINRES beyond. Certificate: Lanczos on S, never formed for \
+Newton finish: dense of order n p + m up to 3000, MINRES beyond. Certificate: Lanczos on S, never formed for \
 sparse blocks of order above 160. Unit rows: nnz(C) p an inner step, 11 vectors.",
     guarantees: "With p(p+1)/2 > m and a bounded feasible set of smooth rank a second-order point is optimal for \
 almost every cost. A note 'certified' means |<C,X> - b'y| + tr X max(0, -lambda_min(S)) is within 1e-7 of \
@@ -35,7 +35,8 @@ almost every cost. A note 'certified' means |<C,X> - b'y| + tr X max(0, -lambda_
 problem with a relaxation gap has no certificate.",
     failures: "Spurious minima below the width bound (Waldspurger and Waters, SIAM J. Optim. 30:2577-2602, 2020), \
 rarely at or above it; non-smooth feasible sets; unbounded level sets of R; slow when X* has small nonzero \
-eigenvalues. At width 1 a fixed diagonal leaves a discrete set: the point comes from rounding a wider one and \
+eigenvalues or when m exceeds the dimension n r - r(r-1)/2 of the rank-r points, where multipliers are not \
+unique and Newton steps converge linearly. At width 1 a fixed diagonal leaves a discrete set: the point comes from rounding a wider one and \
 single flips, with no guarantee.",
     options: &[
         SettingSpec {
@@ -50,16 +51,17 @@ referee truncates it.",
             name: "starts",
             kind: Kind::Integer { least: 1, most: 1000 },
             default: DefaultSetting::Integer(3),
-            meaning: "Random starts made while no point is certified; the feasible point of least objective is \
-returned. With a fixed diagonal: points brought down from the lifted one (its leading columns, then random \
+            meaning: "Random starts made while no point is certified (the first before the lift, the others after \
+it); the feasible point of least objective is returned. With a fixed diagonal: points brought down from the lifted one (its leading columns, then random \
 projections), 16 times as many at width 1.",
         },
         SettingSpec {
             name: "lift",
             kind: Kind::Word(&["when-needed", "never"]),
             default: DefaultSetting::Word("when-needed"),
-            meaning: "Whether wider factors help on the way. General constraints: after uncertified starts the \
-width doubles up to the bound, and the wide point is truncated to its leading columns and solved again. Fixed \
+            meaning: "Whether wider factors help on the way. General constraints: after an uncertified first \
+start the width doubles up to the bound until certified, and each wide point is truncated to its leading columns \
+and solved again at the width. Fixed \
 diagonal: the first descent is at width max(3, width + 1, within the bound), doubled with the escape vector of \
 S as a new column until certified, then brought down to the width by leading columns and random projections \
 with rows normalised, and polished. `never` works at the width alone.",

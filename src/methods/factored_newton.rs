@@ -23,8 +23,9 @@ Levenberg term and inertia control by the augmented Hessian, J. Nocedal and S. W
 12:617-629, 1975, 10.1137/0712047. Bibliographic data from memory.",
     needs: "Any problem; width = target rank (the least p with p(p+1)/2 > m, at most n, where the rank is free); \
 x >= 0 as squares.",
-    cost: "Start: the factored augmented Lagrangian to a residual of `loose`. One Newton step: dense for N = n r + \
-m <= 1500, about N^3/3 + N^2 m flops and N^2 memory; MINRES with a diagonal preconditioner beyond, up to 1000 \
+    cost: "Start: the factored augmented Lagrangian (one start with its lift, see `factored-alm`) to a residual of \
+`loose`. One Newton step: dense for N = n r + \
+m <= 3000, about N^3/3 + N^2 m flops and N^2 memory; MINRES with a diagonal preconditioner beyond, up to 1000 \
 products of a gradient's cost each.",
     guarantees: "Quadratic convergence near a point with independent constraint gradients and a positive \
 definite Hessian on their null space modulo rotations; the merit (gradient and residual in scaled data) never \
@@ -74,10 +75,12 @@ impl Method for FactoredNewton {
             .collect::<Vec<_>>();
         let mut params = AlmParams::with_widths(widths);
         params.starts = 1;
-        params.lift = Lift::Never;
+        params.lift = Lift::WhenNeeded;
         params.finish = Finish::Plain;
         params.feasibility = trial.options.decimal("loose");
         params.stationarity = params.feasibility;
+        // The loose start need not be certified more sharply than it is solved.
+        params.certificate = 10.0 * params.feasibility;
         let mut best: Option<Candidate> = None;
         for _ in 0..trial.options.size("starts") {
             let candidate = match one_start(problem, &op, &params, trial) {

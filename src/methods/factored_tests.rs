@@ -104,7 +104,6 @@ fn alternating_projections_meets_the_sets_on_a_small_planted_problem() {
     let plain = method.solve(&planted.problem, &mut trial(method, &[], 1)).unwrap();
     let (objective, residual) = errors(&planted, &plain);
     assert!(residual < 1e-6, "{residual}, {}", plain.note);
-    println!("AP: objective {objective}, optimum {}, {}", planted.optimum, plain.note);
     assert!(objective < 0.5, "{objective}, {}", plain.note);
     let options = [("polish", Setting::Word("newton".to_owned()))];
     let polished = method.solve(&planted.problem, &mut trial(method, &options, 1)).unwrap();

@@ -183,7 +183,7 @@ fn range_basis(block: &BlockOperator, slack: &Slack, factor: &Factor) -> (Mat<f6
         return (Mat::zeros(n, 0), 0.0);
     }
     let largest = eigen.values()[width - 1];
-    let first = eigen.values().partition_point(|&v| !(v > RANGE_SHARE * largest));
+    let first = eigen.values().partition_point(|&v| v <= RANGE_SHARE * largest);
     let count = width - first;
     let mut turn = Mat::zeros(width, count);
     for j in 0..count {

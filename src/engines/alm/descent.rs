@@ -121,7 +121,8 @@ fn minimise(
         }
         // 2. Direction, the steepest one when the memory gives no descent.
         ws.memory.direction(&l.gradient, &mut ws.direction);
-        if !(dot(&ws.direction, &l.gradient) < -1e-12 * size * norm2(&ws.direction)) {
+        let slope = dot(&ws.direction, &l.gradient);
+        if slope >= -1e-12 * size * norm2(&ws.direction) || slope.is_nan() {
             ws.memory.clear();
             ws.memory.direction(&l.gradient, &mut ws.direction);
         }

@@ -3,7 +3,7 @@
 use super::certificate::{Certificate, CertificateParams, certify};
 use super::descent::{DescentEnd, DescentParams, DescentWorkspace, descend};
 use super::lagrangian::Lagrangian;
-use super::start::{numerical_rank, principal, random, resized};
+use super::start::{principal, random, resized};
 use super::{AlmError, AlmInfo, AlmParams, AlmSolution, Finish, Lift, finish_info, stop_of};
 use crate::budget::{Halt, Meter};
 use crate::engines::newton::{NewtonEnd, NewtonParams, polish};
@@ -18,8 +18,9 @@ const HAND_OVER: f64 = 1e-5;
 const PROMISING: f64 = 1e-3;
 /// A point is feasible for the choice between points when its residual is at most this.
 const FEASIBLE: f64 = 1e-7;
-/// Eigenvalues of X above this share of the largest count for the rank of a wide point that is not finished.
-const LOW_SHARE: f64 = 1e-3;
+/// A wide point that is not finished is truncated at once when the eigenvalues dropped are at most this share of
+/// the trace.
+const LOW_SHARE: f64 = 0.1;
 /// Most escapes along a negative eigenvector at one width.
 const ESCAPES: usize = 4;
 
@@ -32,6 +33,8 @@ struct Candidate {
     objective: f64,
     feasibility: f64,
     converged: bool,
+    /// Penalty at the end of the descent.
+    sigma: f64,
 }
 
 impl Candidate {
@@ -73,7 +76,7 @@ pub fn solve(
         Run { problem, op, params, meter, halt: None, best: None, bound: None, starts: 0, widest };
     // 1. One random start at the widths asked for.
     run.starts = 1;
-    let mut certified = run.from_random(&params.widths, stream);
+    let mut certified = run.start_randomly(&params.widths, stream);
     // 2. A lift: solve wider, truncate, solve again.
     if !certified && run.halt.is_none() && params.lift == Lift::WhenNeeded {
         certified = run.lifted(stream);
@@ -81,14 +84,14 @@ pub fn solve(
     // 3. More random starts.
     while !certified && run.starts < params.starts && run.halt.is_none() {
         run.starts += 1;
-        certified = run.from_random(&params.widths, stream);
+        certified = run.start_randomly(&params.widths, stream);
     }
     run.answer()
 }
 
 impl Run<'_, '_> {
     /// Descends from a random point; true when it is certified.
-    fn from_random(&mut self, widths: &[usize], stream: &mut Stream) -> bool {
+    fn start_randomly(&mut self, widths: &[usize], stream: &mut Stream) -> bool {
         let mut l = Lagrangian::new(self.problem, self.op, widths);
         random(&mut l, stream);
         l.sigma = super::descent::FIRST_SIGMA;
@@ -177,6 +180,7 @@ impl Run<'_, '_> {
             objective: l.cost * l.scaling.variable / l.scaling.cost,
             feasibility: l.feasibility(self.problem),
             converged,
+            sigma: l.sigma,
         }
     }
 
@@ -244,7 +248,7 @@ impl Run<'_, '_> {
     ) -> Option<Candidate> {
         let (values, turned) = principal(&c.factors[block])?;
         let largest = values.last().copied()?;
-        if !(values[0] <= 1e-6 * largest) {
+        if values[0] > 1e-6 * largest || values[0].is_nan() {
             return None;
         }
         let mut factors = c.factors.clone();
@@ -279,9 +283,18 @@ impl Run<'_, '_> {
             let mut l = Lagrangian::new(self.problem, self.op, &widths);
             random(&mut l, stream);
             l.sigma = super::descent::FIRST_SIGMA;
-            let Some(mut wide) = self.descend(l) else {
-                continue;
-            };
+            let Some(loose) = self.descend_loosely(&mut l) else { continue };
+            // 1. A wide point of low rank need not be finished: its truncation is.
+            let low = |(factor, &width): (&Factor, &usize)| tail_share(factor, width) <= LOW_SHARE;
+            let low = loose.factors.iter().zip(&self.params.widths).all(low);
+            if (low || self.halt.is_some()) && self.truncated(&loose) {
+                return true;
+            }
+            if self.halt.is_some() {
+                return false;
+            }
+            // 2. Finish it, escape from saddles, truncate.
+            let Some(mut wide) = self.descend(l) else { continue };
             let mut certified = false;
             for _ in 0..ESCAPES {
                 if self.halt.is_some() {
@@ -320,7 +333,7 @@ impl Run<'_, '_> {
             .collect();
         let mut l = Lagrangian::new(self.problem, self.op, &asked);
         l.import(&factors, &wide.orthant, &wide.y);
-        l.sigma = super::descent::FIRST_SIGMA;
+        l.sigma = wide.sigma;
         match self.descend(l) {
             Some(candidate) => self.judge(candidate, &asked),
             None => false,
@@ -358,6 +371,17 @@ impl Run<'_, '_> {
         let (problem, op) = (self.problem, self.op);
         finish_info(problem, op, &factors, &orthant, &multipliers, self.meter, &mut info);
         Ok(AlmSolution { factors, orthant, multipliers, info })
+    }
+}
+
+/// Returns the share of the trace of V V' beyond its `width` largest eigenvalues.
+fn tail_share(factor: &Factor, width: usize) -> f64 {
+    match principal(factor) {
+        Some((values, _)) => {
+            let tail: f64 = values.iter().rev().skip(width).sum();
+            tail / values.iter().sum::<f64>().max(f64::MIN_POSITIVE)
+        }
+        None => 1.0,
     }
 }
 

@@ -7,7 +7,7 @@
 /// and each sign change is refined by Newton steps kept inside the bracket, to a relative width of 2^-50.
 pub fn least_step(q: [f64; 4]) -> Option<f64> {
     let slope = [q[0], 2.0 * q[1], 3.0 * q[2], 4.0 * q[3]];
-    if !(slope[0] < 0.0) || q.iter().any(|c| !c.is_finite()) {
+    if slope[0] >= 0.0 || q.iter().any(|c| !c.is_finite()) {
         return None;
     }
     let value = |a: f64| a * (q[0] + a * (q[1] + a * (q[2] + a * q[3])));
@@ -33,7 +33,7 @@ fn cubic(c: [f64; 4], a: f64) -> f64 {
 fn turning_points(c: [f64; 4]) -> [Option<f64>; 2] {
     let (p, half, r) = (3.0 * c[3], c[2], c[1]);
     let discriminant = half * half - p * r;
-    if !(discriminant >= 0.0) {
+    if discriminant < 0.0 || discriminant.is_nan() {
         return [None, None];
     }
     // p a^2 + 2 half a + r = 0 without cancellation.
@@ -49,19 +49,20 @@ fn turning_points(c: [f64; 4]) -> [Option<f64>; 2] {
 /// monotone there.
 fn root_between(c: [f64; 4], left: f64, right: f64) -> Option<f64> {
     let (mut low, mut high) = (left, right);
-    if !(cubic(c, low) < 0.0) {
+    let start = cubic(c, low);
+    if start >= 0.0 || start.is_nan() {
         return None;
     }
     if high.is_infinite() {
         high = if low > 0.0 { 2.0 * low } else { 1.0 };
-        while !(cubic(c, high) >= 0.0) {
+        while cubic(c, high) < 0.0 || cubic(c, high).is_nan() {
             low = high;
             high *= 4.0;
             if high > 1e100 {
                 return None;
             }
         }
-    } else if !(cubic(c, high) >= 0.0) {
+    } else if cubic(c, high) < 0.0 || cubic(c, high).is_nan() {
         return None;
     }
     let mut a = 0.5 * (low + high);

@@ -317,7 +317,7 @@ fn the_general_path_also_stays_at_the_trap_and_certification_tells() {
     let mut y = vec![300.0; 6];
     y.push(0.0);
     let mut l = Lagrangian::new(&problem, &op, &[2]);
-    l.import(&[v.clone()], &[], &y);
+    l.import(std::slice::from_ref(&v), &[], &y);
     l.sigma = 5.0;
     l.refresh();
     l.compute_gradient();

@@ -59,7 +59,7 @@ pub fn recognise(problem: &Problem, blocks: &[BlockOperator]) -> Option<Vec<Sphe
         };
         let (i, j, a) = matrix.iter().next()?;
         let square = problem.rhs()[id] / a;
-        if i != j || fixed[*block][i].is_some() || !(square > 0.0) {
+        if i != j || fixed[*block][i].is_some() || square <= 0.0 || square.is_nan() {
             return None;
         }
         fixed[*block][i] = Some((id, a, square.sqrt()));
@@ -225,7 +225,7 @@ fn reply(image: &[f64], row: &mut [f64]) -> f64 {
         along += g * r;
     }
     let norm = square.sqrt();
-    if !(norm > 0.0) {
+    if norm <= 0.0 || norm.is_nan() {
         return 0.0;
     }
     let factor = -1.0 / norm;

@@ -343,7 +343,7 @@ fn projected(q: &Factor, width: usize, stream: &mut Stream) -> Factor {
 fn normalise_rows(q: &mut Factor, stream: &mut Stream) {
     for i in 0..q.order {
         let row = q.row_mut(i);
-        while !(dot(row, row) > 1e-24) {
+        while dot(row, row) <= 1e-24 || dot(row, row).is_nan() {
             row.iter_mut().for_each(|value| *value = stream.normal());
         }
         let inverse = 1.0 / dot(row, row).sqrt();

@@ -232,7 +232,7 @@ fn truncated_gradients(
         }
         let alpha = rho / curvature;
         let longer = ee + alpha * (2.0 * ed + alpha * dd);
-        if !(curvature > 0.0) || longer >= radius * radius {
+        if curvature <= 0.0 || curvature.is_nan() || longer >= radius * radius {
             let left = (radius * radius - ee).max(0.0);
             let tau = left / (ed + (ed * ed + dd * left).sqrt());
             if tau.is_finite() {
