@@ -15,7 +15,8 @@
 //! `sqrt((||g||/(1+||z||))^2 + (||v||/(1+||b||))^2)`, in scaled data, falls. Own combination of standard
 //! parts (J. Nocedal and S. Wright, Numerical Optimization, 2nd ed. 2006, chapters 16 and 18, from memory).
 //!
-//! It is a local method: it neither escapes saddles on purpose nor changes the width.
+//! A Newton step takes memory for one copy of each slack (dense) or one vector (matrix-free); MINRES itself
+//! allocates nothing. It is a local method: it neither escapes saddles on purpose nor changes the width.
 
 mod dense;
 mod krylov;

@@ -4,7 +4,8 @@
 //! the measure is `|<C, X> - b'y| + trace * max(0, -least)`, with trace the trace of the point: for every
 //! feasible Z of at most that trace, <C, Z> >= b'y - trace * max(0, -least). Large slacks are never
 //! formed: their least eigenvalue comes from a Lanczos run, which converges to an eigenvalue but does not
-//! prove that none lies below. A proof is the referee's.
+//! prove that none lies below. A proof is the referee's. A Lanczos run is bounded by its step limit, not by the
+//! clock: it ends before the budget is looked at again.
 
 use crate::budget::Meter;
 use crate::linalg::eigen::SymmetricEigen;
