@@ -1,6 +1,8 @@
 //! Holds `relax-ipm` against published optimal values: test problems from files when they are at
 //! hand, and closed forms that need no file.
 
+#![allow(clippy::print_stderr)] // A skipped check says so.
+
 use rankassay::budget::Meter;
 use rankassay::card::Settings;
 use rankassay::formats::sdpa;
@@ -34,7 +36,7 @@ fn raw(problem: &Problem) -> (f64, f64) {
 fn data(name: &str) -> Option<PathBuf> {
     let path = PathBuf::from(concat!(env!("CARGO_MANIFEST_DIR"), "/../shared/data")).join(name);
     if !path.exists() {
-        println!("skipped: the test problem {name} is not at hand");
+        eprintln!("skipped: the test problem {name} is not at hand");
         return None;
     }
     Some(path)

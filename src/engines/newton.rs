@@ -9,9 +9,9 @@
 //!
 //! with g = (2 S R, 2 s o u) the gradient of the Lagrangian, H d = (2 S D, 2 s o d), J d = A(RD' + DR') + a(2 u o d),
 //! v = A(RR') - b, and G D = R (R'D - D'R), which fixes the gauge freedom R -> RQ by the horizontal
-//! condition (R'dR symmetric). Small systems are solved densely by [`dense`], which needs the Hessian
+//! condition (R'dR symmetric). Small systems are solved densely by `dense`, which needs the Hessian
 //! positive definite on the null space of J and raises the Levenberg term lambda until it is; larger ones
-//! by preconditioned MINRES ([`krylov`]), matrix-free. Steps are halved until the merit
+//! by preconditioned MINRES (`krylov`), matrix-free. Steps are halved until the merit
 //! `sqrt((||g||/(1+||z||))^2 + (||v||/(1+||b||))^2)`, in scaled data, falls. Own combination of standard
 //! parts (J. Nocedal and S. Wright, Numerical Optimization, 2nd ed. 2006, chapters 16 and 18, from memory).
 //!

@@ -361,7 +361,7 @@ fn functional_text(functional: &Functional) -> FunctionalText {
     FunctionalText { parts, nonnegative: pairs(&functional.orthant) }
 }
 
-/// Writes an instance to a file; see [`write`].
+/// Writes an instance to a file; see [`write()`].
 ///
 /// # Errors
 /// The file cannot be written.

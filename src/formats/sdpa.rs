@@ -173,7 +173,7 @@ fn write_functional(text: &mut String, matrix: usize, functional: &Functional, p
     }
 }
 
-/// Writes a problem to a sparse SDPA file; see [`write`].
+/// Writes a problem to a sparse SDPA file; see [`write()`].
 ///
 /// # Errors
 /// The file cannot be written.

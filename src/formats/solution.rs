@@ -347,7 +347,7 @@ fn block_text(block: &BlockPoint) -> BlockText {
     }
 }
 
-/// Writes an answer to a file; see [`write`].
+/// Writes an answer to a file; see [`write()`].
 ///
 /// # Errors
 /// The file cannot be written.
