@@ -61,6 +61,11 @@ fn the_quick_plan_keeps_its_promises() {
             }
         }
     }
+    assert_eq!(
+        std::fs::read_to_string(one.join("instances.csv")).unwrap(),
+        std::fs::read_to_string(two.join("instances.csv")).unwrap(),
+        "instances and their digests"
+    );
     for name in ["accuracy-stable.csv", "rank-stable.csv"] {
         let text = |run: &Path| std::fs::read_to_string(run.join("tables").join(name)).unwrap();
         assert_eq!(text(&one), text(&two), "{name}");

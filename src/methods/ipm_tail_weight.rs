@@ -4,7 +4,7 @@
 use super::{Method, Trial};
 use crate::budget::Halt;
 use crate::card::{DefaultSetting, Kind, MethodCard, MethodClass, SettingSpec};
-use crate::engines::ipm::tail::{FirstWeight, TailInfo, TailParams, TailWeight};
+use crate::engines::ipm::tail::{FirstWeight, TailParams, TailWeight};
 use crate::engines::ipm::{self, Outcome};
 use crate::engines::newton::{NewtonParams, polish};
 use crate::engines::reduction::Spectral;
@@ -76,7 +76,9 @@ static CARD: MethodCard = MethodCard {
 struct Attempt {
     factors: Vec<Factor>,
     orthant: Vec<f64>,
-    tail: TailInfo,
+    /// Eigenvalues beyond the target ranks over the trace, before the Newton steps.
+    tail: f64,
+    steered: usize,
     outcome: Outcome,
     feasibility: f64,
     objective: f64,
@@ -127,7 +129,7 @@ impl Method for IpmTailWeight {
         let value = relaxed.info.primal_value;
         // The relaxation's multipliers bound the optimum from below; those of a steered run do not.
         let multipliers = relaxed.multipliers.clone();
-        let mut best = ("relaxation", finish(problem, &op, relaxed, TailInfo::default(), trial)?);
+        let mut best = ("relaxation", finish(problem, &op, relaxed, 0, trial)?);
 
         // Step 2: steered attempts, until one meets the relaxation's value.
         for (name, params) in plans {
@@ -146,6 +148,8 @@ impl Method for IpmTailWeight {
         let stop = match (trial.meter.check(), attempt.outcome) {
             (Err(Halt::TimeLimit), _) => StopReason::TimeLimit,
             (Err(halt), _) => return Err(halt),
+            // A tail that did not vanish means that the weight did not do its work.
+            (Ok(()), Outcome::Optimal) if attempt.tail > 1e-6 => StopReason::Stalled,
             (Ok(()), outcome) => outcome.stop_reason(),
         };
         Ok(Answer {
@@ -157,7 +161,7 @@ impl Method for IpmTailWeight {
             stop,
             note: format!(
                 "{name}, {} steered iterations, tail {:.1e} before the Newton steps",
-                attempt.tail.steered, attempt.tail.tail
+                attempt.steered, attempt.tail
             ),
         })
     }
@@ -232,7 +236,7 @@ fn attempt(
     let mut hook = TailWeight::new(problem.blocks(), params, first);
     let ipm_params = ipm::Params { tolerance: 1e-9, max_iterations: 200 };
     let solution = ipm::solve(problem, &ipm_params, Some(&mut hook), &mut trial.meter)?;
-    finish(problem, op, solution, hook.info, trial)
+    finish(problem, op, solution, hook.info.steered, trial)
 }
 
 /// Truncates a solution to the target ranks and finishes it by Newton steps without the weight.
@@ -240,14 +244,19 @@ fn finish(
     problem: &Problem,
     op: &Operator,
     solution: ipm::Solution,
-    tail: TailInfo,
+    steered: usize,
     trial: &mut Trial,
 ) -> Result<Attempt, Halt> {
     let meter = &mut trial.meter;
     let spectral = Spectral::of(&solution.points, &solution.orthant, 1e-9, meter)?;
     let mut factors = Vec::new();
+    let (mut tail, mut trace) = (0.0, 0.0);
     for (part, block) in spectral.parts.iter().zip(problem.blocks()) {
-        factors.push(part.leading_factor(block.rank.unwrap_or(block.order)));
+        let rank = block.rank.unwrap_or(block.order);
+        factors.push(part.leading_factor(rank));
+        let beyond = part.values.len().saturating_sub(rank);
+        tail += part.values[..beyond].iter().sum::<f64>();
+        trace += part.values.iter().sum::<f64>();
     }
     let mut orthant = solution.orthant;
     let mut multipliers = solution.multipliers;
@@ -262,7 +271,8 @@ fn finish(
         feasibility: residual.sqrt() / (1.0 + b_norm),
         factors,
         orthant,
-        tail,
+        tail: if trace > 0.0 { tail / trace } else { 0.0 },
+        steered,
         outcome: solution.info.outcome,
     })
 }

@@ -368,7 +368,16 @@ impl State {
                 b = shorter;
             }
         }
-        taken?;
+        if taken.is_none() {
+            // No positive step was found: back to the iterate and its factors.
+            for state in &mut self.blocks {
+                dense::axpy_matrix(-a, state.dx.as_ref(), state.x.as_mut());
+                add_scaled(-b, &state.ds, &mut state.s);
+                state.factor_x(&mut self.ws);
+                state.factor_s(&mut self.ws);
+            }
+            return None;
+        }
         for j in 0..self.x.len() {
             self.x[j] += a * self.dx[j];
             self.z[j] += b * self.dz[j];

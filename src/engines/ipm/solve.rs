@@ -203,6 +203,7 @@ impl Run<'_> {
                 continue;
             }
             // The iterate may have drifted to the boundary: one centring step may free it.
+            let figures = self.figures();
             let freed = self.state.factor_schur(&mut meter.effort)
                 && self.newton_step(&figures, 1.0, meter);
             if !freed {
