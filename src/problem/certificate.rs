@@ -14,6 +14,7 @@ mod nondegeneracy;
 mod rank_bound;
 mod shared_minimiser;
 
+use num_bigint::BigInt;
 use serde::{Deserialize, Serialize};
 
 pub use dual_pair::{BlockPair, DualPair, IntegerColumn, IntegerFactor};
@@ -21,7 +22,7 @@ pub use nondegeneracy::{compressed_rank, image_rank};
 pub use rank_bound::RankBound;
 pub use shared_minimiser::{SharedMinimiser, SignedCycle};
 
-use super::exact::{Overflow, f64_of_i128};
+use super::exact::{Overflow, Whole, f64_of_i128};
 use super::{Factor, Problem};
 
 /// A proof, in whole numbers, that a problem has a certain rank-constrained optimum.
@@ -141,6 +142,24 @@ impl From<Overflow> for Stop {
 impl From<CertificateError> for Stop {
     fn from(error: CertificateError) -> Self {
         Stop::Fails(error)
+    }
+}
+
+/// Takes the optimum of a check in `i128`, or of the check in big integers when the first overflowed.
+///
+/// # Errors
+/// The identity that fails, or an optimum beyond `i128`.
+fn settle(
+    narrow: Result<i128, Stop>,
+    wide: impl FnOnce() -> Result<BigInt, Stop>,
+) -> Result<i128, CertificateError> {
+    match narrow {
+        Ok(value) => Ok(value),
+        Err(Stop::Fails(error)) => Err(error),
+        Err(Stop::Overflow) => {
+            let value = wide().map_err(Stop::into_error)?;
+            value.narrow().ok_or(CertificateError::Range { what: "the optimum".to_owned() })
+        }
     }
 }
 

@@ -8,11 +8,12 @@
 //!
 //! Uniqueness (see `nondegeneracy`) is proved by ranks modulo a prime.
 
-use num_bigint::BigInt;
 use serde::{Deserialize, Serialize};
 
 use super::entries::{EntrySum, value_on_factor, value_on_orthant, whole};
-use super::{CertificateError, Proof, RelaxationFact, Stop, Uniqueness, exact_float, expect_size};
+use super::{
+    CertificateError, Proof, RelaxationFact, Stop, Uniqueness, exact_float, expect_size, settle,
+};
 use crate::problem::exact::Whole;
 use crate::problem::{Factor, Problem};
 
@@ -82,15 +83,7 @@ impl DualPair {
     pub fn check(&self, problem: &Problem) -> Result<Proof, CertificateError> {
         self.check_shapes(problem)?;
         self.check_signs()?;
-        let optimum = match self.identities::<i128>(problem) {
-            Ok(value) => value,
-            Err(Stop::Fails(error)) => return Err(error),
-            Err(Stop::Overflow) => {
-                let value = self.identities::<BigInt>(problem).map_err(Stop::into_error)?;
-                let range = || CertificateError::Range { what: "the optimum".to_owned() };
-                value.narrow().ok_or_else(range)?
-            }
-        };
+        let optimum = settle(self.identities::<i128>(problem), || self.identities(problem))?;
         let uniqueness = self.primal_uniqueness(problem);
         let dual_uniqueness = self.dual_uniqueness(problem);
         let ranks: Vec<String> =

@@ -29,13 +29,12 @@
 //! `H_1' A*(dy) H_2 = 0`, so dy = 0; but S is negative at h_{r+1}. QED. Injectivity is proved by a
 //! rank modulo the prime 2^61 - 1.
 
-use num_bigint::BigInt;
 use serde::{Deserialize, Serialize};
 
 use super::entries::{EntrySum, value_on_factor, whole};
 use super::nondegeneracy::product;
 use super::{
-    CertificateError, IntegerFactor, Proof, RelaxationFact, Stop, Uniqueness, expect_size,
+    CertificateError, IntegerFactor, Proof, RelaxationFact, Stop, Uniqueness, expect_size, settle,
 };
 use crate::problem::exact::{ResidueColumns, Whole, multiply, residue};
 use crate::problem::{Coefficient, Factor, Functional, Problem};
@@ -62,15 +61,7 @@ impl RankBound {
         let rank = self.rank;
         self.check_form(problem)?;
         self.check_spectrum()?;
-        let optimum = match self.identities::<i128>(problem) {
-            Ok(value) => value,
-            Err(Stop::Fails(error)) => return Err(error),
-            Err(Stop::Overflow) => {
-                let value = self.identities::<BigInt>(problem).map_err(Stop::into_error)?;
-                let range = || CertificateError::Range { what: "the optimum".to_owned() };
-                value.narrow().ok_or_else(range)?
-            }
-        };
+        let optimum = settle(self.identities::<i128>(problem), || self.identities(problem))?;
         let next = self.spectrum.get(rank).copied();
         let uniqueness = match next {
             Some(next) if self.spectrum[rank - 1] == next => Uniqueness::NotProved,

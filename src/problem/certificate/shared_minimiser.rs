@@ -19,11 +19,10 @@
 //! F. Hamze et al., Physical Review E 97:043303, 2018); the proof is given because the program rests
 //! on it. Nothing is proved about other minimisers or about the relaxation.
 
-use num_bigint::BigInt;
 use serde::{Deserialize, Serialize};
 
 use super::entries::EntrySum;
-use super::{CertificateError, Proof, RelaxationFact, Stop, Uniqueness, expect_size};
+use super::{CertificateError, Proof, RelaxationFact, Stop, Uniqueness, expect_size, settle};
 use crate::problem::exact::Whole;
 use crate::problem::{Factor, Functional, Problem};
 
@@ -94,15 +93,7 @@ impl SharedMinimiser {
     pub fn check(&self, problem: &Problem) -> Result<Proof, CertificateError> {
         check_form(problem)?;
         self.check_parts(problem.blocks()[0].order)?;
-        let optimum = match self.identities::<i128>(problem) {
-            Ok(value) => value,
-            Err(Stop::Fails(error)) => return Err(error),
-            Err(Stop::Overflow) => {
-                let value = self.identities::<BigInt>(problem).map_err(Stop::into_error)?;
-                let range = || CertificateError::Range { what: "the optimum".to_owned() };
-                value.narrow().ok_or_else(range)?
-            }
-        };
+        let optimum = settle(self.identities::<i128>(problem), || self.identities(problem))?;
         let statement = format!(
             "the rank-one problem has the optimum {optimum}, attained by the planted sign vector \
              ({} cycles share this minimiser)",
