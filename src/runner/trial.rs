@@ -182,6 +182,12 @@ fn weigh(
         (Verdict::Infeasible, StopReason::DualInfeasible) => {
             (Verdict::Failed, "the method finds the relaxation dual infeasible")
         }
+        (_, StopReason::PrimalInfeasible) => {
+            (found, "the method finds the relaxation primal infeasible")
+        }
+        (_, StopReason::DualInfeasible) => {
+            (found, "the method finds the relaxation dual infeasible (its value unbounded)")
+        }
         _ => (found, ""),
     };
     let reason = if verdict == Verdict::Solved { "" } else { judgement.reason.as_str() };

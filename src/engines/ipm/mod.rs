@@ -30,7 +30,8 @@ use crate::problem::StopReason;
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Params {
     /// Stops when `max(phi, gap) < tolerance`, with `phi = max(||r_p|| / (1 + ||b||),
-    /// ||R_d||_F / (1 + ||C||_F))` and `gap = <X, S> / (1 + |<C, X>| + |b'y|)`, in scaled data.
+    /// ||R_d||_F / (1 + ||C||_F))` in scaled data and `gap = <X, S> / (1 + |<C, X>| + |b'y|)` in the
+    /// caller's units, so that scaling cannot hide a gap.
     pub tolerance: f64,
     /// Most iterations.
     pub max_iterations: usize,
@@ -53,7 +54,8 @@ pub enum Outcome {
     IterationLimit,
     /// The wall-time limit was reached; the best iterate is returned.
     TimeLimit,
-    /// `b'y > 0` and `||A*(y) + S||_F <= 1e-8 b'y`: the constraints cannot be met.
+    /// `b'y > 0` and `||C||_F + ||R_d||_F <= 1e-8 b'y` in scaled data, which bounds
+    /// `||A*(y) + S||_F` by the same: the constraints cannot be met.
     PrimalInfeasible,
     /// `<C, X> < 0` and `||A(X)|| <= -1e-8 <C, X>`: the value is unbounded or the dual infeasible.
     DualInfeasible,
