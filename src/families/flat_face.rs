@@ -31,7 +31,7 @@ static CARD: FamilyCard = FamilyCard {
     relaxation: Relaxation::Face,
     certificate: "dual pair, exact; the dimension of the face by a rank modulo 2^61 - 1",
     source: "own construction; ranks on faces after A. Barvinok, Discrete and Computational Geometry \
-        13:189-202, 1995, and G. Pataki, Mathematics of Operations Research 23:339-358, 1998",
+        13:189-202, 1995, and G. Pataki, Mathematics of Operations Research 23:339-358, 1998 (citation from memory)",
     parameters: &[
         SettingSpec {
             name: "order",

@@ -27,7 +27,7 @@ static CARD: FamilyCard = FamilyCard {
         possibly by others",
     relaxation: Relaxation::GapToTight,
     certificate: "shared minimiser, exact: the cycles sum to C and t attains each minimum",
-    source: "I. Hen et al., Physical Review A 92:042325, 2015, here on the complete graph",
+    source: "I. Hen et al., Physical Review A 92:042325, 2015, here on the complete graph (citation from memory)",
     parameters: &[
         SettingSpec {
             name: "order",

@@ -32,7 +32,7 @@ static CARD: FamilyCard = FamilyCard {
     optimum: "b'y + n^2 (l_1 + .. + l_r), attained by X* of rank r only",
     relaxation: Relaxation::Gap,
     certificate: "rank bound, exact; that the relaxation is strictly lower by a rank modulo 2^61 - 1",
-    source: "own construction on K. Fan, Proceedings of the National Academy of Sciences 35:652-655, 1949",
+    source: "own construction on K. Fan, Proceedings of the National Academy of Sciences 35:652-655, 1949 (citation from memory)",
     parameters: &[
         SettingSpec {
             name: "order",

@@ -19,7 +19,7 @@ static CARD: FamilyCard = FamilyCard {
     optimum: "2 sum over plaquettes of (-sum |J| + 2 min |J|), attained by tt' and possibly by others",
     relaxation: Relaxation::Gap,
     certificate: "shared minimiser, exact: the plaquettes sum to C and t attains each minimum",
-    source: "tile planting, F. Hamze et al., Physical Review E 97:043303, 2018",
+    source: "tile planting, F. Hamze et al., Physical Review E 97:043303, 2018 (citation from memory)",
     parameters: &[
         SettingSpec {
             name: "order",

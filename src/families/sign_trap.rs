@@ -34,7 +34,7 @@ static CARD: FamilyCard = FamilyCard {
     relaxation: Relaxation::Face,
     certificate: "dual pair, exact; that the face is this segment by a rank modulo 2^61 - 1",
     source: "own construction against the rule of A. Lemon, A. So, Y. Ye, Foundations and Trends in \
-        Optimization 2:1-156, 2016",
+        Optimization 2:1-156, 2016 (citation from memory)",
     parameters: &[
         SettingSpec {
             name: "order",

@@ -36,7 +36,7 @@ static CARD: FamilyCard = FamilyCard {
     certificate: "dual pair, exact; both nondegeneracies by ranks modulo 2^61 - 1 (an instance that \
         misses one is drawn again)",
     source: "own construction on the optimality and nondegeneracy conditions of F. Alizadeh, \
-        J.-P. Haeberly, M. Overton, Mathematical Programming 77:111-128, 1997",
+        J.-P. Haeberly, M. Overton, Mathematical Programming 77:111-128, 1997 (citation from memory)",
     parameters: &[
         SettingSpec {
             name: "order",
