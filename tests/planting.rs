@@ -57,6 +57,9 @@ fn sizes() -> Vec<(&'static str, Vec<(&'static str, Setting)>)> {
     for n in [16, 36, 400] {
         all.push(("lattice-tiles", order(n)));
     }
+    for (n, rank) in [(8, 2), (22, 2), (103, 3)] {
+        all.push(("localisation", vec![("order", integer(n)), ("rank", integer(rank))]));
+    }
     for (n, face) in [(6, 3), (20, 4), (60, 6)] {
         all.push(("sign-trap", vec![("order", integer(n)), ("face", integer(face))]));
     }
@@ -72,7 +75,7 @@ fn sizes() -> Vec<(&'static str, Vec<(&'static str, Setting)>)> {
 fn the_registry_is_sorted_and_every_family_plants_without_parameters() {
     let ids: Vec<&str> = registry().iter().map(|family| family.card().id).collect();
     assert!(ids.windows(2).all(|pair| pair[0] < pair[1]), "{ids:?}");
-    assert_eq!(ids.len(), 7);
+    assert_eq!(ids.len(), 8);
     for id in ids {
         let planted = plant(id, 1, &[]);
         assert_eq!(planted.certificate.check(&planted.problem).unwrap(), planted.proof);
@@ -164,6 +167,12 @@ fn what_each_family_promises_is_proved() {
             assert_eq!(planted.proof.dual_uniqueness, Uniqueness::Proved, "{id}");
             assert_eq!(planted.proof.relaxation, RelaxationFact::SameOptimum, "{id}");
             assert_eq!(planted.dual.as_ref().unwrap().len(), planted.problem.constraints().len());
+        }
+        for rank in [2, 3] {
+            let planted = plant("localisation", seed, &[("rank", integer(rank))]);
+            assert_eq!(planted.uniqueness, Uniqueness::Proved, "localisation, rank {rank}");
+            assert_eq!(planted.proof.relaxation, RelaxationFact::SameOptimum);
+            assert_eq!((planted.optimum, planted.point[0].width), (0.0, rank as usize));
         }
         for id in ["flat-face", "sign-trap"] {
             let planted = plant(id, seed, &[]);
@@ -321,6 +330,9 @@ fn a_change_of_one_unit_anywhere_is_rejected() {
         ("ky-fan-gap", vec![order(8)]),
         ("lattice-tiles", vec![order(16)]),
         ("lattice-tiles", vec![order(16), ("weights", word("mixed"))]),
+        // Extra ranges carry no stress, so that a changed one may leave another valid proof.
+        ("localisation", vec![order(7), ("extra", integer(0))]),
+        ("localisation", vec![order(8), ("rank", integer(3)), ("extra", integer(0))]),
         ("sign-trap", vec![order(8)]),
         ("tight-unique", vec![order(7)]),
         ("tight-unique", vec![order(6), ("measurements", word("dense"))]),

@@ -11,6 +11,7 @@ mod frustrated_loops;
 mod hadamard;
 mod ky_fan_gap;
 mod lattice_tiles;
+mod localisation;
 mod sign_trap;
 mod tight_unique;
 
@@ -19,6 +20,7 @@ pub use flat_face::FlatFace;
 pub use frustrated_loops::FrustratedLoops;
 pub use ky_fan_gap::KyFanGap;
 pub use lattice_tiles::LatticeTiles;
+pub use localisation::Localisation;
 pub use sign_trap::SignTrap;
 pub use tight_unique::TightUnique;
 
@@ -60,6 +62,7 @@ pub fn registry() -> &'static [&'static dyn Family] {
         &FrustratedLoops,
         &KyFanGap,
         &LatticeTiles,
+        &Localisation,
         &SignTrap,
         &TightUnique,
     ]
