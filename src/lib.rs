@@ -25,4 +25,5 @@ pub mod record;
 pub mod referee;
 pub mod runner;
 pub mod seed;
+pub mod stats;
 pub mod tables;

@@ -11,6 +11,7 @@ const IMPORTS: &[(&str, &str)] = &[
     ("seed", "-"),
     ("card", "-"),
     ("record", "-"),
+    ("stats", "-"),
     ("budget", "-"),
     ("problem", "linalg"),
     ("families", "problem, linalg, seed, card"),
