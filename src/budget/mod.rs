@@ -2,6 +2,9 @@
 //! trace sink. The clock is read here and in the runner only.
 
 pub mod memory;
+mod trace;
+
+pub use trace::TracePoint;
 
 use std::sync::Arc;
 use std::sync::atomic::{AtomicBool, Ordering};
@@ -51,19 +54,6 @@ pub enum Halt {
     Failed(String),
 }
 
-/// One point of a convergence trace. Absent figures are `None`.
-#[derive(Clone, Copy, Debug, Default, PartialEq)]
-pub struct TracePoint {
-    /// Flops so far.
-    pub flops: u64,
-    /// Objective of the iterate.
-    pub objective: Option<f64>,
-    /// Relative primal residual of the iterate, as the method measures it.
-    pub residual: Option<f64>,
-    /// Tail ratio of the iterate: eigenvalues beyond the target rank over the trace.
-    pub tail: Option<f64>,
-}
-
 /// Clock, limits, effort and trace of one running trial.
 #[derive(Debug)]
 pub struct Meter {
@@ -73,7 +63,7 @@ pub struct Meter {
     memory_at_start: i64,
     /// Work counts; engines add to them.
     pub effort: Effort,
-    trace: Option<Vec<TracePoint>>,
+    trace: Option<trace::Trace>,
 }
 
 /// Whether a trial keeps its convergence trace.
@@ -94,7 +84,7 @@ impl Meter {
             interrupt,
             memory_at_start: memory::begin(),
             effort: Effort::default(),
-            trace: (tracing == Tracing::On).then(Vec::new),
+            trace: (tracing == Tracing::On).then(trace::Trace::new),
         }
     }
 
@@ -155,8 +145,8 @@ impl Meter {
         }
     }
 
-    /// Takes the trace out.
+    /// Takes the trace out: at most about a thousand points, evenly thinned, the last always among them.
     pub fn take_trace(&mut self) -> Vec<TracePoint> {
-        self.trace.take().unwrap_or_default()
+        self.trace.take().map(trace::Trace::into_points).unwrap_or_default()
     }
 }

@@ -22,6 +22,7 @@ use crate::linalg::vector::{distance, dot, norm2};
 use crate::problem::{Factor, Operator, Problem, StopReason};
 use crate::seed::Stream;
 use certificate::{Certificate, CertificateParams, certify};
+use spheres::Whole;
 
 /// Whether the engine may work at a greater width for a while.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -170,9 +171,10 @@ fn solve_spheres(
         stop: StopReason::Converged,
     };
     let mut least = Some(f64::INFINITY);
+    let whole = if blocks.len() == 1 { Whole::Yes } else { Whole::No };
     for (k, block) in blocks.iter().enumerate() {
-        let width = params.widths[k];
-        let outcome = spheres::solve_block(block, &op.blocks[k], width, params, stream, meter);
+        let (operator, width) = (&op.blocks[k], params.widths[k]);
+        let outcome = spheres::solve_block(block, operator, width, whole, params, stream, meter);
         for (id, value) in outcome.multipliers {
             multipliers[id] = value;
         }

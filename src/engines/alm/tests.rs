@@ -272,7 +272,8 @@ fn the_trap_holds_at_width_two_and_lets_go_at_width_three() {
     let op = Operator::new(&problem);
     let blocks = spheres::cost::recognise(&problem, &op.blocks).unwrap();
     let mut meter = Meter::unlimited();
-    let params = spheres::trust::TrustParams { tolerance: 1e-12, outer: 100, inner: 100 };
+    let params =
+        spheres::trust::TrustParams { tolerance: 1e-12, outer: 100, inner: 100, constant: None };
     let objective = |q: &[f64], width: usize| {
         let mut image = vec![0.0; q.len()];
         blocks[0].product(q, width, &mut image);

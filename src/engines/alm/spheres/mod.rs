@@ -16,7 +16,7 @@ pub mod trust;
 use super::certificate::{CertificateParams, least_eigenpair};
 use super::start::{numerical_rank, principal, resized};
 use super::{AlmParams, Lift};
-use crate::budget::{Halt, Meter};
+use crate::budget::{Halt, Meter, TracePoint};
 use crate::linalg::lanczos::LanczosWorkspace;
 use crate::linalg::vector::{axpy, dot};
 use crate::problem::{BlockOperator, Factor};
@@ -75,6 +75,8 @@ struct Solver<'a> {
     trust: TrustWorkspace,
     lanczos: LanczosWorkspace,
     settled: bool,
+    /// Whether this block is the whole problem, so that its objective makes a trace.
+    traced: bool,
 }
 
 /// A point at some width with its objective.
@@ -84,11 +86,22 @@ struct Candidate {
     objective: f64,
 }
 
-/// Solves one block at `width`.
+/// Whether a block is the whole problem.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Whole {
+    /// It is.
+    Yes,
+    /// There are others.
+    No,
+}
+
+/// Solves one block at `width`. Only a block that is the whole problem leaves a trace: its rows are
+/// exact throughout, so the residual there is 0.
 pub fn solve_block(
     block: &SphereBlock,
     operator: &BlockOperator,
     width: usize,
+    whole: Whole,
     params: &AlmParams,
     stream: &mut Stream,
     meter: &mut Meter,
@@ -100,6 +113,7 @@ pub fn solve_block(
         trust: TrustWorkspace::default(),
         lanczos: LanczosWorkspace::new(),
         settled: true,
+        traced: whole == Whole::Yes,
     };
     let first = match params.lift {
         Lift::WhenNeeded => width.max(LEAST_LIFT.max(width + 1).min(rank_bound(block.order))),
@@ -225,6 +239,7 @@ impl Solver<'_> {
 
     fn sweeps(&self, q: &mut Factor, meter: &mut Meter) -> Result<(), Halt> {
         let mut image = vec![0.0; q.width];
+        let mut objective = if self.traced { self.objective(q) } else { 0.0 };
         let (mut count, flat) = (0, q.width == 1);
         loop {
             meter.check()?;
@@ -233,6 +248,11 @@ impl Solver<'_> {
             meter.effort.inner_steps += 1;
             meter.effort.operator_products += 1;
             meter.effort.flops += self.block.flops(q.width);
+            if self.traced {
+                objective -= fall;
+                let point = TracePoint { objective: Some(objective), ..TracePoint::default() };
+                meter.trace(TracePoint { residual: Some(0.0), ..point });
+            }
             let done = if flat { fall <= 0.0 } else { fall <= SWEEP_GAIN * self.block.scale() };
             if done || (!flat && count >= SWEEPS) || count >= 100 * SWEEPS {
                 return Ok(());
@@ -245,6 +265,7 @@ impl Solver<'_> {
             tolerance: tolerance.max(self.params.stationarity),
             outer: self.params.outer * 4,
             inner: self.params.inner,
+            constant: self.traced.then(|| self.block.constant()),
         };
         let ended =
             trust::minimise(self.block, &mut q.data, q.width, &params, &mut self.trust, meter);

@@ -8,7 +8,7 @@
 //! because rows keep their length and which does not cancel near a solution.
 
 use super::cost::SphereBlock;
-use crate::budget::{Halt, Meter};
+use crate::budget::{Halt, Meter, TracePoint};
 use crate::linalg::vector::{axpy, dot, norm2};
 use pulp::Arch;
 
@@ -31,6 +31,8 @@ pub struct TrustParams {
     pub outer: usize,
     /// Most products in one subproblem.
     pub inner: usize,
+    /// Added to <C, Q Q'> to give the objective of the trace; no trace is kept when there is none.
+    pub constant: Option<f64>,
 }
 
 /// How a run ended.
@@ -97,6 +99,10 @@ pub fn minimise(
     let scale: f64 = ws.weights.iter().sum::<f64>().sqrt();
     let (mut radius, largest) = (0.25 * scale, 2.0 * scale);
     for _ in 0..params.outer {
+        if let Some(constant) = params.constant {
+            let objective = Some(dot(q, &ws.image) + constant);
+            meter.trace(TracePoint { objective, residual: Some(0.0), ..TracePoint::default() });
+        }
         let goal = params.tolerance * norm2(&ws.y);
         if size <= goal {
             return TrustEnd::Converged;
