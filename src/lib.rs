@@ -27,3 +27,4 @@ pub mod runner;
 pub mod seed;
 pub mod stats;
 pub mod tables;
+pub mod verdicts;

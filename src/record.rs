@@ -7,7 +7,7 @@
 use serde::{Deserialize, Serialize};
 
 /// Version of the record layout. It changes when a column is added, dropped or changes its meaning.
-pub const SCHEMA: u32 = 1;
+pub const SCHEMA: u32 = 2;
 
 /// Returns the value when it is finite, and nothing otherwise; a negative zero becomes zero.
 pub fn measured(value: f64) -> Option<f64> {
@@ -361,6 +361,9 @@ pub struct RunHeader {
     pub imports: Vec<(String, String)>,
     /// Master seed.
     pub seed: u64,
+    /// 0 for the plan itself; round k has the instances k * count, ..., (k + 1) * count - 1 of every
+    /// combination, and no imported ones.
+    pub round: u64,
     /// Wall-time limit of a trial, in seconds.
     pub wall_limit_s: f64,
     /// Memory limit of a trial, in bytes.
@@ -371,6 +374,29 @@ pub struct RunHeader {
     pub methods: Vec<MethodRecord>,
     /// Number of trials the whole plan has.
     pub trials: u64,
+}
+
+/// One point of a convergence trace, as the method saw itself: a row of `traces/TRIAL.csv`.
+#[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct TraceRow {
+    /// Flops so far.
+    pub flops: u64,
+    /// Objective of the iterate.
+    pub objective: Option<f64>,
+    /// Relative primal residual of the iterate.
+    pub residual: Option<f64>,
+    /// Eigenvalues beyond the target rank over the trace of the iterate.
+    pub tail: Option<f64>,
+}
+
+/// The convergence trace of one trial.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Trace {
+    /// Id of the trial.
+    pub trial: String,
+    /// Points, in the order of the iterations.
+    pub rows: Vec<TraceRow>,
 }
 
 #[cfg(test)]

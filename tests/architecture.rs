@@ -23,7 +23,8 @@ const IMPORTS: &[(&str, &str)] = &[
         "problem, linalg::eigen, linalg::norms, linalg::compensated, linalg::Mat, linalg::MatRef",
     ),
     ("runner", "families, formats, methods, referee, problem, seed, budget, record, card"),
-    ("tables", "record"),
+    ("tables", "record, stats"),
+    ("verdicts", "record, stats"),
     ("cli", "*"),
 ];
 
@@ -32,7 +33,7 @@ const RESERVED: &[(&str, &[&str])] = &[
     ("println!", &["cli"]),
     ("print!(", &["cli"]),
     ("process::exit", &["cli"]),
-    ("std::fs", &["formats", "runner", "cli"]),
+    ("std::fs", &["formats", "runner", "verdicts", "cli"]),
     ("std::env", &["runner", "cli"]),
     ("Instant::now", &["budget", "runner"]),
     ("SystemTime", &["runner"]),

@@ -62,12 +62,18 @@ fn the_plan_that_the_broken_ones_come_from_runs() {
         let output = run_in(folder.path(), &["run", "valid.toml"]);
         assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
         let printed = String::from_utf8_lossy(&output.stdout).into_owned();
-        for title in
-            ["Accuracy by family and method", "Rank by family", "Runtime and effort by family"]
-        {
+        for title in [
+            "Accuracy by family and method",
+            "Rank by family",
+            "Runtime and memory",
+            "Effort by family",
+        ] {
             assert!(printed.contains(title), "{printed}");
         }
-        assert!(printed.ends_with(&format!("Run folder: runs/valid-{number}\n")), "{printed}");
+        assert!(
+            printed.contains(&format!("Report:  runs/valid-{number}/report.html\n")),
+            "{printed}"
+        );
         assert!(printed.lines().all(|line| line.chars().count() <= 100), "{printed}");
     }
     assert_eq!(entries(&folder.path().join("runs")), ["valid-1", "valid-2"]);

@@ -1,6 +1,8 @@
 //! Runs the plan of the README as a user does, and holds its records against what is promised of
 //! families and methods; and a large sparse instance from planting to certificate.
 
+mod browser;
+
 use std::collections::BTreeMap;
 use std::path::Path;
 use std::process::Command;
@@ -99,6 +101,60 @@ fn the_quick_plan_keeps_its_promises() {
     for family in ["lattice-tiles", "sign-trap"] {
         let steered = select(&trials, family, "ipm-tail-weight");
         assert!(2 * solved(&steered) >= steered.len(), "{family}: {}", solved(&steered));
+    }
+    everything_is_made_of(folder.path());
+}
+
+/// Runs the program in `folder` and returns its exit code and its standard output.
+fn program(folder: &Path, arguments: &[&str]) -> (Option<i32>, String) {
+    let output = Command::new(env!("CARGO_BIN_EXE_rankassay"))
+        .current_dir(folder)
+        .args(arguments)
+        .output()
+        .unwrap();
+    (output.status.code(), String::from_utf8(output.stdout).unwrap())
+}
+
+/// What is made of the records of the quick plan: tables in four formats, figures, a report that works in a
+/// browser, replays, gate and duel.
+fn everything_is_made_of(folder: &Path) {
+    for name in ["accuracy", "rank", "runtime", "effort", "relaxation", "failures", "instances"] {
+        for form in [".csv", "-stable.csv", ".md", ".tex", ".html"] {
+            let file = folder.join(format!("one/tables/{name}{form}"));
+            let text = std::fs::read_to_string(&file).unwrap();
+            assert!(text.len() > 200, "{}", file.display());
+        }
+    }
+    let figures: Vec<_> = std::fs::read_dir(folder.join("one/figures")).unwrap().collect();
+    assert!(figures.len() >= 8, "{} figures", figures.len());
+
+    let (code, out) = program(folder, &["replay", "two", "--every", "10"]);
+    assert_eq!(code, Some(0), "{out}");
+    assert!(out.contains("27 replayed: 27 identical"), "{out}");
+
+    let (code, _) = program(folder, &["gate", "one", "--baseline", "base", "--accept"]);
+    assert_eq!(code, Some(0));
+    let (code, out) = program(folder, &["gate", "two", "--baseline", "base"]);
+    assert_eq!(code, Some(0), "{out}");
+    assert!(out.starts_with("Gate PASSES: 0 regressed, 0 improved, 0 undecided"), "{out}");
+
+    let duel = ["duel", "one", "--incumbent", "relax-ipm", "--challenger", "factored-alm"];
+    let (code, out) = program(folder, &[&duel[..], &["--require", "adopt"]].concat());
+    assert_eq!(code, Some(0), "{out}");
+    assert!(out.contains("Decision: ADOPT"), "{out}");
+    assert!(folder.join("one/duels/factored-alm-against-relax-ipm.md").exists());
+    // Every command it prints works as it stands.
+    let command = out.lines().find(|line| line.contains(" replay ")).unwrap().trim();
+    let shell = Command::new("sh").arg("-c").arg(command).current_dir(folder).output().unwrap();
+    assert!(shell.status.success(), "{command}");
+    let swapped = ["duel", "one", "--incumbent", "factored-alm", "--challenger", "relax-ipm"];
+    let (code, out) = program(folder, &[&swapped[..], &["--require", "adopt"]].concat());
+    assert_eq!(code, Some(1), "{out}");
+    assert!(out.contains("Decision: KEEP"), "{out}");
+
+    // Last, because it says that it skips where there is no browser.
+    if let Some(browser) = browser::open(&folder.join("one/report.html")) {
+        browser::check_all(&browser);
     }
 }
 

@@ -372,7 +372,7 @@ fn only_a_selection_runs_and_resuming_adds_the_rest() {
     let methods: [&dyn Method; 1] = [&random];
     let plan = random_plan(&methods, 1);
     let out = folder.path().join("out");
-    let selection = Selection { only: Some(Pattern::new("balanced*twin")), shard: None };
+    let selection = Selection { only: Some(Pattern::new("balanced*twin")), ..Selection::default() };
     let first = run(&plan, &RunOptions { selection, ..options(Target::New(out.clone()), 2) });
     assert_eq!(first.records.len(), 4 * 2);
     assert!(
@@ -381,7 +381,7 @@ fn only_a_selection_runs_and_resuming_adds_the_rest() {
             .iter()
             .all(|record| record.family == "balanced-graph" && record.method == "twin")
     );
-    let nothing = Selection { only: Some(Pattern::new("nowhere")), shard: None };
+    let nothing = Selection { only: Some(Pattern::new("nowhere")), ..Selection::default() };
     let options_of_none =
         RunOptions { selection: nothing, ..options(Target::Resume(out.clone()), 2) };
     let error = runner::run(&plan, &options_of_none, &Silent::default()).unwrap_err();
@@ -401,17 +401,18 @@ fn shards_make_up_the_plan() {
     let mut runs = Vec::new();
     for part in 1..=3 {
         let out = folder.path().join(format!("part-{part}"));
-        let selection = Selection { only: None, shard: Some(format!("{part}/3").parse().unwrap()) };
+        let selection =
+            Selection { shard: Some(format!("{part}/3").parse().unwrap()), ..Selection::default() };
         run(&plan, &RunOptions { selection, ..options(Target::New(out.clone()), 1) });
         runs.push((out.display().to_string(), journal::read(&out).unwrap()));
     }
     runs.reverse();
-    let merged = runner::merge(&runs).unwrap();
+    let merged = runner::merge(runs.clone()).unwrap();
     let fresh = run(&plan, &options(Target::New(folder.path().join("fresh")), 1));
     assert_eq!(unmeasured(&merged.records), unmeasured(&fresh.records));
     assert_eq!(merged.instances, fresh.instances);
     runs.push(runs[0].clone());
-    assert!(runner::merge(&runs).unwrap_err().to_string().contains("both recorded"));
+    assert!(runner::merge(runs).unwrap_err().to_string().contains("both recorded"));
 }
 
 /// Runs the random plan whole and returns the folder and its journal's text.

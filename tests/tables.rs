@@ -152,6 +152,7 @@ fn with_input<T>(make: impl Fn(&Input<'_>) -> T) -> T {
         methods: &methods,
         wall_limit_s: 20.0,
         tolerance: [1e-6; 3],
+        traces: &[],
     })
 }
 
@@ -182,6 +183,65 @@ fn tables_as_csv() {
 }
 
 #[test]
+fn tables_as_latex() {
+    let text = with_input(|input| {
+        tables::all(input).iter().map(tables::Table::to_latex).collect::<Vec<_>>().join("\n")
+    });
+    for line in text.lines().filter(|line| line.ends_with("\\\\")) {
+        assert!(!line.contains(['<', '>', '|', '"']), "unescaped: {line}");
+    }
+    insta::assert_snapshot!("latex", text);
+}
+
+#[test]
+fn tables_as_html() {
+    let text = with_input(|input| tables::all(input)[0].to_html());
+    insta::assert_snapshot!("html", text.replace("><", ">\n<"));
+}
+
+#[test]
+fn every_column_is_explained_and_every_caption_says_its_sample() {
+    with_input(|input| {
+        for table in tables::all(input) {
+            assert!(table.caption.contains("Sample: 6 trials on 3 instances."), "{}", table.name);
+            let mut names: Vec<_> = table.columns.iter().map(|column| column.name).collect();
+            names.sort_unstable();
+            names.dedup();
+            assert_eq!(names.len(), table.columns.len(), "{}: a name twice", table.name);
+            for column in &table.columns {
+                assert!(column.help.len() > 8 && column.help.ends_with('.'), "{}", column.name);
+                // Times and memory say their unit where people read them.
+                let unit = ["seconds", "MiB"].iter().any(|unit| column.help.contains(unit));
+                assert!(column.nature == tables::Nature::Stable || unit, "{}", column.name);
+            }
+        }
+    });
+}
+
+#[test]
+fn long_tables_are_cut_for_people_and_whole_in_csv() {
+    let (records, instances, methods) = scene();
+    let many: Vec<Record> = (0..2500)
+        .map(|number| Record { trial: format!("{number:04}-x"), ..records[number % 6].clone() })
+        .collect();
+    let input = Input {
+        records: &many,
+        instances: &instances,
+        methods: &methods,
+        wall_limit_s: 20.0,
+        tolerance: [1e-6; 3],
+        traces: &[],
+    };
+    let table = tables::all(&input).pop().unwrap();
+    assert_eq!(table.to_csv().lines().count(), 2501);
+    let said = "The first 2000 of 2500 rows; all are in instances.csv.";
+    for text in [table.to_markdown(), table.to_latex(), table.to_html()] {
+        assert!(text.contains(said));
+    }
+    assert_eq!(table.to_html().matches("<tr>").count(), 2001);
+}
+
+#[test]
 fn stable_tables_hold_no_time_and_no_memory() {
     let (records, instances, methods) = scene();
     let slower: Vec<Record> = records
@@ -200,6 +260,7 @@ fn stable_tables_hold_no_time_and_no_memory() {
             methods: &methods,
             wall_limit_s: 20.0,
             tolerance: [1e-6; 3],
+            traces: &[],
         };
         tables::all(&input).iter().map(|table| table.stable().to_csv()).collect::<Vec<_>>()
     };
@@ -222,6 +283,7 @@ fn long_names_are_cut_on_the_terminal_and_kept_in_files() {
         methods: &methods,
         wall_limit_s: 20.0,
         tolerance: [1e-6; 3],
+        traces: &[],
     };
     let text = tables::summary(&input);
     assert!(text.lines().all(|line| line.chars().count() <= tables::TEXT_WIDTH), "{text}");
@@ -236,10 +298,11 @@ fn nothing_recorded_makes_empty_tables() {
         methods: &[],
         wall_limit_s: 1.0,
         tolerance: [1e-6; 3],
+        traces: &[],
     };
     for table in tables::all(&input) {
         assert!(table.rows.is_empty());
         assert_eq!(table.to_csv().lines().count(), 1);
     }
-    assert!(tables::summary(&input).contains("0 trials on 0 instances"));
+    assert!(tables::summary(&input).contains("Sample: 0 trials on 0 instances."));
 }

@@ -1,24 +1,32 @@
 //! The command line: one file a subcommand. Only here is anything printed, and only here does the
 //! process end.
 //!
-//! Exit codes: 0 done; 1 a defect of this program was found (a contradiction with a certificate); 2 bad
+//! Exit codes: 0 done and holds; 1 gate or replay found a difference, a duel is not won, or a defect of this
+//! program was found (a contradiction with a certificate); 2 bad
 //! usage or bad input; 3 the run ended but some trials crashed or gave malformed answers; 130
 //! interrupted.
 
+mod duel;
+mod gate;
 mod inspect;
 mod output;
 mod plant;
 mod progress;
 mod referee;
+mod replay;
 mod report;
+mod results;
 mod roster;
 mod run;
 mod tabulate;
 
 use std::process::ExitCode;
+use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
 
 use clap::{Parser, Subcommand};
 
+use output::tell;
 use report::Failure;
 
 /// Plants semidefinite programs whose low-rank optimum is proved, runs heuristics on them under equal
@@ -41,10 +49,16 @@ struct Arguments {
 
 #[derive(Debug, Subcommand)]
 enum Command {
-    /// Runs every trial of a plan, then writes and prints its tables
+    /// Runs every trial of a plan, then writes its tables, figures and report
     Run(run::Run),
-    /// Merges run folders and writes their tables
+    /// Merges run folders and writes their tables, figures and report
     Tabulate(tabulate::Tabulate),
+    /// Compares a challenger with an incumbent on the same instances: adopt, keep or undecided
+    Duel(duel::Duel),
+    /// Holds a run against a stored baseline
+    Gate(gate::Gate),
+    /// Runs recorded trials again from their seeds and compares
+    Replay(replay::Replay),
     /// Writes one instance of a family, with its certificate
     Plant(plant::Plant),
     /// Shows sizes, sparsity, rank bound, certificate and digest of an instance file
@@ -78,6 +92,9 @@ pub fn main() -> ExitCode {
     let ended = match arguments.command {
         Command::Run(command) => run::execute(&command, loudness, bar),
         Command::Tabulate(command) => tabulate::execute(&command, loudness),
+        Command::Duel(command) => duel::execute(&command, loudness, bar),
+        Command::Gate(command) => gate::execute(&command, loudness),
+        Command::Replay(command) => replay::execute(&command, loudness),
         Command::Plant(command) => plant::execute(&command, loudness),
         Command::Inspect(command) => inspect::execute(&command),
         Command::Referee(command) => referee::execute(&command),
@@ -89,4 +106,21 @@ pub fn main() -> ExitCode {
     }
 }
 
+/// Exit code of an interrupted command.
+const INTERRUPTED: u8 = 130;
+
 type Ended = Result<ExitCode, Failure>;
+
+/// Sets the flag on Ctrl-C or a request to end; a second one ends the process at once, which the
+/// journal survives.
+fn listen(interrupt: &Arc<AtomicBool>) -> Result<(), Failure> {
+    let flag = Arc::clone(interrupt);
+    let handler = move || {
+        if flag.swap(true, Ordering::Relaxed) {
+            std::process::exit(i32::from(INTERRUPTED));
+        }
+        tell("interrupted: waiting for the running trials to notice (again to end at once)");
+    };
+    ctrlc::set_handler(handler)
+        .map_err(|error| Failure::input(format!("signals cannot be handled: {error}")))
+}

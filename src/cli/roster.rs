@@ -1,5 +1,7 @@
 //! `rankassay roster`.
 
+use std::collections::BTreeSet;
+
 use clap::Args;
 use serde_json::{Value, json};
 
@@ -7,6 +9,7 @@ use super::Ended;
 use super::output::say_and_end;
 use super::report::Failure;
 use crate::card::{FamilyCard, MethodCard, SettingSpec, nearest_word};
+use crate::tables::report::CardText;
 use crate::{families, methods};
 
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -167,6 +170,20 @@ impl Card {
         Value::Object(object)
     }
 
+    fn for_report(&self) -> CardText {
+        let lines = self.lines().into_iter().skip(3);
+        let settings = self.settings().1.iter().map(|spec| {
+            let values = format!("{}; default {}", spec.kind, spec.default.setting());
+            [spec.name.to_owned(), values, spec.meaning.to_owned()]
+        });
+        CardText {
+            id: self.id().to_owned(),
+            title: self.title().to_owned(),
+            fields: lines.map(|(name, text)| (name.to_owned(), text.to_owned())).collect(),
+            settings: settings.collect(),
+        }
+    }
+
     fn text(&self) -> String {
         let mut out = format!("{}: {}\n\n", self.id(), self.title());
         for (name, text) in self.lines().into_iter().skip(3) {
@@ -183,6 +200,18 @@ impl Card {
         }
         out
     }
+}
+
+/// Lists the cards of the families with the given ids, for the report.
+pub(super) fn family_cards(ids: &BTreeSet<&str>) -> Vec<CardText> {
+    let cards = crate::families::registry().iter().map(|family| Card::Family(family.card()));
+    cards.filter(|card| ids.contains(card.id())).map(|card| card.for_report()).collect()
+}
+
+/// Lists the cards of the methods with the given ids, for the report.
+pub(super) fn method_cards(ids: &BTreeSet<&str>) -> Vec<CardText> {
+    let cards = crate::methods::registry().iter().map(|method| Card::Method(method.card()));
+    cards.filter(|card| ids.contains(card.id())).map(|card| card.for_report()).collect()
 }
 
 /// Wraps a text to lines of at most 100 characters, indented by two.

@@ -3,14 +3,14 @@
 use std::path::{Path, PathBuf};
 use std::process::ExitCode;
 use std::sync::Arc;
-use std::sync::atomic::{AtomicBool, Ordering};
+use std::sync::atomic::AtomicBool;
 
 use clap::Args;
 
 use super::output::{say, tell};
 use super::progress::{Bar, Progress};
 use super::report::Failure;
-use super::{Ended, Loudness, tabulate};
+use super::{Ended, INTERRUPTED, Loudness, listen, results};
 use crate::runner::{
     self, Ending, Outcome, Pattern, Plan, Roster, RunOptions, Selection, Shard, Target,
     latest_folder,
@@ -19,9 +19,6 @@ use crate::tables;
 
 /// Exit code of a run some of whose trials could not be judged.
 const UNJUDGED: u8 = 3;
-
-/// Exit code of an interrupted run.
-const INTERRUPTED: u8 = 130;
 
 /// Folder that holds the run folders when none is given.
 const RUNS: &str = "runs";
@@ -60,7 +57,11 @@ pub(super) fn execute(command: &Run, loudness: Loudness, bar: Bar) -> Ended {
     let options = RunOptions {
         target: target(command)?,
         jobs: command.jobs.map(usize::from),
-        selection: Selection { only: command.only.as_deref().map(Pattern::new), shard },
+        selection: Selection {
+            only: command.only.as_deref().map(Pattern::new),
+            shard,
+            methods: None,
+        },
         interrupt,
     };
     let progress = Progress::new(loudness, bar);
@@ -98,20 +99,6 @@ fn target(command: &Run) -> Result<Target, Failure> {
             })
         }
     }
-}
-
-/// Sets the flag on Ctrl-C or a request to end; a second one ends the process at once, which the
-/// journal survives.
-fn listen(interrupt: &Arc<AtomicBool>) -> Result<(), Failure> {
-    let flag = Arc::clone(interrupt);
-    let handler = move || {
-        if flag.swap(true, Ordering::Relaxed) {
-            std::process::exit(i32::from(INTERRUPTED));
-        }
-        tell("interrupted: waiting for the running trials to notice (again to end at once)");
-    };
-    ctrlc::set_handler(handler)
-        .map_err(|error| Failure::input(format!("signals cannot be handled: {error}")))
 }
 
 /// Says how far the run came and how to go on.
@@ -152,19 +139,14 @@ fn quoted(word: &str) -> String {
     }
 }
 
-/// Writes the tables, prints the summary and chooses the exit code.
+/// Writes tables, figures and report, prints the summary and chooses the exit code.
 fn finish(outcome: &Outcome, loudness: Loudness) -> Ended {
-    let input = tables::Input {
-        records: &outcome.records,
-        instances: &outcome.instances,
-        methods: &outcome.header.methods,
-        wall_limit_s: outcome.header.wall_limit_s,
-        tolerance: outcome.header.tolerance,
-    };
-    tabulate::write_tables(&input, &outcome.folder)?;
+    let loaded = results::load(std::slice::from_ref(&outcome.folder), Loudness::Quiet)?;
+    results::write(&loaded, &outcome.folder)?;
     let unjudged = outcome.records.iter().filter(|record| record.verdict.is_unjudged()).count();
     if loudness != Loudness::Quiet {
-        say(&format!("{}\nRun folder: {}\n", tables::summary(&input), outcome.folder.display()))?;
+        let written = results::written(&outcome.folder);
+        say(&format!("{}\n{written}", tables::summary(&loaded.input())))?;
     }
     if unjudged > 0 {
         let table = outcome.folder.join("tables").join("failures.md");

@@ -92,14 +92,16 @@ impl Family for Localisation {
     }
 }
 
+/// An affine dependency: nodes and their weights.
+type Dependency = Vec<(usize, i64)>;
+
 /// Anchors first, then sensors.
 struct Network {
     dimension: usize,
     places: Vec<Vec<i64>>,
     /// Measured pairs (i, l), i < l, with the stress on them.
     ranges: BTreeMap<(usize, usize), i64>,
-    /// Affine dependencies as lists of (node, weight).
-    dependencies: Vec<Vec<(usize, i64)>>,
+    dependencies: Vec<Dependency>,
 }
 
 impl Network {
@@ -154,7 +156,7 @@ impl Network {
         base: &[usize],
         side: i64,
         node: usize,
-    ) -> Result<(Vec<i64>, Vec<(usize, i64)>), PlantError> {
+    ) -> Result<(Vec<i64>, Dependency), PlantError> {
         for _ in 0..TRIES {
             let place: Vec<i64> = (0..self.dimension).map(|_| stream.between(0, side)).collect();
             if self.places.contains(&place) {

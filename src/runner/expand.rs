@@ -80,7 +80,7 @@ impl Expansion {
     pub(super) fn new(plan: &Plan<'_>) -> Self {
         let mut instances = Vec::new();
         for (at, sown) in plan.sown.iter().enumerate() {
-            for index in 0..sown.count {
+            for index in plan.round * sown.count..(plan.round + 1) * sown.count {
                 instances.push(InstanceSpec {
                     id: sown_id(sown, index),
                     origin: Origin::Sown(at, index),
@@ -101,10 +101,11 @@ impl Expansion {
             instances.push(InstanceSpec { id, origin: Origin::Imported(at) });
         }
         let mut trials = Vec::new();
+        let earlier = plan.round * plan.trial_count();
         for (at, instance) in instances.iter().enumerate() {
             for (entrant, method) in plan.entrants.iter().enumerate() {
                 for repeat in 1..=plan.repeats {
-                    let number = trials.len() + 1;
+                    let number = earlier + trials.len() as u64 + 1;
                     let mut id = format!("{number:04}-{}-{}", instance.id, method.label);
                     if plan.repeats > 1 {
                         id.push_str(&format!("-{repeat}"));
@@ -199,6 +200,7 @@ impl Expansion {
             plan_digest: plan.digest.clone(),
             imports,
             seed: plan.seed,
+            round: plan.round,
             wall_limit_s: plan.budget.wall.as_secs_f64(),
             memory_limit: plan.budget.memory,
             tolerance: [tolerance.feasibility, tolerance.objective, tolerance.rank],

@@ -6,7 +6,7 @@ use serde::Serialize;
 
 use super::Observer;
 use super::journal::{self, Contents, Journal, JournalError};
-use crate::record::RunHeader;
+use crate::record::{RunHeader, Trace, TraceRow};
 
 /// Which folder a run writes to.
 #[derive(Clone, Debug, PartialEq, Eq)]
@@ -142,6 +142,48 @@ pub(super) fn write_rows<T: Serialize>(
     }
     let bytes = writer.into_inner().expect("memory takes the rows");
     write_whole(&path, &String::from_utf8(bytes).expect("records are text"))
+}
+
+/// Folder of the traces in a run folder.
+const TRACES: &str = "traces";
+
+/// Writes the trace of one trial.
+pub(super) fn write_trace(
+    folder: &Path,
+    trial: &str,
+    rows: &[TraceRow],
+) -> Result<(), FolderError> {
+    let traces = folder.join(TRACES);
+    std::fs::create_dir_all(&traces).map_err(refused(&traces))?;
+    write_rows(&traces, &format!("{trial}.csv"), rows)
+}
+
+/// Reads the traces of a run folder, in the order of their trials' ids; none when there are none.
+///
+/// # Errors
+/// A file is unreadable or not a trace.
+pub fn read_traces(folder: &Path) -> Result<Vec<Trace>, FolderError> {
+    let traces = folder.join(TRACES);
+    let entries = match std::fs::read_dir(&traces) {
+        Ok(entries) => entries,
+        Err(error) if error.kind() == std::io::ErrorKind::NotFound => return Ok(Vec::new()),
+        Err(error) => return Err(refused(&traces)(error)),
+    };
+    let mut read = Vec::new();
+    for entry in entries {
+        let path = entry.map_err(refused(&traces))?.path();
+        let name = path.file_name().unwrap_or_default().to_string_lossy().into_owned();
+        let Some(trial) = name.strip_suffix(".csv") else { continue };
+        let wrong = |error: csv::Error| FolderError::System {
+            path: path.display().to_string(),
+            reason: format!("not a trace: {error}"),
+        };
+        let mut reader = csv::Reader::from_path(&path).map_err(wrong)?;
+        let rows = reader.deserialize().collect::<Result<Vec<TraceRow>, _>>().map_err(wrong)?;
+        read.push(Trace { trial: trial.to_owned(), rows });
+    }
+    read.sort_by(|a, b| a.trial.cmp(&b.trial));
+    Ok(read)
 }
 
 /// Writes files, name and text, into `folder`, which is made when it does not exist.

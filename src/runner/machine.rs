@@ -3,17 +3,23 @@
 use std::collections::BTreeMap;
 use std::time::{SystemTime, UNIX_EPOCH};
 
-use serde::Serialize;
+use serde::{Deserialize, Serialize};
 
 /// A machine, as far as it matters to times.
-#[derive(Clone, Debug, Serialize)]
-pub(super) struct Machine {
-    system: &'static str,
-    architecture: &'static str,
-    processor: Option<String>,
-    features: Vec<&'static str>,
-    cores: usize,
-    memory_bytes: Option<u64>,
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Machine {
+    /// Operating system.
+    pub system: String,
+    /// Instruction set.
+    pub architecture: String,
+    /// Name of the processor, where the system tells it.
+    pub processor: Option<String>,
+    /// Vector instructions that dense kernels choose between.
+    pub features: Vec<String>,
+    /// Cores this process may use.
+    pub cores: usize,
+    /// Memory of the machine, in bytes.
+    pub memory_bytes: Option<u64>,
 }
 
 /// Returns the number of cores this process may use, at least one.
@@ -28,10 +34,10 @@ pub(super) fn describe() -> Machine {
     let kilobytes =
         memory.get("MemTotal").and_then(|text| text.split(' ').next()?.parse::<u64>().ok());
     Machine {
-        system: std::env::consts::OS,
-        architecture: std::env::consts::ARCH,
+        system: std::env::consts::OS.to_owned(),
+        architecture: std::env::consts::ARCH.to_owned(),
         processor: cpu.get("model name").cloned(),
-        features: features(),
+        features: features().into_iter().map(str::to_owned).collect(),
         cores: cores(),
         memory_bytes: kilobytes.map(|kilobytes| kilobytes * 1024),
     }

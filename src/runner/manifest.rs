@@ -2,36 +2,97 @@
 
 use std::path::Path;
 
-use serde::Serialize;
-use serde_json::{Value, json};
+use serde::{Deserialize, Serialize};
 
+use super::calibration::calibrate;
 use super::folder::{FolderError, write_whole};
 use super::machine::{self, Machine};
 use super::plan::Plan;
-use crate::record::RunHeader;
+use crate::record::{MethodRecord, RunHeader};
 
 const FILE: &str = "manifest.json";
 
 /// One stretch of running: a run that was interrupted and resumed has several.
-#[derive(Clone, Debug, Serialize)]
-struct Stretch {
-    started: String,
-    ended: Option<String>,
-    version: &'static str,
-    commit: Option<&'static str>,
-    threads: usize,
-    machine: Machine,
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Stretch {
+    /// When it began, as `YYYY-MM-DDThh:mm:ssZ`.
+    pub started: String,
+    /// When it ended; none when it was killed.
+    pub ended: Option<String>,
+    /// Version of this program.
+    pub version: String,
+    /// Commit it was built from, where the build was told.
+    pub commit: Option<String>,
+    /// Number of trials at a time.
+    pub threads: usize,
+    /// Processor time of the fixed calibration work, in seconds.
+    pub calibration_s: Option<f64>,
+    /// The machine.
+    pub machine: Machine,
 }
 
-/// A manifest that is being kept.
-#[derive(Debug)]
-pub(super) struct Manifest {
-    head: Value,
-    earlier: Vec<Value>,
-    stretch: Stretch,
+impl Stretch {
+    /// Describes a stretch that begins now, here; the calibration is left out.
+    pub(super) fn now(threads: usize) -> Self {
+        Stretch {
+            started: machine::now(),
+            ended: None,
+            version: env!("CARGO_PKG_VERSION").to_owned(),
+            // Set by whoever builds from a repository; a plain build does not know its commit.
+            commit: option_env!("RANKASSAY_COMMIT").map(str::to_owned),
+            threads,
+            calibration_s: None,
+            machine: machine::describe(),
+        }
+    }
+}
+
+/// What a manifest says.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Manifest {
+    /// Record layout.
+    pub schema: u32,
+    /// Title of the plan.
+    pub title: String,
+    /// Plan file, as it was given.
+    pub plan_file: String,
+    /// SHA-256 of the plan's text, in hexadecimal digits.
+    pub plan_digest: String,
+    /// The plan's text.
+    pub plan: String,
+    /// Master seed.
+    pub seed: u64,
+    /// Which continuation of the plan; 0 for the plan itself.
+    pub round: u64,
+    /// Number of trials the whole plan has.
+    pub trials: u64,
+    /// Imported files by their path in the plan and the SHA-256 of their bytes.
+    pub imports: Vec<(String, String)>,
+    /// Methods in plan order.
+    pub methods: Vec<MethodRecord>,
+    /// Wall-time limit of a trial, in seconds.
+    pub wall_limit_s: f64,
+    /// Memory limit of a trial, in bytes.
+    pub memory_limit: Option<u64>,
+    /// Feasibility, objective and rank tolerance of the referee.
+    pub tolerance: [f64; 3],
+    /// The stretches of running, in their order.
+    pub stretches: Vec<Stretch>,
 }
 
 impl Manifest {
+    /// Reads the manifest of a run folder.
+    ///
+    /// # Errors
+    /// There is none, or it is not what this program writes.
+    pub fn read(folder: &Path) -> Result<Self, FolderError> {
+        let path = folder.join(FILE);
+        let refused =
+            |reason: String| FolderError::System { path: path.display().to_string(), reason };
+        let text = std::fs::read_to_string(&path).map_err(|error| refused(error.to_string()))?;
+        serde_json::from_str(&text).map_err(|error| refused(format!("not a manifest: {error}")))
+    }
+
     /// Writes the manifest at the start of a run; earlier stretches of the folder are kept.
     pub(super) fn begin(
         folder: &Path,
@@ -39,51 +100,39 @@ impl Manifest {
         header: &RunHeader,
         threads: usize,
     ) -> Result<Self, FolderError> {
-        let earlier = std::fs::read_to_string(folder.join(FILE))
-            .ok()
-            .and_then(|text| serde_json::from_str::<Value>(&text).ok())
-            .and_then(|manifest| manifest.get("stretches")?.as_array().cloned())
-            .unwrap_or_default();
-        let head = json!({
-            "schema": header.schema,
-            "title": header.title,
-            "plan_file": plan.file_name,
-            "plan_digest": header.plan_digest,
-            "plan": plan.text,
-            "seed": header.seed,
-            "trials": header.trials,
-            "imports": header.imports,
-            "methods": header.methods,
-            "wall_limit_s": header.wall_limit_s,
-            "memory_limit": header.memory_limit,
-            "tolerance": header.tolerance,
-        });
-        let stretch = Stretch {
-            started: machine::now(),
-            ended: None,
-            version: env!("CARGO_PKG_VERSION"),
-            // Set by whoever builds from a repository; a plain build does not know its commit.
-            commit: option_env!("RANKASSAY_COMMIT"),
-            threads,
-            machine: machine::describe(),
+        let mut stretches =
+            Manifest::read(folder).map_or_else(|_| Vec::new(), |before| before.stretches);
+        stretches.push(Stretch { calibration_s: calibrate(), ..Stretch::now(threads) });
+        let manifest = Manifest {
+            schema: header.schema,
+            title: header.title.clone(),
+            plan_file: plan.file_name.clone(),
+            plan_digest: header.plan_digest.clone(),
+            plan: plan.text.clone(),
+            seed: header.seed,
+            round: header.round,
+            trials: header.trials,
+            imports: header.imports.clone(),
+            methods: header.methods.clone(),
+            wall_limit_s: header.wall_limit_s,
+            memory_limit: header.memory_limit,
+            tolerance: header.tolerance,
+            stretches,
         };
-        let manifest = Manifest { head, earlier, stretch };
         manifest.write(folder)?;
         Ok(manifest)
     }
 
     /// Writes the end of the run.
     pub(super) fn end(mut self, folder: &Path) -> Result<(), FolderError> {
-        self.stretch.ended = Some(machine::now());
+        if let Some(stretch) = self.stretches.last_mut() {
+            stretch.ended = Some(machine::now());
+        }
         self.write(folder)
     }
 
     fn write(&self, folder: &Path) -> Result<(), FolderError> {
-        let mut whole = self.head.clone();
-        let mut stretches = self.earlier.clone();
-        stretches.push(json!(self.stretch));
-        whole["stretches"] = Value::Array(stretches);
-        let text = serde_json::to_string_pretty(&whole).expect("a manifest is plain data");
+        let text = serde_json::to_string_pretty(self).expect("a manifest is plain data");
         write_whole(&folder.join(FILE), &format!("{text}\n"))
     }
 }

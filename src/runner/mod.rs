@@ -4,6 +4,7 @@
 //! Nothing here solves, judges or makes a table, and nothing here prints: whoever runs a plan hears of
 //! its course through an [`Observer`].
 
+mod calibration;
 mod expand;
 mod folder;
 mod instance;
@@ -13,15 +14,21 @@ mod machine;
 mod manifest;
 mod merge;
 mod plan;
+mod replay;
 mod schedule;
 mod selection;
 mod trial;
 
-pub use folder::{FolderError, Target, latest_folder, write_files};
+pub use folder::{FolderError, Target, latest_folder, read_traces, write_files};
 pub use instance::{InputError, Instance, Knowledge, plant, read_instance};
 pub use journal::{Contents, JournalError};
+pub use machine::Machine;
+pub use manifest::{Manifest, Stretch};
 pub use merge::{MergeError, Merged, merge};
-pub use plan::{Entrant, Imported, Located, Plan, PlanError, ReportedOptimum, Roster, Sown, Span};
+pub use plan::{
+    Entrant, Imported, Located, Plan, PlanError, ReportedOptimum, Roster, Sown, Span, Traced,
+};
+pub use replay::{Agreement, Difference, Recorded, Replay, ReplayError};
 pub use selection::{Pattern, Selection, Shard};
 
 use std::path::PathBuf;
@@ -180,6 +187,7 @@ pub fn run(
         expansion: &expansion,
         selected: &selected,
         before: &before,
+        folder: &folder,
         journal: &journal,
         pool: &pool,
         interrupt: &options.interrupt,

@@ -2,6 +2,7 @@
 //! when its first trial starts and dropped when its last one ends.
 
 use std::collections::{BTreeMap, BTreeSet};
+use std::path::Path;
 use std::sync::atomic::{AtomicBool, AtomicUsize, Ordering};
 use std::sync::{Arc, Mutex, PoisonError};
 
@@ -10,7 +11,7 @@ use super::instance::Instance;
 use super::journal::{Contents, Journal, JournalError};
 use super::plan::Plan;
 use super::trial::{self, TrialEnd};
-use super::{Observer, RunError};
+use super::{Observer, RunError, folder};
 use crate::record::{InstanceRecord, Record};
 
 /// What is to be run, and with what.
@@ -19,6 +20,7 @@ pub(super) struct Work<'w> {
     pub(super) expansion: &'w Expansion,
     pub(super) selected: &'w [usize],
     pub(super) before: &'w Contents,
+    pub(super) folder: &'w Path,
     pub(super) journal: &'w Journal,
     pub(super) pool: &'w rayon::ThreadPool,
     pub(super) interrupt: &'w Arc<AtomicBool>,
@@ -109,7 +111,10 @@ impl Desk<'_> {
         let instance = self.take(spec.instance)?;
         match trial::execute(self.work.plan, spec, &instance, self.work.interrupt)? {
             TrialEnd::Interrupted => Ok(()),
-            TrialEnd::Recorded(record) => {
+            TrialEnd::Recorded(record, trace) => {
+                if !trace.is_empty() {
+                    folder::write_trace(self.work.folder, &record.trial, &trace)?;
+                }
                 self.work.journal.trial(&record)?;
                 self.work.observer.finished(&record);
                 self.log.lock().unwrap_or_else(PoisonError::into_inner).records.push(*record);

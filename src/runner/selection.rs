@@ -81,19 +81,22 @@ impl FromStr for Shard {
     }
 }
 
-/// Which trials of a plan are run: those that pass both tests.
+/// Which trials of a plan are run: those that pass every test.
 #[derive(Clone, Debug, Default, PartialEq, Eq)]
 pub struct Selection {
     /// Pattern to match, if any.
     pub only: Option<Pattern>,
     /// Part of the plan, if not the whole.
     pub shard: Option<Shard>,
+    /// Labels of the methods, if not all.
+    pub methods: Option<Vec<String>>,
 }
 
 impl Selection {
     /// Returns whether a trial is selected.
     pub fn takes(&self, instance: &str, method: &str) -> bool {
         self.shard.is_none_or(|shard| shard.takes(instance))
+            && self.methods.as_ref().is_none_or(|labels| labels.iter().any(|label| label == method))
             && self.only.as_ref().is_none_or(|only| only.matches(&format!("{instance} {method}")))
     }
 }

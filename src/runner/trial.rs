@@ -10,18 +10,18 @@ use super::RunError;
 use super::expand::TrialSpec;
 use super::instance::Instance;
 use super::isolation::guarded;
-use super::plan::{Entrant, Plan};
-use crate::budget::{Budget, Effort, Halt, Meter, Tracing};
+use super::plan::{Entrant, Plan, Traced};
+use crate::budget::{Budget, Effort, Halt, Meter, TracePoint, Tracing};
 use crate::methods::Trial;
 use crate::problem::{Answer, StopReason};
-use crate::record::{Cost, Figures, Identity, Record, Verdict, Work};
+use crate::record::{Cost, Figures, Identity, Record, TraceRow, Verdict, Work, measured};
 use crate::referee::{self, Finding, Judgement};
 use crate::seed::Stream;
 
 /// How a trial ended.
 pub(super) enum TrialEnd {
-    /// With a record.
-    Recorded(Box<Record>),
+    /// With a record, and with a trace when the plan asks for one.
+    Recorded(Box<Record>, Vec<TraceRow>),
     /// By an interruption of the run: there is nothing to record.
     Interrupted,
 }
@@ -32,6 +32,7 @@ struct Played {
     wall: Duration,
     cost: Cost,
     effort: Effort,
+    trace: Vec<TraceRow>,
 }
 
 /// Outcome of a trial before it is put into a record.
@@ -54,7 +55,8 @@ pub(super) fn execute(
 ) -> Result<TrialEnd, RunError> {
     let entrant = &plan.entrants[spec.entrant];
     let stream = method_stream(plan, spec, entrant, &instance.record.digest);
-    let played = play(plan, entrant, instance, stream, interrupt);
+    let tracing = tracing(plan, spec, instance);
+    let played = play(plan, entrant, instance, stream, interrupt, tracing);
     // A method that noticed the interruption may have ended early in any way.
     if interrupt.load(Ordering::Relaxed) {
         return Ok(TrialEnd::Interrupted);
@@ -96,7 +98,7 @@ pub(super) fn execute(
         Some(work(&played.effort)),
         &outcome.message,
     );
-    Ok(TrialEnd::Recorded(Box::new(record)))
+    Ok(TrialEnd::Recorded(Box::new(record), played.trace))
 }
 
 /// Opens the method's stream. It depends on the instance's data, the method, its options and the
@@ -107,6 +109,25 @@ fn method_stream(plan: &Plan<'_>, spec: &TrialSpec, entrant: &Entrant<'_>, diges
     Stream::named(plan.seed, &labels)
 }
 
+/// Returns whether the plan asks for a trace of the trial.
+fn tracing(plan: &Plan<'_>, spec: &TrialSpec, instance: &Instance) -> Tracing {
+    let first = instance.record.index == 0 && spec.repeat == 1;
+    match plan.traced {
+        Traced::All => Tracing::On,
+        Traced::First if first => Tracing::On,
+        Traced::First | Traced::Nothing => Tracing::Off,
+    }
+}
+
+fn trace_row(point: TracePoint) -> TraceRow {
+    TraceRow {
+        flops: point.flops,
+        objective: point.objective.and_then(measured),
+        residual: point.residual.and_then(measured),
+        tail: point.tail.and_then(measured),
+    }
+}
+
 /// Runs the method; only the method is timed.
 fn play(
     plan: &Plan<'_>,
@@ -114,9 +135,10 @@ fn play(
     instance: &Instance,
     stream: Stream,
     interrupt: &Arc<AtomicBool>,
+    tracing: Tracing,
 ) -> Played {
     let options = entrant.options.clone();
-    let meter = Meter::start(plan.budget.clone(), Arc::clone(interrupt), Tracing::Off);
+    let meter = Meter::start(plan.budget.clone(), Arc::clone(interrupt), tracing);
     let mut trial = Trial { options, meter, stream };
     let cpu = ThreadTime::try_now();
     let wall = Instant::now();
@@ -128,7 +150,9 @@ fn play(
         cpu_s: cpu.ok().map(|cpu| cpu.as_secs_f64()),
         peak_bytes: trial.meter.peak_bytes(),
     };
-    Played { result, wall, cost, effort: trial.meter.effort }
+    let effort = trial.meter.effort;
+    let trace = trial.meter.take_trace().into_iter().map(trace_row).collect();
+    Played { result, wall, cost, effort, trace }
 }
 
 fn judge(

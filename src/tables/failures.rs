@@ -11,14 +11,18 @@ pub(super) fn table(input: &Input<'_>) -> Table {
         sample(input)
     );
     let columns = vec![
-        Column::stable("family", "family"),
-        Column::stable("method", "method"),
-        Column::stable("verdict", "verdict"),
-        Column::stable("trials", "trials"),
-        Column::stable("share", "share"),
-        Column::stable("stop_reason", "stop reason"),
-        Column::stable("example", "example"),
-        Column::stable("message", "message"),
+        Column::stable("family", "family", "Family of the instances."),
+        Column::stable("method", "method", "Label of the method in the plan."),
+        Column::stable("verdict", "verdict", "The referee's outcome."),
+        Column::stable("trials", "trials", "Number of trials with this verdict."),
+        Column::stable("share", "share", "Share of the trials of that family and method."),
+        Column::stable(
+            "stop_reason",
+            "stop reason",
+            "Why the method of the example stopped, in its own words.",
+        ),
+        Column::stable("example", "example", "Id of an example trial, which replay takes."),
+        Column::stable("message", "message", "What referee and method say of the example."),
     ];
     let mut rows = Vec::new();
     for group in groups(input).iter().filter(|group| group.family != OVERALL) {

@@ -25,6 +25,8 @@ pub struct Column {
     pub name: &'static str,
     /// Heading for people, at most two lines.
     pub heading: &'static str,
+    /// What it holds, one sentence with its unit.
+    pub help: &'static str,
     /// Whether it is the same in two runs.
     pub nature: Nature,
     /// Whether it stands on the terminal.
@@ -33,13 +35,18 @@ pub struct Column {
 
 impl Column {
     /// Makes a column that is the same in every run and stands everywhere.
-    pub(super) fn stable(name: &'static str, heading: &'static str) -> Self {
-        Column { name, heading, nature: Nature::Stable, reach: Reach::Everywhere }
+    pub(super) fn stable(name: &'static str, heading: &'static str, help: &'static str) -> Self {
+        Column { name, heading, help, nature: Nature::Stable, reach: Reach::Everywhere }
     }
 
     /// Makes a column of time or memory figures that stands everywhere.
-    pub(super) fn measured(name: &'static str, heading: &'static str) -> Self {
-        Column { name, heading, nature: Nature::Measured, reach: Reach::Everywhere }
+    pub(super) fn measured(name: &'static str, heading: &'static str, help: &'static str) -> Self {
+        Column { name, heading, help, nature: Nature::Measured, reach: Reach::Everywhere }
+    }
+
+    /// Returns the heading in one line.
+    pub fn plain_heading(&self) -> String {
+        self.heading.replace("-\n", "").replace('\n', " ")
     }
 
     /// Leaves the column out of the summary on the terminal.

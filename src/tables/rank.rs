@@ -15,16 +15,28 @@ pub(super) fn table(input: &Input<'_>) -> Table {
         sample(input)
     );
     let columns = vec![
-        Column::stable("family", "family"),
-        Column::stable("method", "method"),
-        Column::stable("trials", "trials"),
-        Column::stable("answers", "answers"),
-        Column::stable("target", "target\nrank"),
-        Column::stable("median_rank", "rank\nmedian"),
-        Column::stable("largest_rank", "rank\nlargest"),
-        Column::stable("at_target_share", "at or below\ntarget"),
-        Column::stable("at_bound_share", "at or below\nbound"),
-        Column::stable("median_tail_ratio", "tail,\nmedian"),
+        Column::stable("family", "family", "Family of the instances."),
+        Column::stable("method", "method", "Label of the method in the plan."),
+        Column::stable("trials", "trials", "Number of trials."),
+        Column::stable("answers", "answers", "Trials with an answer whose rank was measured."),
+        Column::stable("target", "target\nrank", "Rank bound of the instances, or its range."),
+        Column::stable("median_rank", "rank\nmedian", "Median rank of the untruncated answers."),
+        Column::stable("largest_rank", "rank\nlargest", "Largest rank of an untruncated answer."),
+        Column::stable(
+            "at_target_share",
+            "at or below\ntarget",
+            "Share of all trials whose answer has at most the target rank, untruncated.",
+        ),
+        Column::stable(
+            "at_bound_share",
+            "at or below\nbound",
+            "Share of all trials whose answer has at most the rank of the Barvinok-Pataki bound.",
+        ),
+        Column::stable(
+            "median_tail_ratio",
+            "tail,\nmedian",
+            "Median of the eigenvalues beyond the target rank over the trace.",
+        ),
     ];
     let bounds: BTreeMap<&str, u64> = input
         .instances

@@ -13,14 +13,18 @@ pub(super) fn table(input: &Input<'_>) -> Table {
         sample(input)
     );
     let columns = vec![
-        Column::stable("family", "family"),
-        Column::stable("method", "method"),
-        Column::stable("kind", "kind"),
-        Column::stable("trials", "trials"),
-        Column::stable("converged", "converged"),
-        Column::stable("median_gap", "gap\nmedian"),
-        Column::stable("least_gap", "gap\nleast"),
-        Column::stable("largest_gap", "gap\nlargest"),
+        Column::stable("family", "family", "Family of the instances."),
+        Column::stable("method", "method", "Label of the method in the plan."),
+        Column::stable("kind", "kind", "How the relaxation behaves by the family's card."),
+        Column::stable("trials", "trials", "Number of trials."),
+        Column::stable("converged", "converged", "Trials that stopped because they converged."),
+        Column::stable(
+            "median_gap",
+            "gap\nmedian",
+            "Median of (optimum - value) / (1 + |optimum|).",
+        ),
+        Column::stable("least_gap", "gap\nleast", "Least such gap."),
+        Column::stable("largest_gap", "gap\nlargest", "Largest such gap."),
     ];
     let kinds: BTreeMap<&str, &str> = input
         .instances

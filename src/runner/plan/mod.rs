@@ -158,6 +158,21 @@ pub struct Plan<'a> {
     pub imported: Vec<Imported>,
     /// Methods, in plan order.
     pub entrants: Vec<Entrant<'a>>,
+    /// Which trials leave a convergence trace.
+    pub traced: Traced,
+    /// 0 for the plan itself, k for its k-th continuation with fresh instances.
+    pub round: u64,
+}
+
+/// Which trials leave a convergence trace.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Traced {
+    /// None.
+    Nothing,
+    /// Those on the first instance of every combination and on imported ones, first repeat.
+    First,
+    /// All of them.
+    All,
 }
 
 impl std::fmt::Debug for Plan<'_> {
@@ -189,6 +204,7 @@ impl<'a> Plan<'a> {
             "title",
             "seed",
             "repeats",
+            "traces",
             "budget",
             "tolerance",
             "family",
@@ -208,6 +224,8 @@ impl<'a> Plan<'a> {
             sown: sections::families(&top, roster.families)?,
             imported: sections::imports(&top, folder)?,
             entrants: sections::methods(&top, roster.methods)?,
+            traced: sections::traced(&top)?,
+            round: 0,
         };
         if plan.sown.is_empty() && plan.imported.is_empty() {
             return Err(document
@@ -218,6 +236,13 @@ impl<'a> Plan<'a> {
         }
         plan.check_size(&document)?;
         Ok(plan)
+    }
+
+    /// Returns the plan's continuation: the same combinations with fresh instances, numbered on from those of
+    /// the rounds before, without imported files.
+    pub fn in_round(self, round: u64) -> Self {
+        let imported = if round == 0 { self.imported } else { Vec::new() };
+        Plan { imported, round, ..self }
     }
 
     /// Returns an error at a place in the plan's text; the message says what was expected.

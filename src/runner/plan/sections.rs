@@ -6,7 +6,7 @@ use std::time::Duration;
 
 use super::quantity::{self, DURATION, SIZE};
 use super::reader::{Document, Placed, Section, setting, settings};
-use super::{Entrant, Imported, PlanError, ReportedOptimum, Sown, Span};
+use super::{Entrant, Imported, PlanError, ReportedOptimum, Sown, Span, Traced};
 use crate::budget::Budget;
 use crate::card::{Setting, SettingError, SettingSpec, Settings, nearest_word};
 use crate::families::Family;
@@ -26,6 +26,18 @@ pub(super) fn seed(top: &Section<'_, '_>) -> Result<u64, PlanError> {
         None => {
             Err(top.lacks("seed", "a line such as `seed = 1`: every random draw comes from it"))
         }
+    }
+}
+
+pub(super) fn traced(top: &Section<'_, '_>) -> Result<Traced, PlanError> {
+    let Some(entry) = top.get("traces") else {
+        return Ok(Traced::Nothing);
+    };
+    match entry.value.get_ref().as_str() {
+        Some("none") => Ok(Traced::Nothing),
+        Some("first") => Ok(Traced::First),
+        Some("all") => Ok(Traced::All),
+        _ => Err(top.wrong(&entry, "one of \"none\", \"first\", \"all\"")),
     }
 }
 

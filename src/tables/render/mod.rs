@@ -1,11 +1,19 @@
-//! Renderers: a table as CSV, as Markdown and as aligned text. They return text and touch no file.
+//! Renderers: a table as CSV, Markdown, LaTeX, HTML and aligned text. They return text and touch no file.
 
-use super::model::Reach;
+mod csv;
+mod html;
+mod latex;
+mod markdown;
+mod text;
+
 use super::{Cell, Style, Table};
+
+/// Most rows of a table in the forms for people; the CSV form holds all.
+pub const MOST_ROWS: usize = 2000;
 
 impl Cell {
     /// Returns the form for people.
-    fn shown(&self) -> String {
+    pub fn shown(&self) -> String {
         match self {
             Cell::Missing => "-".to_owned(),
             Cell::Word(word) => word.clone(),
@@ -15,7 +23,7 @@ impl Cell {
     }
 
     /// Returns the exact form for machines; missing is empty.
-    fn exact(&self) -> String {
+    pub fn exact(&self) -> String {
         match self {
             Cell::Missing => String::new(),
             Cell::Word(word) => word.clone(),
@@ -65,133 +73,27 @@ fn significant(value: f64) -> String {
 }
 
 impl Table {
-    /// Returns the table as CSV: a row of column names, then exact numbers; shares are of one.
-    pub fn to_csv(&self) -> String {
-        let mut writer = csv::Writer::from_writer(Vec::new());
-        // Writing to memory cannot fail, and rows are as long as the columns.
-        writer
-            .write_record(self.columns.iter().map(|column| column.name))
-            .expect("memory takes the row");
-        for row in &self.rows {
-            writer.write_record(row.iter().map(Cell::exact)).expect("memory takes the row");
-        }
-        let bytes = writer.into_inner().expect("memory takes the rows");
-        String::from_utf8(bytes).expect("cells are text")
+    /// Returns the rows that the forms for people show.
+    fn shown_rows(&self) -> &[Vec<Cell>] {
+        &self.rows[..self.rows.len().min(MOST_ROWS)]
     }
 
-    /// Returns the table as Markdown: title, caption, rows.
-    pub fn to_markdown(&self) -> String {
-        let cell = |text: &str| text.replace('\\', "\\\\").replace('|', "\\|");
-        let line = |cells: Vec<String>| format!("| {} |\n", cells.join(" | "));
-        let mut out = format!("## {}\n\n{}\n\n", self.title, self.caption);
-        out += &line(
-            self.columns
-                .iter()
-                .map(|column| cell(&column.heading.replace("-\n", "").replace('\n', " ")))
-                .collect(),
-        );
-        let rule = (0..self.columns.len()).map(|at| if self.is_left(at) { "---" } else { "---:" });
-        out += &format!("|{}|\n", rule.collect::<Vec<_>>().join("|"));
-        for row in &self.rows {
-            out += &line(row.iter().map(|value| cell(&value.shown())).collect());
-        }
-        out
-    }
-
-    /// Returns the table as aligned text of at most `width` characters a line: rows under the name
-    /// of their family, files-only columns left out. The method's column is cut when it must be.
-    pub fn to_text(&self, width: usize) -> String {
-        let keep: Vec<bool> =
-            self.columns.iter().map(|column| column.reach == Reach::Everywhere).collect();
-        let table = self.keeping(&keep);
-        let lefts: Vec<bool> = (0..table.columns.len()).map(|at| table.is_left(at)).collect();
-        let widths = table.widths(width);
-        let mut out = format!("{}\n{}\n", self.title, "=".repeat(self.title.len()));
-        out += &wrapped(&self.caption, width);
-        let heads: Vec<Vec<&str>> =
-            table.columns.iter().map(|column| column.heading.split('\n').collect()).collect();
-        let depth = heads.iter().map(Vec::len).max().unwrap_or(1);
-        for level in 0..depth {
-            let cells: Vec<String> = heads
-                .iter()
-                .map(|lines| {
-                    // Short headings stand at the bottom, next to their numbers.
-                    let skip = depth - lines.len();
-                    level.checked_sub(skip).map_or(String::new(), |at| lines[at].to_owned())
-                })
-                .collect();
-            out += &aligned(&cells[1..], &lefts[1..], &widths[1..]);
-        }
-        let mut family = String::new();
-        for row in &table.rows {
-            let shown: Vec<String> = row.iter().map(Cell::shown).collect();
-            if shown[0] != family {
-                family.clone_from(&shown[0]);
-                out += &format!("{}\n", cut(&family, width));
-            }
-            out += &aligned(&shown[1..], &lefts[1..], &widths[1..]);
-        }
-        out
+    /// Says how many rows are left out in the forms for people; nothing when all are there.
+    pub fn omission(&self) -> Option<String> {
+        (self.rows.len() > MOST_ROWS).then(|| {
+            format!(
+                "The first {MOST_ROWS} of {} rows; all are in {}.csv.",
+                self.rows.len(),
+                self.name
+            )
+        })
     }
 
     /// Returns whether a column is set to the left: the first two and columns of words.
-    fn is_left(&self, at: usize) -> bool {
-        at < 2 || (!self.rows.is_empty() && self.rows.iter().all(|row| row[at].is_word()))
+    pub fn is_left(&self, at: usize) -> bool {
+        let words = |row: &Vec<Cell>| row[at].is_word() || row[at] == Cell::Missing;
+        at < 2 || (self.rows.iter().any(|row| row[at].is_word()) && self.rows.iter().all(words))
     }
-
-    /// Returns the width of each column; the method's gives way so that a line fits into `width`.
-    fn widths(&self, width: usize) -> Vec<usize> {
-        let mut widths: Vec<usize> = (0..self.columns.len())
-            .map(|at| {
-                let head = self.columns[at].heading.split('\n').map(str::len).max().unwrap_or(0);
-                let body =
-                    self.rows.iter().map(|row| row[at].shown().chars().count()).max().unwrap_or(0);
-                head.max(body)
-            })
-            .collect();
-        let others: usize = widths[2..].iter().map(|column| column + GAP).sum();
-        widths[1] = widths[1].min(width.saturating_sub(INDENT + others)).max(8);
-        widths
-    }
-}
-
-const INDENT: usize = 2;
-const GAP: usize = 1;
-
-fn cut(text: &str, width: usize) -> String {
-    if text.chars().count() <= width {
-        return text.to_owned();
-    }
-    let kept: String = text.chars().take(width.saturating_sub(1)).collect();
-    format!("{kept}~")
-}
-
-fn aligned(cells: &[String], lefts: &[bool], widths: &[usize]) -> String {
-    let mut line = " ".repeat(INDENT);
-    for (at, cell) in cells.iter().enumerate() {
-        if at > 0 {
-            line += &" ".repeat(GAP);
-        }
-        let (cell, width) = (cut(cell, widths[at]), widths[at]);
-        line += &if lefts[at] { format!("{cell:<width$}") } else { format!("{cell:>width$}") };
-    }
-    format!("{}\n", line.trim_end())
-}
-
-fn wrapped(text: &str, width: usize) -> String {
-    let mut out = String::new();
-    let mut line = String::new();
-    for word in text.split_whitespace() {
-        if !line.is_empty() && line.len() + 1 + word.len() > width {
-            out += &format!("{line}\n");
-            line.clear();
-        }
-        if !line.is_empty() {
-            line.push(' ');
-        }
-        line += word;
-    }
-    out + &format!("{line}\n\n")
 }
 
 #[cfg(test)]
