@@ -19,6 +19,7 @@
 use std::collections::BTreeMap;
 
 use super::assembly::{IntegerCoefficient, PairDraft, column};
+use super::cliques::{Cliques, Placement, draw_start};
 use super::{Family, PlantError};
 use crate::card::{DefaultSetting, FamilyCard, Kind, Relaxation, SettingSpec, Settings};
 use crate::problem::certificate::{IntegerColumn, IntegerFactor, Planted};
@@ -27,9 +28,6 @@ use crate::seed::Stream;
 /// The family `localisation`.
 #[derive(Clone, Copy, Debug)]
 pub struct Localisation;
-
-/// Draws of a place before the family gives up.
-const TRIES: usize = 1000;
 
 static CARD: FamilyCard = FamilyCard {
     id: "localisation",
@@ -92,16 +90,10 @@ impl Family for Localisation {
     }
 }
 
-/// An affine dependency: nodes and their weights.
-type Dependency = Vec<(usize, i64)>;
-
 /// Anchors first, then sensors.
 struct Network {
     dimension: usize,
-    places: Vec<Vec<i64>>,
-    /// Measured pairs (i, l), i < l, with the stress on them.
-    ranges: BTreeMap<(usize, usize), i64>,
-    dependencies: Vec<Dependency>,
+    cliques: Cliques,
 }
 
 impl Network {
@@ -112,78 +104,25 @@ impl Network {
         parameters: &Settings,
     ) -> Result<Self, PlantError> {
         let side = parameters.integer("side");
-        let anchors = dimension + 1;
-        let places = draw_anchors(stream, dimension, side)?;
-        let mut network =
-            Network { dimension, places, ranges: BTreeMap::new(), dependencies: Vec::new() };
-        // Sets of d + 1 nodes that have all ranges among themselves.
-        let mut bases: Vec<Vec<usize>> = vec![(0..anchors).collect()];
-        for node in anchors..anchors + order - dimension {
-            let base = bases[stream.index(bases.len())].clone();
-            let (place, dependency) = network.draw_place(stream, &base, side, node)?;
-            network.places.push(place);
-            for (at, &(i, weight)) in dependency.iter().enumerate() {
-                for &(l, other) in &dependency[at + 1..] {
-                    *network.ranges.entry((i, l)).or_insert(0) += weight * other;
-                }
-            }
-            for left_out in &base {
-                let mut next: Vec<usize> = base.iter().copied().filter(|i| i != left_out).collect();
-                next.push(node);
-                if network.spans(&next) {
-                    bases.push(next);
-                }
-            }
-            network.dependencies.push(dependency);
-            let extra = parameters.size("extra").min(node - base.len());
-            let mut added = 0;
-            while added < extra {
-                let pair = (stream.index(node), node);
-                if let std::collections::btree_map::Entry::Vacant(slot) = network.ranges.entry(pair)
-                {
-                    slot.insert(0);
-                    added += 1;
-                }
+        let mut place = |stream: &mut Stream| -> Vec<i64> {
+            (0..dimension).map(|_| stream.between(0, side)).collect()
+        };
+        let mut anchors = |stream: &mut Stream| (0..=dimension).map(|_| place(stream)).collect();
+        let start = draw_start(stream, &mut anchors).ok_or_else(|| crowded(side, 0))?;
+        let mut cliques = Cliques::start(start);
+        for node in dimension + 1..=order {
+            if cliques.add(stream, parameters.size("extra"), &mut place)? == Placement::Crowded {
+                return Err(crowded(side, node));
             }
         }
-        Ok(network)
-    }
-
-    /// Draws a place that no node has, and the dependency of it and the base with no weight zero.
-    fn draw_place(
-        &self,
-        stream: &mut Stream,
-        base: &[usize],
-        side: i64,
-        node: usize,
-    ) -> Result<(Vec<i64>, Dependency), PlantError> {
-        for _ in 0..TRIES {
-            let place: Vec<i64> = (0..self.dimension).map(|_| stream.between(0, side)).collect();
-            if self.places.contains(&place) {
-                continue;
-            }
-            let mut points: Vec<&[i64]> = base.iter().map(|i| self.places[*i].as_slice()).collect();
-            points.push(&place);
-            let weights = dependency(&points);
-            if weights.iter().all(|weight| *weight != 0) {
-                let nodes = base.iter().copied().chain([node]);
-                return Ok((place, nodes.zip(weights).collect()));
-            }
-        }
-        Err(crowded(side, self.places.len()))
-    }
-
-    /// Returns whether d + 1 nodes lie on no common line (d = 2) or plane (d = 3).
-    fn spans(&self, nodes: &[usize]) -> bool {
-        let points: Vec<&[i64]> = nodes.iter().map(|i| self.places[*i].as_slice()).collect();
-        volume(&points) != 0
+        Ok(Network { dimension, cliques })
     }
 
     /// Returns the node's vector u: (a_k; 0) or (0; e_j).
     fn vector(&self, node: usize) -> Vec<(usize, i64)> {
         let anchors = self.dimension + 1;
         if node < anchors {
-            self.places[node].iter().copied().enumerate().collect()
+            self.cliques.places[node].iter().copied().enumerate().collect()
         } else {
             vec![(self.dimension + node - anchors, 1)]
         }
@@ -191,18 +130,18 @@ impl Network {
 
     fn draft(self) -> PairDraft {
         let (dimension, anchors) = (self.dimension, self.dimension + 1);
-        let order = dimension + self.places.len() - anchors;
+        let order = dimension + self.cliques.places.len() - anchors;
         let mut rows = Vec::with_capacity(order * dimension);
         for p in 0..dimension {
             rows.extend((0..dimension).map(|q| i64::from(p == q)));
         }
-        for place in &self.places[anchors..] {
+        for place in &self.cliques.places[anchors..] {
             rows.extend(place);
         }
         let mut corner = vec![vec![0i64; dimension]; dimension];
         let mut constraints = Vec::new();
         let mut multipliers = Vec::new();
-        for (&(i, l), &stress) in &self.ranges {
+        for (&(i, l), &stress) in &self.cliques.stress {
             let difference = self.difference(i, l);
             if l < anchors {
                 // Ranges between anchors say nothing new: they are combinations of Z_{1:d,1:d} = I.
@@ -226,7 +165,8 @@ impl Network {
         }
         head.extend(constraints);
         first.extend(multipliers);
-        let slack: Vec<IntegerColumn> = self.dependencies.iter().map(|w| self.slack(w)).collect();
+        let slack: Vec<IntegerColumn> =
+            self.cliques.dependencies.iter().map(|w| self.slack(w)).collect();
         PairDraft {
             rank: dimension,
             factor: IntegerFactor { order, width: dimension, rows },
@@ -260,89 +200,10 @@ impl Network {
     }
 }
 
-fn draw_anchors(
-    stream: &mut Stream,
-    dimension: usize,
-    side: i64,
-) -> Result<Vec<Vec<i64>>, PlantError> {
-    for _ in 0..TRIES {
-        let places: Vec<Vec<i64>> = (0..=dimension)
-            .map(|_| (0..dimension).map(|_| stream.between(0, side)).collect())
-            .collect();
-        let points: Vec<&[i64]> = places.iter().map(Vec::as_slice).collect();
-        if volume(&points) != 0 {
-            return Ok(places);
-        }
-    }
-    Err(crowded(side, 0))
-}
-
 fn crowded(side: i64, nodes: usize) -> PlantError {
     PlantError::Parameters(format!(
         "side = {side} leaves no place in general position after {nodes} nodes; the nearest possible value is \
          larger, such as {}",
         2 * side
     ))
-}
-
-/// Returns the signed volume of d + 1 points, times d!: the determinant of their differences from the
-/// first.
-fn volume(points: &[&[i64]]) -> i64 {
-    let row = |i: usize| -> Vec<i64> {
-        points[i + 1].iter().zip(points[0]).map(|(a, b)| a - b).collect()
-    };
-    match points.len() {
-        3 => {
-            let (a, b) = (row(0), row(1));
-            a[0] * b[1] - a[1] * b[0]
-        }
-        4 => {
-            let (a, b, c) = (row(0), row(1), row(2));
-            a[0] * (b[1] * c[2] - b[2] * c[1]) - a[1] * (b[0] * c[2] - b[2] * c[0])
-                + a[2] * (b[0] * c[1] - b[1] * c[0])
-        }
-        other => unreachable!("{other} points span neither plane nor space"),
-    }
-}
-
-/// Returns the affine dependency of d + 2 points in lowest terms: sum w = 0 and sum w_i p_i = 0, by Cramer's
-/// rule w_i = (-1)^i times the volume of the others.
-fn dependency(points: &[&[i64]]) -> Vec<i64> {
-    let mut weights: Vec<i64> = (0..points.len())
-        .map(|left_out| {
-            let others: Vec<&[i64]> = points
-                .iter()
-                .enumerate()
-                .filter(|(at, _)| *at != left_out)
-                .map(|(_, point)| *point)
-                .collect();
-            if left_out % 2 == 0 { volume(&others) } else { -volume(&others) }
-        })
-        .collect();
-    let divisor = weights.iter().fold(0, |divisor, weight| gcd(divisor, weight.abs())).max(1);
-    for weight in &mut weights {
-        *weight /= divisor;
-    }
-    weights
-}
-
-fn gcd(a: i64, b: i64) -> i64 {
-    if b == 0 { a } else { gcd(b, a % b) }
-}
-
-#[cfg(test)]
-mod tests {
-    use super::*;
-
-    #[test]
-    fn dependencies_vanish_on_places_and_on_ones() {
-        let points: [&[i64]; 5] = [&[0, 0, 1], &[3, 1, 4], &[1, 5, 9], &[2, 6, 5], &[3, 5, 8]];
-        let weights = dependency(&points);
-        assert!(weights.iter().all(|weight| *weight != 0), "{weights:?}");
-        assert_eq!(weights.iter().sum::<i64>(), 0);
-        for axis in 0..3 {
-            let sum: i64 = weights.iter().zip(points).map(|(w, point)| w * point[axis]).sum();
-            assert_eq!(sum, 0, "axis {axis}");
-        }
-    }
 }

@@ -4,25 +4,47 @@
 
 mod assembly;
 mod balanced_graph;
+mod clique_cover;
+mod cliques;
 mod cycles;
+mod distance_completion;
 mod face;
 mod flat_face;
 mod frustrated_loops;
+mod graphs;
 mod hadamard;
+mod hidden_partition;
+mod high_width_trap;
+mod ill_scaled;
 mod ky_fan_gap;
 mod lattice_tiles;
 mod localisation;
+mod low_width_trap;
+mod orthogonal_sync;
 mod sign_trap;
+mod symbol_detection;
 mod tight_unique;
+mod trust_region;
+mod weak_complementarity;
 
 pub use balanced_graph::BalancedGraph;
+pub use clique_cover::CliqueCover;
+pub use distance_completion::DistanceCompletion;
 pub use flat_face::FlatFace;
 pub use frustrated_loops::FrustratedLoops;
+pub use hidden_partition::HiddenPartition;
+pub use high_width_trap::HighWidthTrap;
+pub use ill_scaled::IllScaled;
 pub use ky_fan_gap::KyFanGap;
 pub use lattice_tiles::LatticeTiles;
 pub use localisation::Localisation;
+pub use low_width_trap::LowWidthTrap;
+pub use orthogonal_sync::OrthogonalSync;
 pub use sign_trap::SignTrap;
+pub use symbol_detection::SymbolDetection;
 pub use tight_unique::TightUnique;
+pub use trust_region::TrustRegion;
+pub use weak_complementarity::WeakComplementarity;
 
 use crate::card::{FamilyCard, Settings};
 use crate::problem::certificate::Planted;
@@ -58,13 +80,23 @@ pub trait Family: Sync {
 pub fn registry() -> &'static [&'static dyn Family] {
     &[
         &BalancedGraph,
+        &CliqueCover,
+        &DistanceCompletion,
         &FlatFace,
         &FrustratedLoops,
+        &HiddenPartition,
+        &HighWidthTrap,
+        &IllScaled,
         &KyFanGap,
         &LatticeTiles,
         &Localisation,
+        &LowWidthTrap,
+        &OrthogonalSync,
         &SignTrap,
+        &SymbolDetection,
         &TightUnique,
+        &TrustRegion,
+        &WeakComplementarity,
     ]
 }
 

@@ -140,7 +140,11 @@ impl SharedMinimiser {
             }
             let last = sorted[length - 1];
             if last as usize >= order {
-                return fail("a vertex must lie within the block", named, (last + 1).to_string());
+                return fail(
+                    "a vertex must lie within the block",
+                    named,
+                    (u64::from(last) + 1).to_string(),
+                );
             }
         }
         Ok(())
