@@ -196,6 +196,12 @@ impl Settings {
         Ok(Settings { values })
     }
 
+    /// Makes settings of one word that no card declares, such as the command of an outside method.
+    pub fn of_word(name: &str, word: &str) -> Self {
+        let values = BTreeMap::from([(name.to_owned(), Setting::Word(word.to_owned()))]);
+        Settings { values }
+    }
+
     /// Returns the whole number under `name`. Panics when the card declares no such integer.
     #[track_caller]
     pub fn integer(&self, name: &str) -> i64 {
@@ -350,6 +356,8 @@ pub enum MethodClass {
     Projection,
     /// Interior-point steps with a projection inside.
     ProjectedInteriorPoint,
+    /// Another program; what it does is its own business.
+    Outside,
 }
 
 impl MethodClass {
@@ -361,6 +369,7 @@ impl MethodClass {
             MethodClass::Factored => "factored",
             MethodClass::Projection => "projection",
             MethodClass::ProjectedInteriorPoint => "projected interior point",
+            MethodClass::Outside => "outside",
         }
     }
 }

@@ -12,7 +12,7 @@ use rankassay::methods::{self, Method, Trial};
 use rankassay::problem::{Answer, Problem};
 use rankassay::record::{Record, Verdict};
 use rankassay::runner::{
-    self, Observer, Outcome, Plan, Roster, RunOptions, Selection, Target, journal,
+    self, Isolation, Observer, Outcome, Plan, Roster, RunOptions, Selection, Target, journal,
 };
 use rankassay::verdicts::gate::{
     Baseline, Gate, Kind, Outcome as Judged, Passage, RunView, Terms, TimeBasis, gate,
@@ -86,6 +86,7 @@ fn run(harm: Harm, into: &Path) -> Outcome {
         target: Target::New(into.to_owned()),
         jobs: Some(1),
         selection: Selection::default(),
+        isolation: Isolation::None,
         interrupt: Arc::new(AtomicBool::new(false)),
     };
     runner::run(&plan, &options, &Silent).unwrap()

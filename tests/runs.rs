@@ -15,8 +15,8 @@ use rankassay::problem::certificate::Planted;
 use rankassay::problem::{Answer, BlockPoint, Factor, Point, Problem, StopReason};
 use rankassay::record::{Record, Verdict};
 use rankassay::runner::{
-    self, Ending, Observer, Outcome, Pattern, Plan, Roster, RunError, RunOptions, Selection,
-    Target, journal,
+    self, Ending, Isolation, Observer, Outcome, Pattern, Plan, Roster, RunError, RunOptions,
+    Selection, Target, journal,
 };
 use rankassay::seed::Stream;
 
@@ -204,6 +204,7 @@ fn options(target: Target, jobs: usize) -> RunOptions {
         target,
         jobs: Some(jobs),
         selection: Selection::default(),
+        isolation: Isolation::None,
         interrupt: Arc::new(AtomicBool::new(false)),
     }
 }

@@ -52,6 +52,48 @@ pub enum Halt {
     /// The method gave up.
     #[error("{0}")]
     Failed(String),
+    /// The method died without an answer (another program; a built-in method panics instead).
+    #[error("{0}")]
+    Crashed(String),
+    /// The method left something that is no answer (another program).
+    #[error("{0}")]
+    Malformed(String),
+}
+
+/// Measures wall time from its start.
+#[derive(Clone, Copy, Debug)]
+pub struct Stopwatch(Instant);
+
+impl Stopwatch {
+    /// Starts.
+    pub fn start() -> Self {
+        Stopwatch(Instant::now())
+    }
+
+    /// Returns the wall time since the start.
+    pub fn elapsed(&self) -> Duration {
+        self.0.elapsed()
+    }
+}
+
+/// What the system accounts to another program that did the work of a trial.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct Charge {
+    /// Wall time from its start to its end.
+    pub wall: Duration,
+    /// Processor time, where the system tells it.
+    pub processor: Option<Duration>,
+    /// Most memory, in bytes, where the system tells it.
+    pub peak_bytes: Option<u64>,
+}
+
+/// Whether the effort of a trial is known.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Counting {
+    /// It was counted.
+    Counted,
+    /// It was not: the zeros in the meter mean nothing.
+    Missing,
 }
 
 /// Clock, limits, effort and trace of one running trial.
@@ -64,6 +106,8 @@ pub struct Meter {
     /// Work counts; engines add to them.
     pub effort: Effort,
     trace: Option<trace::Trace>,
+    charge: Option<Charge>,
+    counting: Counting,
 }
 
 /// Whether a trial keeps its convergence trace.
@@ -85,6 +129,8 @@ impl Meter {
             memory_at_start: memory::begin(),
             effort: Effort::default(),
             trace: (tracing == Tracing::On).then(trace::Trace::new),
+            charge: None,
+            counting: Counting::Counted,
         }
     }
 
@@ -124,6 +170,31 @@ impl Meter {
             Some(limit) if bytes > limit => Err(Halt::MemoryLimit),
             _ => Ok(()),
         }
+    }
+
+    /// Returns the limits of the trial.
+    pub fn budget(&self) -> &Budget {
+        &self.budget
+    }
+
+    /// Puts the cost of another program in the place of what this thread took.
+    pub fn charge(&mut self, charge: Charge) {
+        self.charge = Some(charge);
+    }
+
+    /// Returns the cost of another program, if one did the work.
+    pub fn charged(&self) -> Option<Charge> {
+        self.charge
+    }
+
+    /// Says whether the effort is known.
+    pub fn set_counting(&mut self, counting: Counting) {
+        self.counting = counting;
+    }
+
+    /// Returns whether the effort is known.
+    pub fn counting(&self) -> Counting {
+        self.counting
     }
 
     /// Returns the wall time since the start.

@@ -12,7 +12,7 @@ use super::output::{say, tell};
 use super::progress::{Bar, Progress};
 use super::report::Failure;
 use super::results::{self, Loaded};
-use super::{Ended, INTERRUPTED, Loudness, listen};
+use super::{Ended, INTERRUPTED, Loudness, isolation, listen};
 use crate::runner::{
     self, Ending, Manifest, Plan, Roster, RunOptions, Selection, Target, journal, write_files,
 };
@@ -266,6 +266,7 @@ fn add_round(
         target,
         jobs: command.jobs.map(usize::from),
         selection: Selection { methods: Some(methods), ..Selection::default() },
+        isolation: isolation(false),
         interrupt: Arc::clone(interrupt),
     };
     let progress = Progress::new(loudness, bar);

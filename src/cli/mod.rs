@@ -6,6 +6,7 @@
 //! usage or bad input; 3 the run ended but some trials crashed or gave malformed answers; 130
 //! interrupted.
 
+mod adapter;
 mod duel;
 mod gate;
 mod inspect;
@@ -20,6 +21,7 @@ mod roster;
 mod run;
 mod tabulate;
 
+use std::io::Read;
 use std::process::ExitCode;
 use std::sync::Arc;
 use std::sync::atomic::{AtomicBool, Ordering};
@@ -28,6 +30,8 @@ use clap::{Parser, Subcommand};
 
 use output::tell;
 use report::Failure;
+
+use crate::runner::{self, Isolation, Roster};
 
 /// Plants semidefinite programs whose low-rank optimum is proved, runs heuristics on them under equal
 /// budgets, referees every answer, and tabulates how accurate, how low in rank and how fast they are.
@@ -65,6 +69,11 @@ enum Command {
     Inspect(inspect::Inspect),
     /// Judges a point from a file
     Referee(referee::Referee),
+    /// Writes outside methods to start from, and rehearses one
+    Adapter(adapter::Adapter),
+    /// Runs one trial for another process of this program
+    #[command(name = runner::worker::COMMAND, hide = true)]
+    TrialWorker,
     /// Lists families and methods; with a name, shows the whole card
     Roster(roster::RosterCommand),
 }
@@ -98,6 +107,8 @@ pub fn main() -> ExitCode {
         Command::Plant(command) => plant::execute(&command, loudness),
         Command::Inspect(command) => inspect::execute(&command),
         Command::Referee(command) => referee::execute(&command),
+        Command::Adapter(command) => adapter::execute(&command),
+        Command::TrialWorker => work(),
         Command::Roster(command) => roster::execute(&command),
     };
     match ended {
@@ -111,6 +122,21 @@ const INTERRUPTED: u8 = 130;
 
 type Ended = Result<ExitCode, Failure>;
 
+/// Chooses where methods run: each trial in a process of its own, started from the file of this program,
+/// unless the user or the system says otherwise.
+fn isolation(in_process: bool) -> Isolation {
+    if in_process || cfg!(not(unix)) {
+        return Isolation::None;
+    }
+    match std::env::current_exe() {
+        Ok(program) => Isolation::Processes(program),
+        Err(error) => {
+            tell(&format!("note: trials run in this process, whose file is not known: {error}"));
+            Isolation::None
+        }
+    }
+}
+
 /// Sets the flag on Ctrl-C or a request to end; a second one ends the process at once, which the
 /// journal survives.
 fn listen(interrupt: &Arc<AtomicBool>) -> Result<(), Failure> {
@@ -123,4 +149,13 @@ fn listen(interrupt: &Arc<AtomicBool>) -> Result<(), Failure> {
     };
     ctrlc::set_handler(handler)
         .map_err(|error| Failure::input(format!("signals cannot be handled: {error}")))
+}
+
+/// Runs the trial that standard input names.
+fn work() -> Ended {
+    let mut task = String::new();
+    std::io::stdin().read_to_string(&mut task).map_err(Failure::input)?;
+    runner::worker::serve(&task, &mut std::io::stdout(), Roster::built_in())
+        .map_err(Failure::defect)?;
+    Ok(ExitCode::SUCCESS)
 }

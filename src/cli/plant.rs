@@ -9,8 +9,9 @@ use super::output::{say_and_end, tell};
 use super::report::Failure;
 use super::{Ended, Loudness};
 use crate::card::{Setting, Settings, nearest_word};
-use crate::families::{self, PlantError};
+use crate::families::{self, Family, PlantError};
 use crate::formats;
+use crate::problem::certificate::Planted;
 use crate::runner::{plant, write_files};
 
 #[derive(Debug, Args)]
@@ -32,32 +33,8 @@ pub(super) struct Plant {
 }
 
 pub(super) fn execute(command: &Plant, loudness: Loudness) -> Ended {
-    let family = families::find(&command.family).ok_or_else(|| {
-        let known: Vec<_> = families::registry().iter().map(|family| family.card().id).collect();
-        let hint = nearest_word(&command.family, known.iter().copied());
-        let hint = hint.map_or(String::new(), |word| format!(" (did you mean `{word}`?)"));
-        let message = format!(
-            "unknown family `{}`, expected one of {}{hint}",
-            command.family,
-            known.join(", ")
-        );
-        Failure::input(message)
-    })?;
-    let mut given = BTreeMap::new();
-    for text in &command.parameters {
-        let (name, value) = text.split_once('=').ok_or_else(|| {
-            Failure::input(format!("parameter `{text}`: expected NAME=VALUE, such as order=20"))
-        })?;
-        if given.insert(name.to_owned(), setting(value)).is_some() {
-            return Err(Failure::input(format!("parameter `{name}` is given twice")));
-        }
-    }
-    let parameters = Settings::resolve(family.card().parameters, &given).map_err(Failure::input)?;
-    let planted =
-        plant(family, &parameters, command.seed, command.index).map_err(|error| match error {
-            PlantError::Certificate(_) => Failure::defect(format!("internal error: {error}")),
-            other => Failure::input(format!("{} {parameters}: {other}", family.card().id)),
-        })?;
+    let (family, parameters) = resolved(&command.family, &command.parameters)?;
+    let planted = planted(&command.family, &command.parameters, command.seed, command.index)?;
     let origin =
         format!("{} {parameters} seed={} index={}", family.card().id, command.seed, command.index);
     let text = formats::instance::write(&formats::instance::Instance {
@@ -73,6 +50,45 @@ pub(super) fn execute(command: &Plant, loudness: Loudness) -> Ended {
         tell(&format!("{} {parameters} written to {}", family.card().id, path.display()));
     }
     say_and_end("")
+}
+
+/// Plants the instance that the words of a command line name.
+pub(super) fn planted(
+    family: &str,
+    parameters: &[String],
+    seed: u64,
+    index: u64,
+) -> Result<Planted, Failure> {
+    let (family, parameters) = resolved(family, parameters)?;
+    plant(family, &parameters, seed, index).map_err(|error| match error {
+        PlantError::Certificate(_) => Failure::defect(format!("internal error: {error}")),
+        other => Failure::input(format!("{} {parameters}: {other}", family.card().id)),
+    })
+}
+
+/// Finds the family and resolves its parameters.
+fn resolved(
+    family: &str,
+    parameters: &[String],
+) -> Result<(&'static dyn Family, Settings), Failure> {
+    let found = families::find(family).ok_or_else(|| {
+        let known: Vec<_> = families::registry().iter().map(|family| family.card().id).collect();
+        let hint = nearest_word(family, known.iter().copied());
+        let hint = hint.map_or(String::new(), |word| format!(" (did you mean `{word}`?)"));
+        let known = known.join(", ");
+        Failure::input(format!("unknown family `{family}`, expected one of {known}{hint}"))
+    })?;
+    let mut given = BTreeMap::new();
+    for text in parameters {
+        let (name, value) = text.split_once('=').ok_or_else(|| {
+            Failure::input(format!("parameter `{text}`: expected NAME=VALUE, such as order=20"))
+        })?;
+        if given.insert(name.to_owned(), setting(value)).is_some() {
+            return Err(Failure::input(format!("parameter `{name}` is given twice")));
+        }
+    }
+    let settings = Settings::resolve(found.card().parameters, &given).map_err(Failure::input)?;
+    Ok((found, settings))
 }
 
 /// Writes a file unless another one stands there; the same file again is fine.

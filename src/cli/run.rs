@@ -10,7 +10,7 @@ use clap::Args;
 use super::output::{say, tell};
 use super::progress::{Bar, Progress};
 use super::report::Failure;
-use super::{Ended, INTERRUPTED, Loudness, listen, results};
+use super::{Ended, INTERRUPTED, Loudness, isolation, listen, results};
 use crate::runner::{
     self, Ending, Outcome, Pattern, Plan, Roster, RunOptions, Selection, Shard, Target,
     latest_folder,
@@ -39,6 +39,9 @@ pub(super) struct Run {
     /// Goes on with a run that was interrupted; without --into, with the latest of this plan
     #[arg(long)]
     resume: bool,
+    /// Runs the methods in this process, not each trial in one of its own
+    #[arg(long)]
+    in_process: bool,
     /// Runs part I of N parts of the plan; all trials of an instance are in one part
     #[arg(long, value_name = "I/N")]
     shard: Option<String>,
@@ -62,6 +65,7 @@ pub(super) fn execute(command: &Run, loudness: Loudness, bar: Bar) -> Ended {
             shard,
             methods: None,
         },
+        isolation: isolation(command.in_process),
         interrupt,
     };
     let progress = Progress::new(loudness, bar);
@@ -119,6 +123,9 @@ fn interrupted(command: &Run, outcome: &Outcome) -> String {
     option("--jobs", command.jobs.map(|jobs| jobs.to_string()));
     option("--only", command.only.clone());
     option("--shard", command.shard.clone());
+    if command.in_process {
+        words.push("--in-process".to_owned());
+    }
     let line: Vec<String> = words.iter().map(|word| quoted(word)).collect();
     format!(
         "interrupted: {} of {} trials are recorded in {}; go on with\n  {}",

@@ -8,6 +8,7 @@ pub mod alternating_projections;
 pub mod factored_alm;
 pub mod factored_newton;
 pub mod ipm_tail_weight;
+pub mod outside;
 pub mod reduce_both_ends;
 pub mod reduce_largest;
 pub mod relax_ipm;

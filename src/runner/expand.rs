@@ -4,6 +4,7 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::path::Path;
 
 use rayon::prelude::*;
+use serde::{Deserialize, Serialize};
 
 use super::instance::{Instance, plant, read_instance};
 use super::isolation::guarded;
@@ -16,7 +17,7 @@ use crate::families::PlantError;
 use crate::record::{InstanceRecord, Record, RunHeader, SCHEMA};
 
 /// Where an instance comes from.
-#[derive(Clone, Copy, Debug)]
+#[derive(Clone, Copy, Debug, Serialize, Deserialize)]
 enum Origin {
     /// Combination and index within it.
     Sown(usize, u64),
@@ -25,14 +26,14 @@ enum Origin {
 }
 
 /// An instance of the plan, not planted yet.
-#[derive(Debug)]
+#[derive(Clone, Debug, Serialize, Deserialize)]
 pub(super) struct InstanceSpec {
     pub(super) id: String,
     origin: Origin,
 }
 
 /// A trial of the plan.
-#[derive(Debug)]
+#[derive(Clone, Debug, Serialize, Deserialize)]
 pub(super) struct TrialSpec {
     pub(super) id: String,
     pub(super) instance: usize,
@@ -115,6 +116,11 @@ impl Expansion {
             }
         }
         Expansion { instances, trials }
+    }
+
+    /// Holds one instance and no trials.
+    pub(super) fn single(instance: InstanceSpec) -> Self {
+        Expansion { instances: vec![instance], trials: Vec::new() }
     }
 
     /// Returns what a selection pattern is matched with.

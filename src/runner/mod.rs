@@ -18,6 +18,7 @@ mod replay;
 mod schedule;
 mod selection;
 mod trial;
+pub mod worker;
 
 pub use folder::{FolderError, Target, latest_folder, read_traces, write_files};
 pub use instance::{InputError, Instance, Knowledge, plant, read_instance};
@@ -26,7 +27,8 @@ pub use machine::Machine;
 pub use manifest::{Manifest, Stretch};
 pub use merge::{MergeError, Merged, merge};
 pub use plan::{
-    Entrant, Imported, Located, Plan, PlanError, ReportedOptimum, Roster, Sown, Span, Traced,
+    Entrant, Imported, Located, Plan, PlanError, Player, ReportedOptimum, Roster, Sown, Span,
+    Traced,
 };
 pub use replay::{Agreement, Difference, Recorded, Replay, ReplayError};
 pub use selection::{Pattern, Selection, Shard};
@@ -54,8 +56,20 @@ pub struct RunOptions {
     pub jobs: Option<usize>,
     /// Which trials of the plan.
     pub selection: Selection,
+    /// Where the methods run.
+    pub isolation: Isolation,
     /// Set to end the run at the next check of every running method.
     pub interrupt: Arc<AtomicBool>,
+}
+
+/// Where the methods of a run run.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub enum Isolation {
+    /// In threads of this process: a method that aborts or never ends takes the run with it.
+    None,
+    /// Each trial in a process of its own, started from this program file. Outside methods are processes
+    /// of their own anyway.
+    Processes(PathBuf),
 }
 
 /// Hears how a run goes. Calls come from several threads.
@@ -113,6 +127,9 @@ pub enum RunError {
     /// The system does not give the threads that were asked for.
     #[error("{0} threads cannot be started: {1}")]
     Threads(usize, String),
+    /// The process of a trial cannot be started.
+    #[error("a trial's process cannot be started: {0}")]
+    Worker(String),
     /// A defect of this program: a certificate, a family or the referee is wrong.
     #[error("internal error: a certificate, a family or the referee is wrong; {trial}: {detail}")]
     Internal {
@@ -186,6 +203,7 @@ pub fn run(
         plan,
         expansion: &expansion,
         selected: &selected,
+        isolation: &options.isolation,
         before: &before,
         folder: &folder,
         journal: &journal,

@@ -9,9 +9,9 @@ use std::sync::{Arc, Mutex, PoisonError};
 use super::expand::{Expansion, TrialSpec};
 use super::instance::Instance;
 use super::journal::{Contents, Journal, JournalError};
-use super::plan::Plan;
+use super::plan::{Plan, Player};
 use super::trial::{self, TrialEnd};
-use super::{Observer, RunError, folder};
+use super::{Isolation, Observer, RunError, folder, worker};
 use crate::record::{InstanceRecord, Record};
 
 /// What is to be run, and with what.
@@ -19,6 +19,7 @@ pub(super) struct Work<'w> {
     pub(super) plan: &'w Plan<'w>,
     pub(super) expansion: &'w Expansion,
     pub(super) selected: &'w [usize],
+    pub(super) isolation: &'w Isolation,
     pub(super) before: &'w Contents,
     pub(super) folder: &'w Path,
     pub(super) journal: &'w Journal,
@@ -109,7 +110,7 @@ impl Desk<'_> {
 
     fn execute(&self, spec: &TrialSpec) -> Result<(), RunError> {
         let instance = self.take(spec.instance)?;
-        match trial::execute(self.work.plan, spec, &instance, self.work.interrupt)? {
+        match self.play(spec, &instance)? {
             TrialEnd::Interrupted => Ok(()),
             TrialEnd::Recorded(record, trace) => {
                 if !trace.is_empty() {
@@ -120,6 +121,18 @@ impl Desk<'_> {
                 self.log.lock().unwrap_or_else(PoisonError::into_inner).records.push(*record);
                 Ok(())
             }
+        }
+    }
+
+    /// Runs a trial where the run's isolation says.
+    fn play(&self, spec: &TrialSpec, instance: &Instance) -> Result<TrialEnd, RunError> {
+        let (plan, interrupt) = (self.work.plan, self.work.interrupt);
+        match (self.work.isolation, &plan.entrants[spec.entrant].player) {
+            (Isolation::Processes(program), Player::Listed(_)) => {
+                let place = &self.work.expansion.instances[spec.instance];
+                worker::execute(program, plan, (spec, place), instance, interrupt)
+            }
+            _ => trial::execute(plan, spec, instance, interrupt),
         }
     }
 

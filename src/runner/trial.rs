@@ -11,7 +11,7 @@ use super::expand::TrialSpec;
 use super::instance::Instance;
 use super::isolation::guarded;
 use super::plan::{Entrant, Plan, Traced};
-use crate::budget::{Budget, Effort, Halt, Meter, TracePoint, Tracing};
+use crate::budget::{Budget, Counting, Effort, Halt, Meter, TracePoint, Tracing};
 use crate::methods::Trial;
 use crate::problem::{Answer, StopReason};
 use crate::record::{Cost, Figures, Identity, Record, TraceRow, Verdict, Work, measured};
@@ -31,7 +31,8 @@ struct Played {
     result: Result<Result<Answer, Halt>, String>,
     wall: Duration,
     cost: Cost,
-    effort: Effort,
+    /// None when nobody counted.
+    effort: Option<Effort>,
     trace: Vec<TraceRow>,
 }
 
@@ -78,6 +79,8 @@ pub(super) fn execute(
                     Halt::TimeLimit => Verdict::TimeLimit,
                     Halt::MemoryLimit => Verdict::MemoryLimit,
                     Halt::Refused(_) => Verdict::Refused,
+                    Halt::Crashed(_) => Verdict::Crashed,
+                    Halt::Malformed(_) => Verdict::Malformed,
                     Halt::Failed(_) | Halt::Interrupted => Verdict::Failed,
                 },
                 message,
@@ -88,24 +91,38 @@ pub(super) fn execute(
             weigh(&plan.budget, &answer, &judgement, blank, played.wall, played.cost.peak_bytes)
         }
     };
-    let identity = identity(plan, spec, entrant, instance);
+    let identity = identity(plan, spec, instance);
     let record = Record::assemble(
         identity,
         outcome.verdict,
         outcome.stop_reason,
         outcome.figures,
         played.cost,
-        Some(work(&played.effort)),
+        played.effort.as_ref().map(work),
         &outcome.message,
     );
     Ok(TrialEnd::Recorded(Box::new(record), played.trace))
+}
+
+/// Makes the record of a trial whose process ended without one.
+pub(super) fn unanswered(
+    plan: &Plan<'_>,
+    spec: &TrialSpec,
+    instance: &Instance,
+    verdict: Verdict,
+    message: &str,
+    cost: Cost,
+) -> Record {
+    let figures = Figures { optimum: instance.knowledge.optimum_value(), ..Figures::default() };
+    let identity = identity(plan, spec, instance);
+    Record::assemble(identity, verdict, verdict.word(), figures, cost, None, message)
 }
 
 /// Opens the method's stream. It depends on the instance's data, the method, its options and the
 /// repeat: neither the label nor the rest of the plan moves it.
 fn method_stream(plan: &Plan<'_>, spec: &TrialSpec, entrant: &Entrant<'_>, digest: &str) -> Stream {
     let options = entrant.options.to_string();
-    let labels = ["solve", digest, entrant.method.card().id, &options, &spec.repeat.to_string()];
+    let labels = ["solve", digest, entrant.method().card().id, &options, &spec.repeat.to_string()];
     Stream::named(plan.seed, &labels)
 }
 
@@ -142,15 +159,19 @@ fn play(
     let mut trial = Trial { options, meter, stream };
     let cpu = ThreadTime::try_now();
     let wall = Instant::now();
-    let result = guarded(|| entrant.method.solve(&instance.problem, &mut trial));
+    let result = guarded(|| entrant.method().solve(&instance.problem, &mut trial));
     let wall = wall.elapsed();
     let cpu = cpu.and_then(|start| start.try_elapsed());
+    let (wall, cpu, peak_bytes) = match trial.meter.charged() {
+        Some(charge) => (charge.wall, charge.processor, charge.peak_bytes),
+        None => (wall, cpu.ok(), trial.meter.peak_bytes()),
+    };
     let cost = Cost {
         wall_s: Some(wall.as_secs_f64()),
-        cpu_s: cpu.ok().map(|cpu| cpu.as_secs_f64()),
-        peak_bytes: trial.meter.peak_bytes(),
+        cpu_s: cpu.map(|cpu| cpu.as_secs_f64()),
+        peak_bytes,
     };
-    let effort = trial.meter.effort;
+    let effort = (trial.meter.counting() == Counting::Counted).then_some(trial.meter.effort);
     let trace = trial.meter.take_trace().into_iter().map(trace_row).collect();
     Played { result, wall, cost, effort, trace }
 }
@@ -240,12 +261,8 @@ fn weigh(
     }
 }
 
-fn identity(
-    plan: &Plan<'_>,
-    spec: &TrialSpec,
-    entrant: &Entrant<'_>,
-    instance: &Instance,
-) -> Identity {
+fn identity(plan: &Plan<'_>, spec: &TrialSpec, instance: &Instance) -> Identity {
+    let entrant = &plan.entrants[spec.entrant];
     let record = &instance.record;
     Identity {
         trial: spec.id.clone(),

@@ -19,6 +19,7 @@ use crate::budget::Budget;
 use crate::card::Settings;
 use crate::families::Family;
 use crate::methods::Method;
+use crate::methods::outside::Outside;
 use crate::record::MethodRecord;
 use crate::referee::Tolerance;
 
@@ -115,15 +116,32 @@ pub struct Entrant<'a> {
     /// Label, unique in the plan.
     pub label: String,
     /// The method.
-    pub method: &'a dyn Method,
+    pub player: Player<'a>,
     /// Resolved options.
     pub options: Settings,
 }
 
+/// A method that takes part: one of the roster, or another program.
+#[derive(Clone)]
+pub enum Player<'a> {
+    /// One of the roster.
+    Listed(&'a dyn Method),
+    /// Another program.
+    Outside(Outside),
+}
+
 impl Entrant<'_> {
+    /// Returns the method.
+    pub fn method(&self) -> &dyn Method {
+        match &self.player {
+            Player::Listed(method) => *method,
+            Player::Outside(outside) => outside,
+        }
+    }
+
     /// Describes the entrant for the journal and the tables.
     pub fn record(&self) -> MethodRecord {
-        let card = self.method.card();
+        let card = self.method().card();
         MethodRecord {
             label: self.label.clone(),
             id: card.id.to_owned(),
@@ -140,6 +158,8 @@ pub struct Plan<'a> {
     pub title: String,
     /// File name, for messages.
     pub file_name: String,
+    /// Folder that paths in the plan start from.
+    pub folder: PathBuf,
     /// The whole text.
     pub text: String,
     /// SHA-256 of the text, in hexadecimal digits.
@@ -215,6 +235,7 @@ impl<'a> Plan<'a> {
         let plan = Plan {
             title: top.text("title")?.map_or_else(|| stem.to_owned(), |title| title.value),
             file_name: file_name.to_owned(),
+            folder: folder.to_owned(),
             text: text.to_owned(),
             digest: super::hexadecimal_digest(text.as_bytes()),
             seed: sections::seed(&top)?,
@@ -223,7 +244,7 @@ impl<'a> Plan<'a> {
             tolerance: sections::tolerance(&top)?,
             sown: sections::families(&top, roster.families)?,
             imported: sections::imports(&top, folder)?,
-            entrants: sections::methods(&top, roster.methods)?,
+            entrants: sections::methods(&top, roster.methods, folder)?,
             traced: sections::traced(&top)?,
             round: 0,
         };

@@ -6,11 +6,12 @@ use std::time::Duration;
 
 use super::quantity::{self, DURATION, SIZE};
 use super::reader::{Document, Placed, Section, setting, settings};
-use super::{Entrant, Imported, PlanError, ReportedOptimum, Sown, Span, Traced};
+use super::{Entrant, Imported, PlanError, Player, ReportedOptimum, Sown, Span, Traced};
 use crate::budget::Budget;
 use crate::card::{Setting, SettingError, SettingSpec, Settings, nearest_word};
 use crate::families::Family;
 use crate::methods::Method;
+use crate::methods::outside::Outside;
 use crate::referee::Tolerance;
 
 /// Where values stand, by the names of their settings.
@@ -249,18 +250,18 @@ fn optimum(import: &Section<'_, '_>) -> Result<Option<ReportedOptimum>, PlanErro
 pub(super) fn methods<'a>(
     top: &Section<'_, '_>,
     known: &[&'a dyn Method],
+    folder: &Path,
 ) -> Result<Vec<Entrant<'a>>, PlanError> {
     let mut entrants: Vec<Entrant<'a>> = Vec::new();
     for section in top.tables("method", "[[method]]")? {
         let document = section.document;
-        if let Some(entry) = section.get("command") {
-            let message = "methods that are other programs do not exist in this version";
-            return Err(document.error(
-                entry.key_span,
-                message,
-                "the `name` of a built-in method",
-                None,
-            ));
+        if section.get("command").is_some() {
+            let entrant = outside(&section, folder)?;
+            refuse_twin(document, &entrants, &entrant.label)?;
+            let (label, method) = (entrant.label.value, entrant.method);
+            let options = Settings::of_word("command", &method.command.join(" "));
+            entrants.push(Entrant { label, player: Player::Outside(method), options });
+            continue;
         }
         section.only(&["name", "label", "options"])?;
         let named = section
@@ -272,14 +273,53 @@ pub(super) fn methods<'a>(
             Some(label) => checked_label(document, label)?,
             None => Placed { value: default_label(method, &options), span: named.span },
         };
-        if entrants.iter().any(|before| before.label == label.value) {
-            let message = format!("label {} stands in the plan twice", label.value);
-            let expected = "another `label` for each method with the same name and options";
-            return Err(document.error(label.span, &message, expected, None));
-        }
-        entrants.push(Entrant { label: label.value, method, options });
+        refuse_twin(document, &entrants, &label)?;
+        entrants.push(Entrant { label: label.value, player: Player::Listed(method), options });
     }
     Ok(entrants)
+}
+
+/// Refuses a label that a method before has.
+fn refuse_twin(
+    document: &Document<'_>,
+    before: &[Entrant<'_>],
+    label: &Placed<String>,
+) -> Result<(), PlanError> {
+    if before.iter().any(|before| before.label == label.value) {
+        let message = format!("label {} stands in the plan twice", label.value);
+        let expected = "another `label` for each method with the same name and options";
+        return Err(document.error(label.span.clone(), &message, expected, None));
+    }
+    Ok(())
+}
+
+/// An outside method and its label.
+struct Labelled {
+    label: Placed<String>,
+    method: Outside,
+}
+
+/// Reads a method that is another program: `label` and `command`.
+fn outside(section: &Section<'_, '_>, folder: &Path) -> Result<Labelled, PlanError> {
+    const EXPECTED: &str = "a list of words such as [\"python3\", \"mine.py\"]";
+    section.only(&["label", "command"])?;
+    let label = section
+        .text("label")?
+        .ok_or_else(|| section.lacks("label", "a line such as `label = \"mine\"`"))?;
+    let label = checked_label(section.document, label)?;
+    let entry = section.get("command").expect("the caller saw the key");
+    let words = entry.value.get_ref().as_array().ok_or_else(|| section.wrong(&entry, EXPECTED))?;
+    let mut command = Vec::new();
+    for word in words {
+        match word.get_ref().as_str() {
+            Some(word) if !word.is_empty() && !word.contains('\0') => command.push(word.to_owned()),
+            _ => return Err(section.wrong(&entry, EXPECTED)),
+        }
+    }
+    if command.is_empty() {
+        return Err(section.wrong(&entry, EXPECTED));
+    }
+    Ok(Labelled { label, method: Outside { command, folder: folder.to_owned() } })
 }
 
 fn options(method: &Section<'_, '_>, specs: &[SettingSpec]) -> Result<Settings, PlanError> {
