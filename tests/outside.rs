@@ -234,6 +234,11 @@ fn the_python_starter_takes_part_and_duels() {
     let duel = program(&mine, &["duel", "run", "--incumbent", "mine", "--challenger", "relax-ipm"]);
     assert_eq!(duel.code, Some(0), "{}", duel.err);
     assert!(duel.out.contains("Decision:"), "{}", duel.out);
+    // Nobody wins by what it counts of itself.
+    assert!(duel.err.contains("processor time is compared instead"), "{}", duel.err);
+    assert!(duel.out.contains("processor time ratio"), "{}", duel.out);
+    let report = std::fs::read_to_string(mine.join("run/report.html")).unwrap();
+    assert!(report.contains("Another program, in any language"), "no card of the outside method");
 }
 
 #[test]

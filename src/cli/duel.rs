@@ -13,6 +13,8 @@ use super::progress::{Bar, Progress};
 use super::report::Failure;
 use super::results::{self, Loaded};
 use super::{Ended, INTERRUPTED, Loudness, isolation, listen};
+use crate::methods::outside;
+use crate::record::MethodRecord;
 use crate::runner::{
     self, Ending, Manifest, Plan, Roster, RunOptions, Selection, Target, journal, write_files,
 };
@@ -122,6 +124,14 @@ pub(super) fn execute(command: &Duel, loudness: Loudness, bar: Bar) -> Ended {
         (results::load(&command.runs, loudness)?, Mode::Fixed)
     };
     let pairing = paired(command, &loaded)?;
+    let terms = if counts_itself(command, &loaded) && terms.basis == Basis::Effort {
+        tell(
+            "note: an outside method counts its own effort, so processor time is compared instead (start-up included)",
+        );
+        Terms { basis: Basis::CpuTime, ..terms }
+    } else {
+        terms
+    };
     let places = places(&loaded);
     let program = results::program();
     let replay = duel::Replay {
@@ -160,6 +170,13 @@ fn paired(command: &Duel, loaded: &Loaded) -> Result<Pairing, Failure> {
     let merged = &loaded.merged;
     pairing::pair(&merged.records, &merged.instances, &command.challenger, &command.incumbent)
         .map_err(Failure::input)
+}
+
+/// Returns whether one of the two is an outside method, whose effort nobody but itself has counted.
+fn counts_itself(command: &Duel, loaded: &Loaded) -> bool {
+    let both = [&command.incumbent, &command.challenger];
+    let outside = |method: &MethodRecord| method.id == outside::ID && both.contains(&&method.label);
+    loaded.merged.methods.iter().any(outside)
 }
 
 /// Tells in which of the folders a trial is recorded.
@@ -217,7 +234,9 @@ fn until_decided(
     loop {
         let loaded = results::load(&folders, loudness)?;
         let pairing = paired(command, &loaded)?;
-        let ruling = duel::look(look, &pairing, terms).map_err(Failure::input)?;
+        let basis = if counts_itself(command, &loaded) { Basis::CpuTime } else { terms.basis };
+        let ruling =
+            duel::look(look, &pairing, &Terms { basis, ..*terms }).map_err(Failure::input)?;
         if loudness != Loudness::Quiet {
             tell(&format!(
                 "look {look}: {} after {} instances",

@@ -10,7 +10,7 @@ use serde_json::{Value, json};
 
 use super::output::{say, tell};
 use super::report::Failure;
-use super::{Ended, INTERRUPTED, Loudness, listen};
+use super::{Ended, INTERRUPTED, Loudness, isolation, listen};
 use crate::runner::{Agreement, Recorded, Replay as Replayed, ReplayError, Roster};
 
 /// Exit code of a replay that found a difference.
@@ -47,9 +47,10 @@ pub(super) fn execute(command: &Replay, loudness: Loudness) -> Ended {
     if chatty {
         say(&surroundings(&run))?;
     }
+    let isolation = isolation(false);
     let mut replays = Vec::new();
     for trial in trials {
-        let replay = match run.replay(trial, &interrupt) {
+        let replay = match run.replay(trial, &isolation, &interrupt) {
             Err(ReplayError::Interrupted) => {
                 tell("interrupted");
                 return Ok(ExitCode::from(INTERRUPTED));

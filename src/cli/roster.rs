@@ -210,7 +210,8 @@ pub(super) fn family_cards(ids: &BTreeSet<&str>) -> Vec<CardText> {
 
 /// Lists the cards of the methods with the given ids, for the report.
 pub(super) fn method_cards(ids: &BTreeSet<&str>) -> Vec<CardText> {
-    let cards = crate::methods::registry().iter().map(|method| Card::Method(method.card()));
+    let listed = crate::methods::registry().iter().map(|method| Card::Method(method.card()));
+    let cards = listed.chain([Card::Method(&crate::methods::outside::CARD)]);
     cards.filter(|card| ids.contains(card.id())).map(|card| card.for_report()).collect()
 }
 

@@ -9,8 +9,8 @@ use super::expand::Expansion;
 use super::journal::{self, Contents, JournalError};
 use super::manifest::{Manifest, Stretch};
 use super::plan::{Plan, PlanError, Roster};
-use super::trial::{self, TrialEnd};
-use super::{FolderError, RunError};
+use super::trial::TrialEnd;
+use super::{FolderError, Isolation, RunError, worker};
 use crate::card::nearest_word;
 use crate::record::Record;
 
@@ -150,7 +150,12 @@ impl<'a> Recorded<'a> {
     ///
     /// # Errors
     /// See [`ReplayError`].
-    pub fn replay(&self, id: &str, interrupt: &Arc<AtomicBool>) -> Result<Replay, ReplayError> {
+    pub fn replay(
+        &self,
+        id: &str,
+        isolation: &Isolation,
+        interrupt: &Arc<AtomicBool>,
+    ) -> Result<Replay, ReplayError> {
         let spec = self.expansion.trials.iter().find(|trial| trial.id == id);
         let recorded = self.contents.records.iter().find(|record| record.trial == id);
         let (Some(spec), Some(recorded)) = (spec, recorded) else {
@@ -177,7 +182,8 @@ impl<'a> Recorded<'a> {
             agreement = Agreement::Different;
             differences.extend(altered);
         }
-        let replayed = match trial::execute(&self.plan, spec, &instance, interrupt)? {
+        let place = (spec, &self.expansion.instances[spec.instance]);
+        let replayed = match worker::play(isolation, &self.plan, place, &instance, interrupt)? {
             TrialEnd::Recorded(record, _) => *record,
             TrialEnd::Interrupted => return Err(ReplayError::Interrupted),
         };

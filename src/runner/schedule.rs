@@ -9,8 +9,8 @@ use std::sync::{Arc, Mutex, PoisonError};
 use super::expand::{Expansion, TrialSpec};
 use super::instance::Instance;
 use super::journal::{Contents, Journal, JournalError};
-use super::plan::{Plan, Player};
-use super::trial::{self, TrialEnd};
+use super::plan::Plan;
+use super::trial::TrialEnd;
 use super::{Isolation, Observer, RunError, folder, worker};
 use crate::record::{InstanceRecord, Record};
 
@@ -126,14 +126,9 @@ impl Desk<'_> {
 
     /// Runs a trial where the run's isolation says.
     fn play(&self, spec: &TrialSpec, instance: &Instance) -> Result<TrialEnd, RunError> {
-        let (plan, interrupt) = (self.work.plan, self.work.interrupt);
-        match (self.work.isolation, &plan.entrants[spec.entrant].player) {
-            (Isolation::Processes(program), Player::Listed(_)) => {
-                let place = &self.work.expansion.instances[spec.instance];
-                worker::execute(program, plan, (spec, place), instance, interrupt)
-            }
-            _ => trial::execute(plan, spec, instance, interrupt),
-        }
+        let place = &self.work.expansion.instances[spec.instance];
+        let work = self.work;
+        worker::play(work.isolation, work.plan, (spec, place), instance, work.interrupt)
     }
 
     /// Returns the instance, planting and recording it when this is its first trial.

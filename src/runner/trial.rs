@@ -44,7 +44,7 @@ struct Outcome {
     message: String,
 }
 
-/// Runs one trial.
+/// Runs one trial; `ended` is called between the method and the referee.
 ///
 /// # Errors
 /// The referee found an answer better than a certified optimum allows, or panicked.
@@ -53,11 +53,13 @@ pub(super) fn execute(
     spec: &TrialSpec,
     instance: &Instance,
     interrupt: &Arc<AtomicBool>,
+    ended: &dyn Fn(),
 ) -> Result<TrialEnd, RunError> {
     let entrant = &plan.entrants[spec.entrant];
     let stream = method_stream(plan, spec, entrant, &instance.record.digest);
     let tracing = tracing(plan, spec, instance);
     let played = play(plan, entrant, instance, stream, interrupt, tracing);
+    ended();
     // A method that noticed the interruption may have ended early in any way.
     if interrupt.load(Ordering::Relaxed) {
         return Ok(TrialEnd::Interrupted);

@@ -3,30 +3,31 @@
 //! The worker plants the instance anew from its seed, says so by its first byte, runs the method and the
 //! referee, and prints the record. What the process dies of (an abort, a stack that overflows, memory
 //! that is refused, a method that never looks at the clock) becomes the verdict of its trial and of no
-//! other. The clock runs from that first byte on, so that start-up and planting are not in the limit; the
-//! times in the record are those that the worker took of the method alone.
+//! other. The clock runs from that first byte to a second one, which says that the method has ended, so that
+//! start-up, planting and refereeing are not in the limit; the times in the record are those that the worker
+//! took of the method alone.
 
 use std::cell::RefCell;
 use std::io::Write;
 use std::path::{Path, PathBuf};
 use std::process::Command;
-use std::sync::Arc;
 use std::sync::atomic::{AtomicBool, Ordering};
+use std::sync::{Arc, Mutex, PoisonError};
 use std::time::Duration;
 
 use serde::{Deserialize, Serialize};
 
-use super::RunError;
 use super::expand::{Expansion, InstanceSpec, TrialSpec};
 use super::instance::Instance;
-use super::plan::{Plan, Roster};
+use super::plan::{Plan, Player, Roster};
 use super::trial::{self, TrialEnd};
+use super::{Isolation, RunError};
 use crate::budget::{Budget, Halt, Stopwatch};
 use crate::methods::outside::process::{self, Ending, Outcome, Watch};
 use crate::record::{Cost, Record, TraceRow, Verdict};
 
-/// What the worker prints when the instance is planted.
-const PLANTED: &[u8] = b"\n";
+/// What the worker prints when the instance is planted, and again when the method has ended.
+const MARK: &[u8] = b"\n";
 
 /// Most bytes of a worker's output: a record, a trace of a thousand points, and what a method prints.
 const MOST_PRINTED_BYTES: u64 = 64 << 20;
@@ -62,11 +63,30 @@ enum Report {
     },
 }
 
+/// Runs a trial where `isolation` says. An outside method is a process of its own anyway.
+///
+/// # Errors
+/// See [`execute`] and [`trial::execute`].
+pub(super) fn play(
+    isolation: &Isolation,
+    plan: &Plan<'_>,
+    (spec, place): (&TrialSpec, &InstanceSpec),
+    instance: &Instance,
+    interrupt: &Arc<AtomicBool>,
+) -> Result<TrialEnd, RunError> {
+    match (isolation, &plan.entrants[spec.entrant].player) {
+        (Isolation::Processes(program), Player::Listed(_)) => {
+            execute(program, plan, (spec, place), instance, interrupt)
+        }
+        _ => trial::execute(plan, spec, instance, interrupt, &|| {}),
+    }
+}
+
 /// Runs a trial in a process of its own, started from `program`.
 ///
 /// # Errors
 /// The process cannot be started, or it found a defect of this program.
-pub(super) fn execute(
+fn execute(
     program: &Path,
     plan: &Plan<'_>,
     (spec, place): (&TrialSpec, &InstanceSpec),
@@ -87,7 +107,8 @@ pub(super) fn execute(
         if interrupt.load(Ordering::Relaxed) {
             return Err(Halt::Interrupted);
         }
-        if printed == 0 {
+        // Neither planting nor the referee is the method's business.
+        if printed != MARK.len() as u64 {
             return Ok(());
         }
         let mut started = started.borrow_mut();
@@ -109,7 +130,7 @@ pub(super) fn execute(
 pub const COMMAND: &str = "trial-worker";
 
 /// Returns how long a method may run before its process is ended: it has the limit to notice by itself, and
-/// a quarter of it and half a second to end and to be refereed.
+/// a quarter of it and half a second to end.
 fn patience(budget: &Budget) -> Duration {
     budget.wall.saturating_add(budget.wall / 4).saturating_add(Duration::from_millis(500))
 }
@@ -130,8 +151,10 @@ fn conclude(
             return Err(RunError::Internal { trial, detail });
         }
         (Ending::Halted(Halt::Interrupted), _) => return Ok(TrialEnd::Interrupted),
-        _ if !outcome.printed.starts_with('\n') && outcome.printed.len() < KEPT_BYTES => {
-            let detail = format!("the worker did not come to the method{}", outcome.last_words());
+        // What dies before the method or after it is this program.
+        (ending, _) if *ending != Ending::Flood && outcome.printed.as_bytes() != MARK => {
+            let when = if outcome.printed.is_empty() { "before" } else { "after" };
+            let detail = format!("the worker ended {when} the method{}", outcome.last_words());
             return Err(RunError::Internal { trial: spec.id.clone(), detail });
         }
         _ => {}
@@ -181,19 +204,26 @@ pub fn serve(
         .map_err(|error| error.to_string())?
         .in_round(task.round);
     follow_parent();
-    limit_memory(&plan.budget);
     let expansion = Expansion::single(task.instance);
     let interrupt = Arc::new(AtomicBool::new(false));
+    let output = Mutex::new(output);
+    let print = |bytes: &[u8]| {
+        let mut output = output.lock().unwrap_or_else(PoisonError::into_inner);
+        output.write_all(bytes).and_then(|()| output.flush())
+    };
     let body = || -> Result<Report, String> {
         let instance = match expansion.load(&plan, 0) {
             Ok(instance) => instance,
             Err(error) => return Ok(internal(&task.trial, error)),
         };
-        output
-            .write_all(PLANTED)
-            .and_then(|()| output.flush())
-            .map_err(|error| error.to_string())?;
-        Ok(match trial::execute(&plan, &task.trial, &instance, &interrupt) {
+        print(MARK).map_err(|error| error.to_string())?;
+        limit_memory(&plan.budget);
+        let ended = || {
+            lift_memory_limit();
+            // A reader that is gone is found out when the report is printed.
+            let _ = print(MARK);
+        };
+        Ok(match trial::execute(&plan, &task.trial, &instance, &interrupt, &ended) {
             Ok(TrialEnd::Recorded(record, trace)) => Report::Recorded(record, trace),
             Ok(TrialEnd::Interrupted) => return Err("interrupted".to_owned()),
             Err(error) => internal(&task.trial, error),
@@ -205,10 +235,7 @@ pub fn serve(
         thread.join().unwrap_or_else(|_| Err("the worker panicked".to_owned()))
     })?;
     let line = serde_json::to_string(&report).expect("a report is plain data");
-    output
-        .write_all(format!("\n{line}\n").as_bytes())
-        .and_then(|()| output.flush())
-        .map_err(|error| error.to_string())
+    print(format!("\n{line}\n").as_bytes()).map_err(|error| error.to_string())
 }
 
 fn internal(spec: &TrialSpec, error: RunError) -> Report {
@@ -231,12 +258,25 @@ fn follow_parent() {
 fn limit_memory(budget: &Budget) {
     #[cfg(unix)]
     if let Some(limit) = budget.memory {
-        use nix::sys::resource::{Resource, setrlimit};
+        use nix::sys::resource::{Resource, getrlimit, setrlimit};
         let most = limit.saturating_add(HEADROOM);
         // Where the system refuses the limit itself, the cooperative one remains.
-        let _ = setrlimit(Resource::RLIMIT_AS, most, most);
+        if let Ok((_, hard)) = getrlimit(Resource::RLIMIT_AS) {
+            let _ = setrlimit(Resource::RLIMIT_AS, most.min(hard), hard);
+        }
         let _ = setrlimit(Resource::RLIMIT_CORE, 0, 0);
     }
     #[cfg(not(unix))]
     let _ = budget;
+}
+
+/// Takes the limit back: the referee's memory is not the method's.
+fn lift_memory_limit() {
+    #[cfg(unix)]
+    {
+        use nix::sys::resource::{Resource, getrlimit, setrlimit};
+        if let Ok((_, hard)) = getrlimit(Resource::RLIMIT_AS) {
+            let _ = setrlimit(Resource::RLIMIT_AS, hard, hard);
+        }
+    }
 }

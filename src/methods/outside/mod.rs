@@ -38,8 +38,12 @@ const KEPT_BYTES: usize = 2000;
 /// Share of the memory limit from which on the death of a program is put down to it.
 const NEAR_LIMIT: f64 = 0.75;
 
-static CARD: MethodCard = MethodCard {
-    id: "outside",
+/// Id of every outside method in records; its label tells them apart.
+pub const ID: &str = "outside";
+
+/// What is said of every outside method.
+pub static CARD: MethodCard = MethodCard {
+    id: ID,
     title: "Another program, in any language, spoken to over files",
     class: MethodClass::Outside,
     reference: "whatever the program implements",
