@@ -103,7 +103,12 @@ fn record(number: usize, instance: &InstanceRecord, at: usize, stream: &mut Stre
             tail_ratio: Some(0.0),
             ..Figures::default()
         },
-        Cost { wall_s: Some(seconds), cpu_s: Some(seconds), peak_bytes: Some(1 << 20) },
+        Cost {
+            wall_s: Some(seconds),
+            cpu_s: Some(seconds),
+            peak_bytes: Some(1 << 20),
+            ..Cost::default()
+        },
         Some(Work {
             flops: (seconds * 1e9) as u64,
             eigendecompositions: 10,

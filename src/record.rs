@@ -7,7 +7,7 @@
 use serde::{Deserialize, Serialize};
 
 /// Version of the record layout. It changes when a column is added, dropped or changes its meaning.
-pub const SCHEMA: u32 = 2;
+pub const SCHEMA: u32 = 3;
 
 /// Returns the value when it is finite, and nothing otherwise; a negative zero becomes zero.
 pub fn measured(value: f64) -> Option<f64> {
@@ -124,7 +124,7 @@ pub struct Identity {
 pub struct Figures {
     /// Correct digits of the objective at the target rank.
     pub digits: Option<f64>,
-    /// `||A(X_r) - b||_2 / (1 + ||b||_2)` of the truncated point.
+    /// `||A(X_r) - b|| / (1 + ||b||)` of the truncated point, in the referee's canonical units.
     pub feasibility: Option<f64>,
     /// Least eigenvalue over the blocks of the returned point.
     pub min_eigenvalue: Option<f64>,
@@ -132,7 +132,7 @@ pub struct Figures {
     pub objective: Option<f64>,
     /// The known optimum.
     pub optimum: Option<f64>,
-    /// `|<C, X_r> - p*| / (1 + |p*|)`.
+    /// `|<C, X_r> - p*| / (1 + |p*|)`, in the referee's canonical units.
     pub objective_error: Option<f64>,
     /// Relative distance to the planted point, where it is the only optimum.
     pub distance: Option<f64>,
@@ -152,8 +152,20 @@ pub struct Figures {
     pub lower_bound: Option<f64>,
 }
 
+/// What else the run did while a trial was timed.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Timing {
+    /// Trials ran side by side, as many as the run had jobs.
+    #[default]
+    Shared,
+    /// The trial was run again when all others had ended, and its time and memory are of that run.
+    Alone,
+}
+
 /// Time and memory of a trial.
-#[derive(Clone, Copy, Debug, Default, PartialEq)]
+#[derive(Clone, Copy, Debug, Default, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
 pub struct Cost {
     /// Wall time of the method, in seconds.
     pub wall_s: Option<f64>,
@@ -161,6 +173,8 @@ pub struct Cost {
     pub cpu_s: Option<f64>,
     /// Most memory held beyond the start, in bytes.
     pub peak_bytes: Option<u64>,
+    /// What else the run did meanwhile.
+    pub timing: Timing,
 }
 
 /// Machine-independent work counts of a trial.
@@ -221,6 +235,7 @@ pub struct Record {
     pub wall_s: Option<f64>,
     pub cpu_s: Option<f64>,
     pub peak_bytes: Option<u64>,
+    pub timing: Timing,
     pub flops: Option<u64>,
     pub eigendecompositions: Option<u64>,
     pub factorisations: Option<u64>,
@@ -276,6 +291,7 @@ impl Record {
             wall_s: finite(cost.wall_s),
             cpu_s: finite(cost.cpu_s),
             peak_bytes: cost.peak_bytes,
+            timing: cost.timing,
             flops: work.map(|work| work.flops),
             eigendecompositions: work.map(|work| work.eigendecompositions),
             factorisations: work.map(|work| work.factorisations),
@@ -287,7 +303,30 @@ impl Record {
 
     /// Returns the record without its time and memory figures: what two runs of one plan share.
     pub fn without_measurements(&self) -> Self {
-        Record { wall_s: None, cpu_s: None, peak_bytes: None, ..self.clone() }
+        Record {
+            wall_s: None,
+            cpu_s: None,
+            peak_bytes: None,
+            timing: Timing::Shared,
+            ..self.clone()
+        }
+    }
+
+    /// Returns the time and memory figures.
+    pub fn cost(&self) -> Cost {
+        Cost {
+            wall_s: self.wall_s,
+            cpu_s: self.cpu_s,
+            peak_bytes: self.peak_bytes,
+            timing: self.timing,
+        }
+    }
+
+    /// Replaces the time and memory figures.
+    pub fn set_cost(&mut self, cost: Cost) {
+        let Cost { wall_s, cpu_s, peak_bytes, timing } = cost;
+        (self.wall_s, self.cpu_s, self.peak_bytes, self.timing) =
+            (wall_s.and_then(measured), cpu_s.and_then(measured), peak_bytes, timing);
     }
 }
 
@@ -323,7 +362,9 @@ pub struct InstanceRecord {
     pub optimum: Option<f64>,
     /// `certified`, `reported` or `unknown`.
     pub optimum_known: String,
-    /// Kind of certificate, or `none`.
+    /// Kind of certificate: `dual-pair`, `shared-minimiser`, `rank-bound`, `enumerated` (exact), `verified-pair` (a
+    /// definiteness proved in floating point with a bound of the error), `no-proof` (a planted point whose optimality
+    /// is not proved), or `none`.
     pub certificate: String,
     /// `proved`, `not-proved` or `unknown`.
     pub uniqueness: String,
@@ -444,7 +485,7 @@ mod tests {
         let expected = "trial,instance,family,parameters,order,constraints,target_rank,method,options,seed,\
             repeat,verdict,stop_reason,digits,feasibility,min_eigenvalue,objective,optimum,objective_error,\
             distance,rank_at_1e-4,rank_at_1e-6,rank_at_1e-8,tail_ratio,restored_feasibility,\
-            restored_objective_error,raw_feasibility,raw_objective,lower_bound,wall_s,cpu_s,peak_bytes,flops,\
+            restored_objective_error,raw_feasibility,raw_objective,lower_bound,wall_s,cpu_s,peak_bytes,timing,flops,\
             eigendecompositions,factorisations,operator_products,inner_steps,message";
         assert_eq!(text.lines().next().unwrap(), expected);
     }

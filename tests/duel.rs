@@ -59,7 +59,7 @@ fn record(
         verdict,
         "converged",
         Figures { optimum: instance.optimum, ..Figures::default() },
-        Cost { wall_s: Some(cpu_s), cpu_s: Some(cpu_s), peak_bytes: None },
+        Cost { wall_s: Some(cpu_s), cpu_s: Some(cpu_s), peak_bytes: None, ..Cost::default() },
         flops.map(|flops| Work { flops, ..Work::default() }),
         "",
     )

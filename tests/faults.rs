@@ -18,8 +18,8 @@ mod scripted {
     use rankassay::problem::{Answer, Problem};
     use rankassay::record::{Record, Verdict};
     use rankassay::runner::{
-        self, Ending, Isolation, Observer, Outcome, Plan, Roster, RunOptions, Selection, Target,
-        worker,
+        self, Ending, Isolation, Observer, Outcome, Placement, Plan, Retiming, Roster, RunOptions,
+        Selection, Target, worker,
     };
 
     type Play = fn(&Problem, &mut Trial) -> Result<Answer, Halt>;
@@ -149,6 +149,8 @@ mod scripted {
             jobs: Some(2),
             selection: Selection { methods: only, ..Selection::default() },
             isolation,
+            placement: Placement::Free,
+            retiming: Retiming::None,
             interrupt: Arc::new(AtomicBool::new(false)),
         };
         runner::run(&plan, &options, &Silent).unwrap()
@@ -201,6 +203,8 @@ mod scripted {
                 ..Selection::default()
             },
             isolation: here(),
+            placement: Placement::Free,
+            retiming: Retiming::None,
             interrupt: Arc::clone(&interrupt),
         };
         let started = Instant::now();

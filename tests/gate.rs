@@ -101,6 +101,7 @@ fn record(row: &InstanceRecord, method: &str, repeat: u64, at: usize) -> Record 
             wall_s: Some(0.02 * (1.0 + at as f64)),
             cpu_s: Some(0.018 * (1.0 + at as f64)),
             peak_bytes: Some(1 << 20),
+            ..Cost::default()
         },
         Some(Work { flops: 100_000 + 3_111 * at as u64, ..Work::default() }),
         "a message, with a comma and \"quotes\"",

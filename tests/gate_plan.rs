@@ -12,7 +12,8 @@ use rankassay::methods::{self, Method, Trial};
 use rankassay::problem::{Answer, Problem};
 use rankassay::record::{Record, Verdict};
 use rankassay::runner::{
-    self, Isolation, Observer, Outcome, Plan, Roster, RunOptions, Selection, Target, journal,
+    self, Isolation, Observer, Outcome, Placement, Plan, Retiming, Roster, RunOptions, Selection,
+    Target, journal,
 };
 use rankassay::verdicts::gate::{
     Baseline, Gate, Kind, Outcome as Judged, Passage, RunView, Terms, TimeBasis, gate,
@@ -87,6 +88,8 @@ fn run(harm: Harm, into: &Path) -> Outcome {
         jobs: Some(1),
         selection: Selection::default(),
         isolation: Isolation::None,
+        placement: Placement::Free,
+        retiming: Retiming::None,
         interrupt: Arc::new(AtomicBool::new(false)),
     };
     runner::run(&plan, &options, &Silent).unwrap()

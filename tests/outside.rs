@@ -163,7 +163,12 @@ fn children_that_outlive_the_program_are_ended_with_it() {
     let script = format!("sleep 300 &\necho $! > child.pid\n{}", write(GOOD));
     let rows = play(folder.path(), &[("parent", &script)]);
     assert_eq!(rows["parent"]["verdict"], "solved");
-    let child = std::fs::read_to_string(folder.path().join("child.pid")).unwrap();
+    wait_for_the_end_of(&folder.path().join("child.pid"));
+}
+
+/// Waits until the process whose number a file holds has ended.
+fn wait_for_the_end_of(file: &Path) {
+    let child = std::fs::read_to_string(file).unwrap();
     let alive = || {
         let kill = std::process::Command::new("kill").args(["-0", child.trim()]).output().unwrap();
         let state = std::fs::read_to_string(format!("/proc/{}/stat", child.trim()));
@@ -175,6 +180,32 @@ fn children_that_outlive_the_program_are_ended_with_it() {
         assert!(started.elapsed() < Duration::from_secs(10), "the child is still there");
         std::thread::sleep(Duration::from_millis(20));
     }
+}
+
+#[test]
+#[cfg(target_os = "linux")]
+fn children_that_leave_the_group_are_ended_too() {
+    let folder = tempfile::tempdir().unwrap();
+    // A session of its own is outside of every process group of the trial; the wait makes its number known.
+    let script = format!(
+        "setsid sh -c 'echo $$ > child.pid; exec sleep 300' >/dev/null 2>&1 &\n\
+         while [ ! -s child.pid ]; do sleep 0.02; done\n{}",
+        write(GOOD)
+    );
+    let rows = play(folder.path(), &[("parent", &script)]);
+    assert_eq!(rows["parent"]["verdict"], "solved", "{}", rows["parent"]["message"]);
+    wait_for_the_end_of(&folder.path().join("child.pid"));
+}
+
+#[test]
+#[cfg(target_os = "linux")]
+fn a_program_that_multiplies_is_ended() {
+    let folder = tempfile::tempdir().unwrap();
+    let script = "i=0\nwhile [ $i -lt 2000 ]; do sleep 300 & i=$((i + 1)); done\nwait";
+    let rows = play(folder.path(), &[("rabbit", script)]);
+    let row = &rows["rabbit"];
+    assert_eq!(row["verdict"], "crashed", "{}", row["message"]);
+    assert!(row["message"].contains("processes at once, more than 256"), "{}", row["message"]);
 }
 
 #[test]

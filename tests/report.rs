@@ -111,6 +111,7 @@ fn record(number: usize, instance: &InstanceRecord, method: &str, verdict: Verdi
             wall_s: Some(0.5 + number as f64),
             cpu_s: Some(0.25 + number as f64),
             peak_bytes: Some(1 << 20),
+            ..Cost::default()
         },
         Some(Work { flops: 1_000_000 * (number as u64 + 1), ..Work::default() }),
         if verdict == Verdict::Solved { "" } else { "values 9.9 and 10.1" },

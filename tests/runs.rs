@@ -2,7 +2,7 @@
 
 use std::path::{Path, PathBuf};
 use std::process::Output;
-use std::sync::atomic::{AtomicBool, Ordering};
+use std::sync::atomic::{AtomicBool, AtomicUsize, Ordering};
 use std::sync::{Arc, Mutex};
 use std::time::{Duration, Instant};
 
@@ -13,10 +13,10 @@ use rankassay::families::{self, Family, PlantError};
 use rankassay::methods::{Method, Trial};
 use rankassay::problem::certificate::Planted;
 use rankassay::problem::{Answer, BlockPoint, Factor, Point, Problem, StopReason};
-use rankassay::record::{Record, Verdict};
+use rankassay::record::{Record, Timing, Verdict};
 use rankassay::runner::{
-    self, Ending, Isolation, Observer, Outcome, Pattern, Plan, Roster, RunError, RunOptions,
-    Selection, Target, journal,
+    self, Ending, Isolation, Observer, Outcome, Pattern, Placement, Plan, Retiming, Roster,
+    RunError, RunOptions, Selection, Target, journal,
 };
 use rankassay::seed::Stream;
 
@@ -205,6 +205,8 @@ fn options(target: Target, jobs: usize) -> RunOptions {
         jobs: Some(jobs),
         selection: Selection::default(),
         isolation: Isolation::None,
+        placement: Placement::Free,
+        retiming: Retiming::None,
         interrupt: Arc::new(AtomicBool::new(false)),
     }
 }
@@ -412,8 +414,168 @@ fn shards_make_up_the_plan() {
     let fresh = run(&plan, &options(Target::New(folder.path().join("fresh")), 1));
     assert_eq!(unmeasured(&merged.records), unmeasured(&fresh.records));
     assert_eq!(merged.instances, fresh.instances);
-    runs.push(runs[0].clone());
-    assert!(runner::merge(runs).unwrap_err().to_string().contains("both recorded"));
+    assert_eq!((merged.copies, merged.disagreements.len(), merged.missing.len()), (0, 0, 0));
+
+    // A part that ran twice: copies that agree but for time collapse.
+    let mut twice = runs.clone();
+    let mut again = runs[0].clone();
+    again.0 = "again".to_owned();
+    for record in &mut again.1.records {
+        record.wall_s = Some(123.0);
+    }
+    let copies = again.1.records.len() as u64;
+    twice.push(again.clone());
+    let collapsed = runner::merge(twice.clone()).unwrap();
+    assert_eq!(collapsed.records, merged.records);
+    assert_eq!((collapsed.copies, collapsed.disagreements.len()), (copies, 0));
+
+    // A copy that says otherwise is told, and the first one is kept.
+    let record = &mut twice.last_mut().unwrap().1.records[0];
+    record.objective = record.objective.map(|objective| objective + 1e-9);
+    let (trial, column) = (record.trial.clone(), "objective");
+    let disagreeing = runner::merge(twice).unwrap();
+    assert_eq!(disagreeing.records, merged.records);
+    assert_eq!(disagreeing.copies, copies - 1);
+    let [found] = disagreeing.disagreements.as_slice() else {
+        panic!("{:?}", disagreeing.disagreements)
+    };
+    assert_eq!((found.kept.as_str(), found.other.as_str()), (runs[0].0.as_str(), "again"));
+    assert_eq!(found.columns.len(), 1);
+    assert_eq!(found.columns[0][0], column);
+    let instance = trial.split_once('-').unwrap().1;
+    assert!(instance.starts_with(found.trial.split(' ').next().unwrap()), "{trial}: {found:?}");
+
+    // What no part recorded is missing, by its place in the plan.
+    let lost = runs.remove(1);
+    let partial = runner::merge(runs).unwrap();
+    let [missing] = partial.missing.as_slice() else { panic!("{:?}", partial.missing) };
+    assert_eq!(missing.of, fresh.records.len() as u64);
+    let ids = runner::trial_ids(&plan);
+    let named: Vec<&str> = missing.places.iter().map(|at| ids[*at as usize].as_str()).collect();
+    let mut expected: Vec<&str> =
+        lost.1.records.iter().map(|record| record.trial.as_str()).collect();
+    expected.sort_unstable();
+    assert_eq!(named, expected);
+}
+
+#[test]
+fn methods_of_an_instance_come_in_an_order_drawn_from_the_seed() {
+    let folder = tempfile::tempdir().unwrap();
+    let random = scripted!("random", RANDOM);
+    let methods: [&dyn Method; 1] = [&random];
+    let plan = random_plan(&methods, 1);
+    let order = |name: &str| -> Vec<String> {
+        let out = folder.path().join(name);
+        run(&plan, &options(Target::New(out.clone()), 1));
+        journal_records(&out).into_iter().map(|record| record.trial).collect()
+    };
+    let (first, second) = (order("first"), order("second"));
+    assert_eq!(first, second);
+    let ids = runner::trial_ids(&plan);
+    assert_ne!(first, ids, "the order of the plan is not the order of running");
+    // Instances stay in plan order, so that each is planted once and dropped soon.
+    let each = 4;
+    assert_eq!(ids.len() % each, 0);
+    let place = |id: &String| ids.iter().position(|other| other == id).unwrap() / each;
+    assert!(first.windows(2).all(|pair| place(&pair[0]) <= place(&pair[1])));
+    let leaders: std::collections::BTreeSet<usize> = (0..ids.len() / each)
+        .map(|at| ids.iter().position(|id| *id == first[each * at]).unwrap() % each)
+        .collect();
+    assert!(leaders.len() > 1, "the same trial always comes first: {leaders:?}");
+}
+
+#[test]
+fn solved_trials_are_timed_once_more_alone() {
+    static CALLS: AtomicUsize = AtomicUsize::new(0);
+    static RUNNING: AtomicUsize = AtomicUsize::new(0);
+    static BESIDE: AtomicUsize = AtomicUsize::new(0);
+    const SLEEPY: Play = |problem, trial| {
+        if RUNNING.fetch_add(1, Ordering::SeqCst) > 0 {
+            BESIDE.fetch_add(1, Ordering::SeqCst);
+        }
+        std::thread::sleep(Duration::from_millis(20));
+        RUNNING.fetch_sub(1, Ordering::SeqCst);
+        CALLS.fetch_add(1, Ordering::SeqCst);
+        let _ = trial;
+        Ok(answer(problem.blocks()[0].order, &[vec![1.0, -1.0]], StopReason::Converged))
+    };
+    let fickle_count: Play = |problem, _| {
+        static TURN: AtomicUsize = AtomicUsize::new(0);
+        let turn = TURN.fetch_add(1, Ordering::SeqCst);
+        let mut given =
+            answer(problem.blocks()[0].order, &[vec![1.0, -1.0]], StopReason::Converged);
+        given.note = format!("turn {turn}");
+        Ok(given)
+    };
+    let wrong: Play = |problem, _| {
+        Ok(answer(problem.blocks()[0].order, &[vec![1.0, 1.0]], StopReason::Converged))
+    };
+    let sleepy = scripted!("sleepy", SLEEPY);
+    let fickle = scripted!("fickle", fickle_count);
+    let wrong = scripted!("wrong", wrong);
+    let methods: [&dyn Method; 3] = [&sleepy, &fickle, &wrong];
+    let folder = tempfile::tempdir().unwrap();
+    let plan = pair_plan(folder.path(), &methods, "repeats = 4\n");
+    let out = folder.path().join("out");
+    let silent = Silent::default();
+    let plain = options(Target::New(out.clone()), 2);
+    let timed = RunOptions { retiming: Retiming::Solved, ..plain };
+    let outcome = runner::run(&plan, &timed, &silent).unwrap();
+    let of = |label: &str| -> Vec<&Record> {
+        outcome.records.iter().filter(|record| record.method == label).collect()
+    };
+    assert!(of("sleepy").iter().all(|record| record.timing == Timing::Alone));
+    assert!(of("wrong").iter().all(|record| record.timing == Timing::Shared));
+    // What does not end as before keeps its first time, and says so.
+    assert!(of("fickle").iter().all(|record| record.timing == Timing::Shared));
+    let notices = silent.notices.lock().unwrap();
+    assert_eq!(
+        notices.iter().filter(|text| text.contains("did not end alone as it did")).count(),
+        4
+    );
+    assert_eq!(CALLS.load(Ordering::SeqCst), 8);
+    let before = BESIDE.load(Ordering::SeqCst);
+    // Only the first four may have had a neighbour.
+    assert!(before <= 3, "{before}");
+    drop(notices);
+    // The journal holds the second times: resuming runs nothing again.
+    let again =
+        RunOptions { retiming: Retiming::Solved, ..options(Target::Resume(out.clone()), 2) };
+    let resumed = run(&plan, &again);
+    assert_eq!(CALLS.load(Ordering::SeqCst), 8);
+    assert_eq!(
+        resumed.records.iter().map(|record| record.timing).collect::<Vec<_>>(),
+        outcome.records.iter().map(|record| record.timing).collect::<Vec<_>>()
+    );
+}
+
+#[test]
+#[cfg(target_os = "linux")]
+fn pinned_trials_run_on_one_core_each() {
+    const WHERE: Play = |problem, _| {
+        let status = std::fs::read_to_string("/proc/thread-self/status").unwrap();
+        let allowed = status.lines().find_map(|line| line.strip_prefix("Cpus_allowed_list:"));
+        let mut given =
+            answer(problem.blocks()[0].order, &[vec![1.0, -1.0]], StopReason::Converged);
+        given.note = format!("cores {}", allowed.unwrap().trim());
+        Ok(given)
+    };
+    let method = scripted!("where", WHERE);
+    let methods: [&dyn Method; 1] = [&method];
+    let folder = tempfile::tempdir().unwrap();
+    let plan = pair_plan(folder.path(), &methods, "repeats = 6\n");
+    let out = folder.path().join("out");
+    let pinned =
+        RunOptions { placement: Placement::Pinned, ..options(Target::New(out.clone()), 2) };
+    let outcome = run(&plan, &pinned);
+    for record in &outcome.records {
+        let cores = record.message.split("cores ").nth(1).unwrap();
+        assert!(cores.parse::<usize>().is_ok(), "one core, not {cores}");
+    }
+    let manifest = runner::Manifest::read(&out).unwrap();
+    let stretch = manifest.stretches.last().unwrap();
+    assert_eq!(stretch.placement, Placement::Pinned);
+    assert!(stretch.load_before.unwrap() >= 0.0 && stretch.others_busy_cores.unwrap() >= 0.0);
 }
 
 /// Runs the random plan whole and returns the folder and its journal's text.
@@ -656,15 +818,21 @@ fn tabulate_makes_the_tables_of_the_run_again() {
         program(folder.path(), &["run", "plan.toml", "--into", "whole"]).status.code(),
         Some(0)
     );
-    let mut arguments = vec!["tabulate", "--into", "merged"];
-    for (part, into) in [("1/2", "a"), ("2/2", "b")] {
-        // Three instances may all fall into one part; the other then has nothing to run.
-        if shard(part, into) {
-            arguments.push(into);
-        }
-    }
+    assert!(shard("1/2", "a") && shard("2/2", "b") && shard("2/2", "again"));
+    // One part alone is not the plan, and says what it lacks.
+    let output = program(folder.path(), &["tabulate", "a", "--require", "complete"]);
+    let message = String::from_utf8_lossy(&output.stderr).into_owned();
+    assert_eq!(output.status.code(), Some(1), "{message}");
+    assert!(message.contains("of the 3 trials of the plan of a are missing: 000"), "{message}");
+    // An attempt that was ended before its first line was out holds nothing.
+    std::fs::create_dir(folder.path().join("blank")).unwrap();
+    let arguments =
+        ["tabulate", "--into", "merged", "--require", "complete", "a", "blank", "b", "again"];
     let output = program(folder.path(), &arguments);
-    assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
+    let message = String::from_utf8_lossy(&output.stderr).into_owned();
+    assert_eq!(output.status.code(), Some(0), "{message}");
+    assert!(message.contains("blank: nothing is recorded there"), "{message}");
+    assert!(message.contains("recorded more than once with the same outcome"), "{message}");
     for name in ["accuracy", "rank", "runtime", "failures", "relaxation"] {
         let read = |run: &str| {
             std::fs::read_to_string(folder.path().join(format!("{run}/tables/{name}-stable.csv")))
@@ -790,4 +958,23 @@ fn a_reader_that_goes_away_is_no_error() {
         .output()
         .unwrap();
     assert_eq!(String::from_utf8_lossy(&output.stderr).trim(), "0");
+}
+
+#[test]
+fn completions_and_the_manual_name_every_command() {
+    let folder = tempfile::tempdir().unwrap();
+    let text = |arguments: &[&str]| {
+        let output = program(folder.path(), arguments);
+        assert_eq!(output.status.code(), Some(0));
+        String::from_utf8(output.stdout).unwrap()
+    };
+    let manual = text(&["manual"]);
+    assert!(manual.contains(".TH rankassay 1"), "{}", &manual[..200]);
+    for shell in ["bash", "zsh", "fish"] {
+        let script = text(&["completions", shell]);
+        for command in ["run", "tabulate", "duel", "gate", "replay", "scatter", "roster"] {
+            assert!(script.contains(command), "{shell} {command}");
+            assert!(manual.contains(&format!("RANKASSAY {}", command.to_uppercase())), "{command}");
+        }
+    }
 }

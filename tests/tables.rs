@@ -80,6 +80,7 @@ fn record(number: usize, instance: &InstanceRecord, sketch: &Sketch) -> Record {
             wall_s: Some(sketch.seconds * 1.25),
             cpu_s: Some(sketch.seconds),
             peak_bytes: Some(3 << 20),
+            ..Cost::default()
         },
         Some(Work {
             flops: (sketch.seconds * 1e9) as u64,

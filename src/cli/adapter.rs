@@ -33,6 +33,8 @@ pub(super) struct Adapter {
 enum What {
     /// Writes a starter in Python (needs NumPy) and a plan for it
     Python(Place),
+    /// Writes a starter in Rust (needs the standard library alone) and a plan for it
+    Rust(Place),
     /// Writes an example in plain POSIX shell and a plan for it
     Posix(Place),
     /// Prints the JSON Schema of the protocol's files
@@ -68,40 +70,70 @@ struct Rehearse {
     command: Vec<String>,
 }
 
+/// An outside method that is ready to be edited.
+struct Starter {
+    /// Its files, paths and texts; the first is the one to edit.
+    files: &'static [(&'static str, &'static str)],
+    /// What is to be done before it can be started, if anything.
+    before: Option<&'static str>,
+    /// The command that starts it.
+    command: &'static [&'static str],
+}
+
+const PYTHON: Starter = Starter {
+    files: &[("method.py", include_str!("starters/method.py"))],
+    before: None,
+    command: &["python3", "method.py"],
+};
+
+const RUST: Starter = Starter {
+    // Not named as Rust files here, for they are no part of this program.
+    files: &[
+        ("src/main.rs", include_str!("starters/main.rs.txt")),
+        ("Cargo.toml", include_str!("starters/cargo.toml.txt")),
+    ],
+    before: Some("cargo build --release"),
+    command: &["target/release/my-method"],
+};
+
+const POSIX: Starter = Starter {
+    files: &[("method.sh", include_str!("starters/method.sh"))],
+    before: None,
+    command: &["sh", "method.sh"],
+};
+
 pub(super) fn execute(command: &Adapter) -> Ended {
     match &command.what {
-        What::Python(place) => starter(
-            &place.to,
-            ("method.py", include_str!("starters/method.py")),
-            r#"["python3", "method.py"]"#,
-        ),
-        What::Posix(place) => starter(
-            &place.to,
-            ("method.sh", include_str!("starters/method.sh")),
-            r#"["sh", "method.sh"]"#,
-        ),
+        What::Python(place) => write(&place.to, &PYTHON),
+        What::Rust(place) => write(&place.to, &RUST),
+        What::Posix(place) => write(&place.to, &POSIX),
         What::Schema => say_and_end(&format!("{:#}\n", task::schema())),
         What::Rehearse(rehearse) => self::rehearse(rehearse),
     }
 }
 
-fn starter(folder: &Path, (name, text): (&str, &str), command: &str) -> Ended {
-    for file in [name, "plan.toml"] {
-        if folder.join(file).exists() {
-            return Err(Failure::input(format!(
-                "{} exists; nothing is written over",
-                folder.join(file).display()
-            )));
-        }
+/// Writes a starter and its plan, and says what comes next.
+fn write(folder: &Path, starter: &Starter) -> Ended {
+    let command = format!("{:?}", starter.command);
+    let plan = include_str!("starters/plan.toml").replace("@COMMAND@", &command);
+    let files: Vec<(&str, &str)> =
+        starter.files.iter().copied().chain([("plan.toml", plan.as_str())]).collect();
+    if let Some((path, _)) = files.iter().find(|(path, _)| folder.join(path).exists()) {
+        let place = folder.join(path);
+        return Err(Failure::input(format!("{} exists; nothing is written over", place.display())));
     }
-    let plan = include_str!("starters/plan.toml").replace("@COMMAND@", command);
-    let files = [(name.to_owned(), text.to_owned()), ("plan.toml".to_owned(), plan)];
-    write_files(folder, &files).map_err(Failure::input)?;
-    let words = command.trim_matches(['[', ']']).replace(['"', ','], "");
+    for (path, text) in &files {
+        let (inner, name) = path.rsplit_once('/').unwrap_or(("", path));
+        let file = [((*name).to_owned(), (*text).to_owned())];
+        write_files(&folder.join(inner), &file).map_err(Failure::input)?;
+    }
     let place = folder.display();
+    let written: Vec<String> = files.iter().map(|(path, _)| format!("{place}/{path}")).collect();
+    let before = starter.before.map_or(String::new(), |line| format!("  {line}\n"));
     say_and_end(&format!(
-        "{place}/{name} and {place}/plan.toml are written. Next:\n  \
-         cd {place}\n  rankassay adapter rehearse -- {words}\n  rankassay run plan.toml\n"
+        "Written: {}. Next:\n  cd {place}\n{before}  rankassay adapter rehearse -- {}\n  rankassay run plan.toml\n",
+        written.join(", "),
+        starter.command.join(" "),
     ))
 }
 

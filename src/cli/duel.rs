@@ -16,7 +16,8 @@ use super::{Ended, INTERRUPTED, Loudness, isolation, listen};
 use crate::methods::outside;
 use crate::record::MethodRecord;
 use crate::runner::{
-    self, Ending, Manifest, Plan, Roster, RunOptions, Selection, Target, journal, write_files,
+    self, Ending, Manifest, Placement, Plan, Retiming, Roster, RunOptions, Selection, Target,
+    journal, write_files,
 };
 use crate::verdicts::duel::{self, Basis, Decision, Mode, Terms};
 use crate::verdicts::pairing::{self, Pairing};
@@ -285,6 +286,8 @@ fn add_round(
         target,
         jobs: command.jobs.map(usize::from),
         selection: Selection { methods: Some(methods), ..Selection::default() },
+        placement: Placement::Free,
+        retiming: Retiming::None,
         isolation: isolation(false),
         interrupt: Arc::clone(interrupt),
     };

@@ -7,12 +7,13 @@ use serde_json::json;
 
 use super::Ended;
 use super::output::say_and_end;
+use crate::linalg::vector::norm2;
 use crate::problem::{Coefficient, Functional, Problem};
 use crate::runner::read_instance;
 
 #[derive(Debug, Args)]
 pub(super) struct Inspect {
-    /// Instance file: native, or sparse SDPA (.dat-s)
+    /// Instance file: native, sparse SDPA (.dat-s) or tables of a power network (.toml)
     instance: PathBuf,
     /// Puts this rank bound on every block
     #[arg(long, value_name = "R", value_parser = clap::value_parser!(u32).range(1..))]
@@ -50,6 +51,25 @@ fn storage(problem: &Problem) -> Storage {
     storage
 }
 
+/// Norms that the referee's relative figures and an engine's scaling refer to.
+struct Norms {
+    rhs: f64,
+    cost: f64,
+    /// Least and largest over the constraints; none without constraints.
+    constraints: Option<(f64, f64)>,
+}
+
+fn norms(problem: &Problem) -> Norms {
+    let constraints = problem.constraints().iter().map(Functional::norm);
+    Norms {
+        rhs: norm2(problem.rhs()),
+        cost: problem.cost().norm(),
+        constraints: constraints
+            .map(|norm| (norm, norm))
+            .reduce(|a, b| (a.0.min(b.0), a.1.max(b.1))),
+    }
+}
+
 pub(super) fn execute(command: &Inspect) -> Ended {
     let mut instance = read_instance(&command.instance)?;
     let file = command.instance.display().to_string();
@@ -58,6 +78,7 @@ pub(super) fn execute(command: &Inspect) -> Ended {
     }
     let (problem, record) = (&instance.problem, &instance.record);
     let storage = storage(problem);
+    let norms = norms(problem);
     let blocks: Vec<String> = problem
         .blocks()
         .iter()
@@ -81,6 +102,10 @@ pub(super) fn execute(command: &Inspect) -> Ended {
             "stored_numbers": storage.entries,
             "density": density,
             "outer_products": storage.outer_products,
+            "norm_rhs": norms.rhs,
+            "norm_cost": norms.cost,
+            "norm_constraint_least": norms.constraints.map(|(least, _)| least),
+            "norm_constraint_largest": norms.constraints.map(|(_, largest)| largest),
             "rank_bound": record.rank_bound,
             "target_rank": record.target_rank,
             "optimum": record.optimum,
@@ -97,6 +122,10 @@ pub(super) fn execute(command: &Inspect) -> Ended {
         .map_or("unknown".to_owned(), |value| format!("{value:?} ({})", record.optimum_known));
     let certificate = match record.certificate.as_str() {
         "none" => "none".to_owned(),
+        "no-proof" => "no-proof: a planted point, feasible; that it is optimal is not proved".to_owned(),
+        "verified-pair" => {
+            "verified-pair, checked and holds (the slack proved PSD in floating point with a bound of the error)".to_owned()
+        }
         kind => format!("{kind}, checked and holds"),
     };
     let facts = [
@@ -108,6 +137,14 @@ pub(super) fn execute(command: &Inspect) -> Ended {
         (
             "outer products",
             format!("{} ({} functionals of rank one)", storage.outer_products, storage.rank_one),
+        ),
+        ("norm of b", format!("{:.4e}", norms.rhs)),
+        ("norm of C", format!("{:.4e} (Frobenius)", norms.cost)),
+        (
+            "norms of A_i",
+            norms.constraints.map_or("none".to_owned(), |(least, largest)| {
+                format!("{least:.4e} to {largest:.4e} (Frobenius)")
+            }),
         ),
         ("rank bound", format!("{} (largest r with r(r+1)/2 <= constraints)", record.rank_bound)),
         ("optimum", optimum),

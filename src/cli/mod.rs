@@ -10,6 +10,8 @@ mod adapter;
 mod duel;
 mod gate;
 mod inspect;
+mod manual;
+mod measured;
 mod output;
 mod plant;
 mod progress;
@@ -19,6 +21,7 @@ mod report;
 mod results;
 mod roster;
 mod run;
+mod scatter;
 mod tabulate;
 
 use std::io::Read;
@@ -71,9 +74,15 @@ enum Command {
     Referee(referee::Referee),
     /// Writes outside methods to start from, and rehearses one
     Adapter(adapter::Adapter),
+    /// Writes and submits a job array for a cluster, whose tasks are parts of a plan, and a merge job
+    Scatter(scatter::ScatterCommand),
     /// Runs one trial for another process of this program
     #[command(name = runner::worker::COMMAND, hide = true)]
     TrialWorker,
+    /// Writes the completion script of a shell to standard output
+    Completions(manual::Completions),
+    /// Writes the manual page (roff) to standard output
+    Manual,
     /// Lists families and methods; with a name, shows the whole card
     Roster(roster::RosterCommand),
 }
@@ -108,7 +117,10 @@ pub fn main() -> ExitCode {
         Command::Inspect(command) => inspect::execute(&command),
         Command::Referee(command) => referee::execute(&command),
         Command::Adapter(command) => adapter::execute(&command),
+        Command::Scatter(command) => scatter::execute(&command, loudness),
         Command::TrialWorker => work(),
+        Command::Completions(command) => manual::completions(&command),
+        Command::Manual => manual::manual(),
         Command::Roster(command) => roster::execute(&command),
     };
     match ended {

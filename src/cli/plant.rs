@@ -11,7 +11,7 @@ use super::{Ended, Loudness};
 use crate::card::{Setting, Settings, nearest_word};
 use crate::families::{self, Family, PlantError};
 use crate::formats;
-use crate::problem::certificate::Planted;
+use crate::problem::certificate::{Planted, Standing};
 use crate::runner::{plant, write_files};
 
 #[derive(Debug, Args)]
@@ -35,6 +35,9 @@ pub(super) struct Plant {
 pub(super) fn execute(command: &Plant, loudness: Loudness) -> Ended {
     let (family, parameters) = resolved(&command.family, &command.parameters)?;
     let planted = planted(&command.family, &command.parameters, command.seed, command.index)?;
+    if planted.certificate.standing() == Standing::Unproved && loudness != Loudness::Quiet {
+        tell(&format!("{} {parameters}: {}", family.card().id, planted.proof.statement));
+    }
     let origin =
         format!("{} {parameters} seed={} index={}", family.card().id, command.seed, command.index);
     let text = formats::instance::write(&formats::instance::Instance {

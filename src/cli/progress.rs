@@ -38,6 +38,22 @@ impl Progress {
         }
     }
 
+    /// Says what begins, and shows a bar where there may be one.
+    fn start(&self, pending: usize, text: &str) {
+        if self.loudness == Loudness::Quiet {
+            return;
+        }
+        tell(text);
+        if self.bar == Bar::OnTerminals && std::io::stderr().is_terminal() {
+            let style = ProgressStyle::with_template(
+                "{bar:40} {pos}/{len} {elapsed} (about {eta} to go) {msg}",
+            );
+            let bar = ProgressBar::new(pending as u64);
+            bar.set_style(style.unwrap_or_else(|_| ProgressStyle::default_bar()));
+            *self.running.lock().unwrap_or_else(PoisonError::into_inner) = Some(bar);
+        }
+    }
+
     fn line(&self, text: &str) {
         match &*self.running.lock().unwrap_or_else(PoisonError::into_inner) {
             Some(bar) => bar.suspend(|| tell(text)),
@@ -48,23 +64,17 @@ impl Progress {
 
 impl Observer for Progress {
     fn begin(&self, pending: usize, recorded: usize) {
-        if self.loudness == Loudness::Quiet {
-            return;
-        }
         let already = if recorded == 0 {
             String::new()
         } else {
             format!(", {recorded} are recorded already")
         };
-        tell(&format!("{pending} trials to run{already}"));
-        if self.bar == Bar::OnTerminals && std::io::stderr().is_terminal() {
-            let style = ProgressStyle::with_template(
-                "{bar:40} {pos}/{len} {elapsed} (about {eta} to go) {msg}",
-            );
-            let bar = ProgressBar::new(pending as u64);
-            bar.set_style(style.unwrap_or_else(|_| ProgressStyle::default_bar()));
-            *self.running.lock().unwrap_or_else(PoisonError::into_inner) = Some(bar);
-        }
+        self.start(pending, &format!("{pending} trials to run{already}"));
+    }
+
+    fn begin_retiming(&self, pending: usize) {
+        self.end();
+        self.start(pending, &format!("{pending} solved trials to time once more, one at a time"));
     }
 
     fn notice(&self, text: &str) {

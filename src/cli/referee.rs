@@ -15,7 +15,7 @@ use crate::runner::read_instance;
 
 #[derive(Debug, Args)]
 pub(super) struct Referee {
-    /// Instance file: native, or sparse SDPA (.dat-s)
+    /// Instance file: native, sparse SDPA (.dat-s) or tables of a power network (.toml)
     instance: PathBuf,
     /// Solution file
     solution: PathBuf,

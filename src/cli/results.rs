@@ -7,7 +7,10 @@ use super::output::tell;
 use super::report::Failure;
 use super::{Loudness, roster};
 use crate::record::Trace;
-use crate::runner::{self, Manifest, Merged, journal, read_traces, write_files};
+use crate::runner::{
+    self, JournalError, Manifest, Merged, Placement, Plan, Roster, journal, read_traces,
+    write_files,
+};
 use crate::tables::report::{Context, RunFacts};
 use crate::tables::{self, Input, figures, report};
 
@@ -40,22 +43,113 @@ pub(super) fn load(folders: &[PathBuf], loudness: Loudness) -> Result<Loaded, Fa
     let mut runs = Vec::new();
     let mut traces = Vec::new();
     let mut manifests = Vec::new();
+    let mut read = Vec::new();
     for folder in folders {
-        let contents = journal::read(folder).map_err(Failure::input)?;
+        let contents = match journal::read(folder) {
+            Ok(contents) => contents,
+            // Of several attempts at a task, one may have been ended before its first line was out.
+            Err(JournalError::Missing { .. }) if folders.len() > 1 && folder.is_dir() => {
+                tell(&format!("note: {}: nothing is recorded there", folder.display()));
+                continue;
+            }
+            Err(error) => return Err(Failure::input(error)),
+        };
         if let Some(notice) = contents.torn_notice(folder)
             && loudness != Loudness::Quiet
         {
             tell(&format!("note: {notice}"));
         }
         runs.push((folder.display().to_string(), contents));
-        traces.extend(read_traces(folder).map_err(Failure::input)?);
+        let known: BTreeSet<String> =
+            traces.iter().map(|trace: &Trace| trace.trial.clone()).collect();
+        let new = read_traces(folder).map_err(Failure::input)?;
+        traces.extend(new.into_iter().filter(|trace| !known.contains(&trace.trial)));
         manifests.push(Manifest::read(folder).ok());
+        read.push(folder.clone());
     }
     let merged = runner::merge(runs).map_err(Failure::input)?;
+    tell_copies(&merged, loudness);
     if merged.records.is_empty() {
         return Err(Failure::input("nothing is recorded in the given runs"));
     }
-    Ok(Loaded { merged, traces, folders: folders.to_vec(), manifests })
+    Ok(Loaded { merged, traces, folders: read, manifests })
+}
+
+/// Most trials that are named one by one in a message.
+const NAMED: usize = 20;
+
+/// Whether several runs make up their plans, each trial once.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub(super) enum Completeness {
+    /// Every trial is recorded, and copies of one agree.
+    Whole,
+    /// Trials are missing, or copies disagree.
+    Wanting,
+}
+
+/// Tells which copies of a trial were left out, and which disagree.
+fn tell_copies(merged: &Merged, loudness: Loudness) {
+    if merged.copies > 0 && loudness != Loudness::Quiet {
+        tell(&format!(
+            "note: {} trials were recorded more than once with the same outcome; one copy of each is kept",
+            merged.copies
+        ));
+    }
+    for found in merged.disagreements.iter().take(NAMED) {
+        let columns: Vec<String> = found
+            .columns
+            .iter()
+            .map(|[column, kept, other]| format!("{column} {kept:?} and {other:?}"))
+            .collect();
+        tell(&format!(
+            "warning: two copies of {} disagree: {} in {} (kept) and {}",
+            found.trial,
+            columns.join(", "),
+            found.kept,
+            found.other
+        ));
+    }
+    let more = merged.disagreements.len().saturating_sub(NAMED);
+    if more > 0 {
+        tell(&format!("warning: the copies of {more} more trials disagree"));
+    }
+}
+
+/// Tells which trials of the plans are missing.
+pub(super) fn tell_missing(loaded: &Loaded) -> Completeness {
+    let merged = &loaded.merged;
+    for missing in &merged.missing {
+        let names = missing_trials(loaded, missing);
+        let listed: Vec<&str> = names.iter().take(NAMED).map(String::as_str).collect();
+        let more = names.len() - listed.len();
+        let more = if more > 0 { format!(" and {more} more") } else { String::new() };
+        tell(&format!(
+            "warning: {} of the {} trials of the plan of {} are missing: {}{more}",
+            names.len(),
+            missing.of,
+            loaded.folders[missing.run].display(),
+            listed.join(", ")
+        ));
+    }
+    if merged.missing.is_empty() && merged.disagreements.is_empty() {
+        Completeness::Whole
+    } else {
+        Completeness::Wanting
+    }
+}
+
+/// Names missing trials by the plan in the manifest, or by their places in the plan where there is none.
+fn missing_trials(loaded: &Loaded, missing: &runner::Missing) -> Vec<String> {
+    let ids = loaded.manifests[missing.run].as_ref().and_then(|manifest| {
+        let roster = Roster::built_in();
+        let plan = Plan::parse(&manifest.plan, &manifest.plan_file, Path::new(""), roster).ok()?;
+        Some(runner::trial_ids(&plan.in_round(manifest.round)))
+    });
+    let name = |place: &u64| {
+        let id = ids.as_ref().and_then(|ids| ids.get(*place as usize)).cloned();
+        id.unwrap_or_else(|| format!("number {}", place + 1))
+    };
+    missing.places.iter().map(name).collect()
 }
 
 /// Says which command replays trials: the program as the user would start it.
@@ -95,9 +189,33 @@ fn context(loaded: &Loaded) -> Context {
         runs: (0..loaded.folders.len()).map(|at| facts(loaded, at)).collect(),
         methods: roster::method_cards(&methods),
         families: roster::family_cards(&families),
-        cautions: Vec::new(),
+        cautions: cautions(loaded),
         program: program(),
     }
+}
+
+/// Names the power networks of a run, which makes the report say that figures for them are no operating advice.
+fn cautions(loaded: &Loaded) -> Vec<String> {
+    let is_table = |parameters: &str| {
+        let path = parameters.strip_prefix("path=").and_then(|rest| rest.split(" rank=").next());
+        path.is_some_and(|path| path.ends_with(".toml"))
+    };
+    let mut networks = BTreeSet::new();
+    for record in &loaded.merged.records {
+        match record.family.as_str() {
+            "radial-feeder" => networks.insert("synthetic feeders (radial-feeder)"),
+            "imported" if is_table(&record.parameters) => networks.insert(&record.instance),
+            _ => false,
+        };
+    }
+    if networks.is_empty() {
+        return Vec::new();
+    }
+    let names: Vec<&str> = networks.into_iter().collect();
+    vec![format!(
+        "Power networks in these figures: {}. The model behind them leaves out what a study of operation needs.",
+        names.join(", ")
+    )]
 }
 
 /// Lists what is known of one run.
@@ -129,7 +247,23 @@ fn facts(loaded: &Loaded, at: usize) -> RunFacts {
         let commit = stretch.commit.as_ref().map_or(String::new(), |id| format!(" ({id})"));
         facts.extend([
             (name("Version"), format!("rankassay {}{commit}", stretch.version)),
-            (name("Trials at a time"), stretch.threads.to_string()),
+            (
+                name("Trials at a time"),
+                match stretch.placement {
+                    Placement::Free => stretch.threads.to_string(),
+                    Placement::Pinned => format!("{}, each on a core of its own", stretch.threads),
+                },
+            ),
+            (
+                name("Load by other programs"),
+                stretch
+                    .others_busy_cores
+                    .map_or_else(unknown, |cores| format!("{cores:.1} cores busy on average")),
+            ),
+            (
+                name("Load average before"),
+                stretch.load_before.map_or_else(unknown, |load| format!("{load:.2}")),
+            ),
             (name("System"), format!("{} {}", machine.system, machine.architecture)),
             (name("Processor"), machine.processor.clone().unwrap_or_else(unknown)),
             (name("Vector instructions"), machine.features.join(", ")),

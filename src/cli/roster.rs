@@ -6,6 +6,7 @@ use clap::Args;
 use serde_json::{Value, json};
 
 use super::Ended;
+use super::measured::{self, Measured};
 use super::output::say_and_end;
 use super::report::Failure;
 use crate::card::{FamilyCard, MethodCard, SettingSpec, nearest_word};
@@ -151,6 +152,14 @@ impl Card {
         }
     }
 
+    /// Lists what was measured over the knobs of a family.
+    fn measured(&self) -> Vec<Measured> {
+        match self {
+            Card::Family(card) => measured::of_family(card.id),
+            Card::Method(_) => Vec::new(),
+        }
+    }
+
     fn json(&self) -> Value {
         let mut object: serde_json::Map<String, Value> =
             self.lines().into_iter().map(|(name, text)| (name.to_owned(), json!(text))).collect();
@@ -167,6 +176,10 @@ impl Card {
             })
             .collect();
         object.insert(name.to_owned(), Value::Array(specs));
+        if matches!(self, Card::Family(_)) {
+            let measured = self.measured().iter().map(Measured::json).collect();
+            object.insert("measured".to_owned(), Value::Array(measured));
+        }
         Value::Object(object)
     }
 
@@ -179,7 +192,10 @@ impl Card {
         CardText {
             id: self.id().to_owned(),
             title: self.title().to_owned(),
-            fields: lines.map(|(name, text)| (name.to_owned(), text.to_owned())).collect(),
+            fields: lines
+                .map(|(name, text)| (name.to_owned(), text.to_owned()))
+                .chain(self.measured().iter().map(|row| ("measured".to_owned(), row.line())))
+                .collect(),
             settings: settings.collect(),
         }
     }
@@ -197,6 +213,13 @@ impl Card {
         }
         if specs.is_empty() {
             out += "  none\n";
+        }
+        let measured = self.measured();
+        if !measured.is_empty() {
+            out += "measured (medians over instances; instances/plans/knobs.toml):\n";
+            for row in &measured {
+                out += &format!("  {}\n", row.line());
+            }
         }
         out
     }

@@ -11,9 +11,10 @@ use super::output::{say, tell};
 use super::progress::{Bar, Progress};
 use super::report::Failure;
 use super::{Ended, INTERRUPTED, Loudness, isolation, listen, results};
+use crate::runner::scatter::shell_word;
 use crate::runner::{
-    self, Ending, Outcome, Pattern, Plan, Roster, RunOptions, Selection, Shard, Target,
-    latest_folder,
+    self, Ending, Outcome, Pattern, Placement, Plan, Retiming, Roster, RunOptions, Selection,
+    Shard, Target, latest_folder,
 };
 use crate::tables;
 
@@ -42,6 +43,12 @@ pub(super) struct Run {
     /// Runs the methods in this process, not each trial in one of its own
     #[arg(long)]
     in_process: bool,
+    /// Ties each of the trials at a time to a core of its own (Linux)
+    #[arg(long)]
+    pin: bool,
+    /// Times solved trials once more when all have ended, one at a time
+    #[arg(long)]
+    quiet_timing: bool,
     /// Runs part I of N parts of the plan; all trials of an instance are in one part
     #[arg(long, value_name = "I/N")]
     shard: Option<String>,
@@ -66,6 +73,8 @@ pub(super) fn execute(command: &Run, loudness: Loudness, bar: Bar) -> Ended {
             methods: None,
         },
         isolation: isolation(command.in_process),
+        placement: if command.pin { Placement::Pinned } else { Placement::Free },
+        retiming: if command.quiet_timing { Retiming::Solved } else { Retiming::None },
         interrupt,
     };
     let progress = Progress::new(loudness, bar);
@@ -79,7 +88,7 @@ pub(super) fn execute(command: &Run, loudness: Loudness, bar: Bar) -> Ended {
     finish(&outcome, loudness)
 }
 
-fn read_plan(path: &Path) -> Result<String, Failure> {
+pub(super) fn read_plan(path: &Path) -> Result<String, Failure> {
     let bytes = std::fs::read(path)
         .map_err(|error| Failure::input(format!("{}: {error}", path.display())))?;
     String::from_utf8(bytes).map_err(|error| {
@@ -123,10 +132,13 @@ fn interrupted(command: &Run, outcome: &Outcome) -> String {
     option("--jobs", command.jobs.map(|jobs| jobs.to_string()));
     option("--only", command.only.clone());
     option("--shard", command.shard.clone());
-    if command.in_process {
-        words.push("--in-process".to_owned());
-    }
-    let line: Vec<String> = words.iter().map(|word| quoted(word)).collect();
+    let flags = [
+        ("--in-process", command.in_process),
+        ("--pin", command.pin),
+        ("--quiet-timing", command.quiet_timing),
+    ];
+    words.extend(flags.iter().filter(|(_, given)| *given).map(|(name, _)| (*name).to_owned()));
+    let line: Vec<String> = words.iter().map(|word| shell_word(word)).collect();
     format!(
         "interrupted: {} of {} trials are recorded in {}; go on with\n  {}",
         outcome.records.len(),
@@ -134,16 +146,6 @@ fn interrupted(command: &Run, outcome: &Outcome) -> String {
         outcome.folder.display(),
         line.join(" ")
     )
-}
-
-/// Quotes a word for a POSIX shell when it needs it.
-fn quoted(word: &str) -> String {
-    let plain = |c: char| c.is_ascii_alphanumeric() || "-_./=+,:@%".contains(c);
-    if !word.is_empty() && word.chars().all(plain) {
-        word.to_owned()
-    } else {
-        format!("'{}'", word.replace('\'', "'\\''"))
-    }
 }
 
 /// Writes tables, figures and report, prints the summary and chooses the exit code.
@@ -164,15 +166,4 @@ fn finish(outcome: &Outcome, loudness: Loudness) -> Ended {
         return Ok(ExitCode::from(UNJUDGED));
     }
     Ok(ExitCode::SUCCESS)
-}
-
-#[cfg(test)]
-mod tests {
-    use super::*;
-
-    #[test]
-    fn words_are_quoted_for_a_shell_when_they_need_it() {
-        let words = ["runs/quick-1", "tight* alm", "it's", ""].map(quoted);
-        assert_eq!(words, ["runs/quick-1", "'tight* alm'", "'it'\\''s'", "''"]);
-    }
 }

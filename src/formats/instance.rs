@@ -19,7 +19,9 @@
 //! on it proves it anew from the problem.
 
 use super::json::{self, Step};
-use super::{FormatError, FormatErrorKind as Kind, MAX_TOTAL_ORDER, Source, read_text};
+use super::{
+    FormatError, FormatErrorKind as Kind, MAX_FILE_BYTES, MAX_TOTAL_ORDER, Source, read_text,
+};
 use crate::problem::canonical::digest;
 use crate::problem::certificate::Certificate;
 use crate::problem::{
@@ -101,7 +103,7 @@ struct TermText {
 /// # Errors
 /// The file is unreadable, or its text is refused; see [`parse`].
 pub fn read(path: &Path) -> Result<Instance, FormatError> {
-    let text = read_text(path)?;
+    let text = read_text(path, MAX_FILE_BYTES)?;
     parse(&text, &path.display().to_string())
 }
 

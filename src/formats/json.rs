@@ -1,7 +1,11 @@
 //! Positions in JSON texts: serde's errors as ours, and the place of a value named by its path.
 
 use super::{FormatError, FormatErrorKind as Kind, Source};
-use serde::de::DeserializeOwned;
+use serde::de::value::MapAccessDeserializer;
+use serde::de::{DeserializeOwned, DeserializeSeed, MapAccess, Visitor};
+use serde::{Deserialize, Deserializer};
+use std::fmt;
+use std::marker::PhantomData;
 
 /// One step from a JSON value to a value inside it.
 #[derive(Clone, Copy, Debug)]
@@ -12,9 +16,64 @@ pub(super) enum Step<'a> {
     Item(usize),
 }
 
-/// Reads a whole JSON text into `T`, with errors at their position.
+/// Reads a whole JSON text, an object, into `T`, with errors at their position.
 pub(super) fn from_text<T: DeserializeOwned>(source: Source<'_>) -> Result<T, FormatError> {
-    serde_json::from_str(source.text).map_err(|error| translate(source, &error))
+    let mut deserializer = serde_json::Deserializer::from_str(source.text);
+    let read = object(&mut deserializer).and_then(|value| deserializer.end().map(|()| value));
+    read.map_err(|error| translate(source, &error))
+}
+
+/// Reads a JSON object into `T`; left to itself, serde takes an array in the order of the fields as well.
+pub(super) fn object<'de, T: Deserialize<'de>, D: Deserializer<'de>>(
+    deserializer: D,
+) -> Result<T, D::Error> {
+    Object::default().deserialize(deserializer)
+}
+
+/// Reads a value that may be left out; left to itself, serde takes a null for one that is.
+pub(super) fn given<'de, T: Deserialize<'de>, D: Deserializer<'de>>(
+    deserializer: D,
+) -> Result<Option<T>, D::Error> {
+    T::deserialize(deserializer).map(Some)
+}
+
+/// Reads an element that is a JSON object, see [`object`].
+pub(super) struct Object<T>(PhantomData<T>);
+
+impl<T> Default for Object<T> {
+    fn default() -> Self {
+        Object(PhantomData)
+    }
+}
+
+impl<'de, T: Deserialize<'de>> DeserializeSeed<'de> for Object<T> {
+    type Value = T;
+
+    fn deserialize<D: Deserializer<'de>>(self, deserializer: D) -> Result<T, D::Error> {
+        deserializer.deserialize_map(self)
+    }
+}
+
+impl<'de, T: Deserialize<'de>> Visitor<'de> for Object<T> {
+    type Value = T;
+
+    fn expecting(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        f.write_str("an object in braces")
+    }
+
+    fn visit_map<A: MapAccess<'de>>(self, map: A) -> Result<T, A::Error> {
+        T::deserialize(MapAccessDeserializer::new(map))
+    }
+}
+
+/// Says in words what serde calls by the name of a type.
+fn in_words(expected: &str) -> &str {
+    match expected {
+        "f64" => "a number",
+        "u32" | "u64" | "usize" => "a whole number that is not negative",
+        "i64" | "i128" => "a whole number",
+        other => other,
+    }
 }
 
 /// Turns an error of serde into one of ours.
@@ -25,7 +84,7 @@ fn translate(source: Source<'_>, error: &serde_json::Error) -> FormatError {
         return source.end_error("the rest of the JSON text");
     }
     let (found, expected) = match message.split_once(", expected ") {
-        Some((found, expected)) => (Some(found), expected.to_owned()),
+        Some((found, expected)) => (Some(found), in_words(expected).to_owned()),
         None => match message.strip_prefix("missing ").or(message.strip_prefix("expected ")) {
             Some(expected) => (None, expected.to_owned()),
             None => (None, format!("JSON that fits this place ({message})")),

@@ -4,8 +4,14 @@
 //! description (R. Boisvert, R. Pozo, K. Remington, NISTIR 5935, 1996): column by column in `array`
 //! files, and of a `symmetric` matrix its lower triangle only. Positions given twice are refused.
 
-use super::{FormatError, FormatErrorKind as Kind, MAX_DENSE_ORDER, Source, read_text};
+use super::{
+    FormatError, FormatErrorKind as Kind, MAX_DENSE_ORDER, MAX_FILE_BYTES, Source, read_text,
+};
+use std::ops::RangeInclusive;
 use std::path::Path;
+
+/// Cells for which memory is taken without asking whether the text can hold them.
+const FEW_CELLS: usize = 1 << 12;
 
 /// A dense real matrix as read.
 #[derive(Clone, Debug, PartialEq)]
@@ -20,13 +26,40 @@ pub struct RealMatrix {
     pub size_line: usize,
 }
 
+/// The shapes that a reader accepts.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Shape {
+    /// Number of rows.
+    pub rows: usize,
+    /// Numbers of columns.
+    pub columns: RangeInclusive<usize>,
+}
+
+impl Shape {
+    /// Says what is accepted, for messages.
+    fn sentence(&self) -> String {
+        let (least, most) = (self.columns.start(), self.columns.end());
+        let columns = if least == most { least.to_string() } else { format!("{least} to {most}") };
+        format!("{} rows and {columns} columns", self.rows)
+    }
+}
+
 /// Reads a Matrix Market file.
 ///
 /// # Errors
 /// The file is unreadable, or its text is refused; see [`parse`].
 pub fn read(path: &Path) -> Result<RealMatrix, FormatError> {
-    let text = read_text(path)?;
+    let text = read_text(path, MAX_FILE_BYTES)?;
     parse(&text, &path.display().to_string())
+}
+
+/// Reads a Matrix Market file of at most `most_bytes` bytes that must hold a matrix of the given shape.
+///
+/// # Errors
+/// The file is unreadable or longer, or its text is refused; see [`parse_shaped`].
+pub fn read_shaped(path: &Path, shape: &Shape, most_bytes: u64) -> Result<RealMatrix, FormatError> {
+    let text = read_text(path, most_bytes)?;
+    parse_shaped(&text, &path.display().to_string(), shape)
 }
 
 #[derive(Clone, Copy, PartialEq, Eq)]
@@ -48,38 +81,64 @@ enum Symmetry {
 /// [`MAX_DENSE_ORDER`] can hold, a number that is missing or not finite, an index out of range, an
 /// entry above the diagonal of a symmetric matrix, a position given twice, anything after the data.
 pub fn parse(text: &str, file: &str) -> Result<RealMatrix, FormatError> {
-    let source = Source { file, text };
+    parse_text(Source { file, text }, None)
+}
+
+/// Reads the text of a Matrix Market file that must hold a matrix of the given shape; another one is
+/// refused before memory is taken for it.
+///
+/// # Errors
+/// Those of [`parse`], and a size that is not in `shape`.
+pub fn parse_shaped(text: &str, file: &str, shape: &Shape) -> Result<RealMatrix, FormatError> {
+    parse_text(Source { file, text }, Some(shape))
+}
+
+fn parse_text(source: Source<'_>, shape: Option<&Shape>) -> Result<RealMatrix, FormatError> {
+    let text = source.text;
     let header_end = text.find('\n').unwrap_or(text.len());
     let (layout, symmetry) = read_header(source, &text[..header_end])?;
     let mut words = Words { source, at: header_end, last: (0, 0) };
     let size_line = 1 + text[..words.peek_position()].bytes().filter(|&byte| byte == b'\n').count();
-    let rows = words.count("the number of rows")?;
+    let (rows, row_at) =
+        (words.index(usize::MAX, "the number of rows, at least 1", 1)?, words.last);
     let (columns, column_at) = (words.count("the number of columns")?, words.last);
-    let refuse_size =
-        |expected: String| Err(source.error(column_at.0, column_at.1, Kind::TooLarge, expected));
+    let refuse = |at: (usize, usize), kind: Kind, expected: String| {
+        Err(source.error(at.0, at.1, kind, expected))
+    };
+    if let Some(shape) = shape
+        && !(rows == shape.rows && shape.columns.contains(&columns))
+    {
+        let at = if rows == shape.rows { column_at } else { row_at };
+        return refuse(at, Kind::OutOfRange, shape.sentence());
+    }
     if symmetry == Symmetry::Symmetric && rows != columns {
         let expected = format!("{rows} columns in a symmetric matrix");
-        return Err(source.error(column_at.0, column_at.1, Kind::OutOfRange, expected));
+        return refuse(column_at, Kind::OutOfRange, expected);
     }
     let cells = rows.saturating_mul(columns);
-    match layout {
+    let data = match layout {
         Layout::Array => {
-            // Half the cells of a symmetric matrix stand in the text, each with a digit and a blank.
-            if cells / 4 > text.len() {
-                return refuse_size("a size that the text can hold".to_owned());
+            // Each number takes a digit and what parts it from the one before; a symmetric matrix gives
+            // at least half of its cells.
+            let held = text.len() - words.at;
+            let most = if symmetry == Symmetry::Symmetric { held } else { held / 2 };
+            // A small matrix that is cut short is refused where the text ends.
+            if cells > most.max(FEW_CELLS) {
+                let expected = format!("a size of at most {most} cells, which the text can hold");
+                return refuse(column_at, Kind::TooLarge, expected);
             }
-            read_array(&mut words, rows, columns, symmetry)
-                .and_then(|data| finish(words, rows, columns, data, size_line))
+            read_array(&mut words, rows, columns, symmetry)?
         }
         Layout::Coordinate => {
-            if cells > MAX_DENSE_ORDER * MAX_DENSE_ORDER {
-                return refuse_size(format!("at most {} cells", MAX_DENSE_ORDER * MAX_DENSE_ORDER));
+            let most = MAX_DENSE_ORDER * MAX_DENSE_ORDER;
+            if cells > most {
+                return refuse(column_at, Kind::TooLarge, format!("at most {most} cells"));
             }
             let entries = words.count("the number of entries")?;
-            read_coordinates(&mut words, rows, columns, entries, symmetry)
-                .and_then(|data| finish(words, rows, columns, data, size_line))
+            read_coordinates(&mut words, rows, columns, entries, symmetry)?
         }
-    }
+    };
+    finish(words, rows, columns, data, size_line)
 }
 
 fn finish(

@@ -1,4 +1,4 @@
-//! File formats: sparse SDPA, the native instance and solution files, Matrix Market.
+//! File formats: sparse SDPA, the native instance and solution files, Matrix Market, power networks.
 //!
 //! Every reader takes text from outside, so it trusts nothing: a size is held against a limit or
 //! against the length of the text before memory is taken for it, and whatever is refused is refused
@@ -8,6 +8,8 @@
 pub mod instance;
 mod json;
 pub mod matrix_market;
+pub mod network;
+mod rows;
 pub mod sdpa;
 pub mod solution;
 
@@ -175,16 +177,19 @@ impl<'a> Source<'a> {
 }
 
 fn shorten(token: &str) -> String {
-    if token.chars().count() <= TOKEN_REACH {
-        return token.to_owned();
-    }
-    let mut short: String = token.chars().take(TOKEN_REACH).collect();
-    short.push_str("...");
-    short
+    shorten_to(token, TOKEN_REACH)
 }
 
-/// Reads a whole file of at most [`MAX_FILE_BYTES`] as text.
-fn read_text(path: &Path) -> Result<String, FormatError> {
+/// Cuts a text to `most` characters; dots stand for the rest.
+fn shorten_to(text: &str, most: usize) -> String {
+    match text.char_indices().nth(most) {
+        None => text.to_owned(),
+        Some((end, _)) => format!("{}...", &text[..end]),
+    }
+}
+
+/// Reads a whole file of at most `most` bytes as text.
+fn read_text(path: &Path, most: u64) -> Result<String, FormatError> {
     let file = path.display().to_string();
     let unreadable =
         |reason: &dyn std::fmt::Display| FormatError::unreadable(&file, &reason.to_string());
@@ -192,8 +197,8 @@ fn read_text(path: &Path) -> Result<String, FormatError> {
     if !metadata.is_file() {
         return Err(unreadable(&"not a regular file"));
     }
-    if metadata.len() > MAX_FILE_BYTES {
-        let reason = format!("{} bytes, more than {MAX_FILE_BYTES}", metadata.len());
+    if metadata.len() > most {
+        let reason = format!("{} bytes, more than {most}", metadata.len());
         return Err(FormatError { kind: FormatErrorKind::TooLarge, ..unreadable(&reason) });
     }
     let bytes = std::fs::read(path).map_err(|error| unreadable(&error))?;

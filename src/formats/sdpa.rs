@@ -16,7 +16,7 @@
 
 mod reader;
 
-use super::{FormatError, FormatErrorKind, Source, read_text};
+use super::{FormatError, FormatErrorKind, MAX_FILE_BYTES, Source, read_text};
 use crate::problem::{Block, Coefficient, Functional, Problem, SparseSymmetric, SparseVector};
 use reader::{Entry, Reader};
 use std::fmt::Write as _;
@@ -64,7 +64,7 @@ pub struct SdpaFile {
 /// # Errors
 /// The file is unreadable, or its text is refused; see [`parse`].
 pub fn read(path: &Path) -> Result<SdpaFile, FormatError> {
-    let text = read_text(path)?;
+    let text = read_text(path, MAX_FILE_BYTES)?;
     parse(&text, &path.display().to_string())
 }
 

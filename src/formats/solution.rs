@@ -15,15 +15,24 @@
 //! not judge.
 
 use super::json::{self, Step};
-use super::matrix_market;
-use super::{FormatError, FormatErrorKind as Kind, MAX_DENSE_ORDER, Source, read_text};
+use super::matrix_market::{self, Shape};
+use super::rows::Rows;
+use super::{
+    FormatError, FormatErrorKind as Kind, MAX_DENSE_ORDER, MAX_FILE_BYTES, MAX_TOTAL_ORDER, Source,
+    read_text, shorten_to,
+};
 use crate::problem::{Answer, BlockPoint, Factor, Point, Problem, StopReason};
 use faer::Mat;
-use serde::{Deserialize, Serialize};
+use serde::de::{Error as _, SeqAccess, Visitor};
+use serde::{Deserialize, Deserializer, Serialize};
+use std::fmt;
 use std::path::Path;
 
 /// Version of the layout that this program writes and reads.
 pub const VERSION: u32 = 1;
+
+/// Most characters of a note that are kept.
+pub const MOST_NOTE: usize = 1000;
 
 /// Effort counts that the writer of a solution reports of itself, each left out when not counted.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
@@ -59,6 +68,7 @@ pub struct Solution {
 #[serde(deny_unknown_fields)]
 struct SolutionText {
     version: u32,
+    #[serde(deserialize_with = "block_list")]
     blocks: Vec<BlockText>,
     #[serde(default, skip_serializing_if = "Vec::is_empty")]
     nonnegative: Vec<f64>,
@@ -68,22 +78,22 @@ struct SolutionText {
     stop: Option<String>,
     #[serde(default, skip_serializing_if = "String::is_empty")]
     note: String,
-    #[serde(default)]
+    #[serde(default, deserialize_with = "json::object")]
     effort: ReportedEffort,
 }
 
 #[derive(Default, Serialize, Deserialize)]
 #[serde(deny_unknown_fields, default)]
 struct BlockText {
-    #[serde(skip_serializing_if = "Option::is_none")]
-    factor: Option<Vec<Vec<f64>>>,
-    #[serde(skip_serializing_if = "Option::is_none")]
-    matrix: Option<Vec<Vec<f64>>>,
-    #[serde(skip_serializing_if = "Option::is_none")]
+    #[serde(skip_serializing_if = "Option::is_none", deserialize_with = "json::given")]
+    factor: Option<Rows>,
+    #[serde(skip_serializing_if = "Option::is_none", deserialize_with = "json::given")]
+    matrix: Option<Rows>,
+    #[serde(skip_serializing_if = "Option::is_none", deserialize_with = "json::given")]
     entries: Option<Vec<(usize, usize, f64)>>,
-    #[serde(skip_serializing_if = "Option::is_none")]
+    #[serde(skip_serializing_if = "Option::is_none", deserialize_with = "json::given")]
     file: Option<String>,
-    #[serde(skip_serializing_if = "Option::is_none")]
+    #[serde(skip_serializing_if = "Option::is_none", deserialize_with = "json::given")]
     holds: Option<Holds>,
 }
 
@@ -94,14 +104,53 @@ enum Holds {
     Matrix,
 }
 
+/// Reads the list of blocks, and refuses one that is longer than any problem's before it is held.
+fn block_list<'de, D: Deserializer<'de>>(deserializer: D) -> Result<Vec<BlockText>, D::Error> {
+    struct List;
+
+    impl<'de> Visitor<'de> for List {
+        type Value = Vec<BlockText>;
+
+        fn expecting(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+            f.write_str("a list of blocks")
+        }
+
+        fn visit_seq<A: SeqAccess<'de>>(self, mut items: A) -> Result<Self::Value, A::Error> {
+            let mut blocks = Vec::new();
+            while let Some(block) = items.next_element_seed(json::Object::default())? {
+                if blocks.len() == MAX_TOTAL_ORDER {
+                    return Err(A::Error::custom(format!("more than {MAX_TOTAL_ORDER} blocks")));
+                }
+                blocks.push(block);
+            }
+            Ok(blocks)
+        }
+    }
+
+    deserializer.deserialize_seq(List)
+}
+
 /// Reads a solution file for `problem`; Matrix Market files it names are read from its own folder.
 ///
 /// # Errors
 /// A file is unreadable, or its text is refused; see [`parse`].
 pub fn read(path: &Path, problem: &Problem) -> Result<Solution, FormatError> {
-    let text = read_text(path)?;
+    read_within(path, problem, MAX_FILE_BYTES)
+}
+
+/// Reads a solution file of at most `most_bytes` bytes, and Matrix Market files of at most as many each.
+///
+/// # Errors
+/// A file is unreadable or longer, or its text is refused; see [`parse`].
+pub fn read_within(
+    path: &Path,
+    problem: &Problem,
+    most_bytes: u64,
+) -> Result<Solution, FormatError> {
+    let text = read_text(path, most_bytes)?;
     let folder = path.parent().unwrap_or(Path::new(""));
-    parse(&text, &path.display().to_string(), folder, problem)
+    let file = path.display().to_string();
+    parse_text(Source { file: &file, text: &text }, Beside { folder, most_bytes }, problem)
 }
 
 /// Reads the text of a solution file; `file` is the name that errors carry, `folder` holds the Matrix
@@ -116,7 +165,21 @@ pub fn parse(
     folder: &Path,
     problem: &Problem,
 ) -> Result<Solution, FormatError> {
-    let source = Source { file, text };
+    parse_text(Source { file, text }, Beside { folder, most_bytes: MAX_FILE_BYTES }, problem)
+}
+
+/// Where the Matrix Market files stand, and how long each may be.
+#[derive(Clone, Copy)]
+struct Beside<'a> {
+    folder: &'a Path,
+    most_bytes: u64,
+}
+
+fn parse_text(
+    source: Source<'_>,
+    beside: Beside<'_>,
+    problem: &Problem,
+) -> Result<Solution, FormatError> {
     let raw: SolutionText = json::from_text(source)?;
     let refuse = |path: &[Step<'_>], kind, expected: String| {
         Err(json::error_at(source, path, kind, expected))
@@ -151,10 +214,10 @@ pub fn parse(
     let mut blocks = Vec::with_capacity(raw.blocks.len());
     for (index, block) in raw.blocks.iter().enumerate() {
         let order = problem.blocks()[index].order;
-        blocks.push(read_block(source, folder, block, index, order)?);
+        blocks.push(read_block(source, beside, block, index, order)?);
     }
     let point = Point { blocks, orthant: raw.nonnegative };
-    let note = raw.note.replace(['\n', '\r'], " ");
+    let note = shorten_to(&raw.note, MOST_NOTE).replace(['\n', '\r'], " ");
     Ok(Solution {
         answer: Answer { point, multipliers: raw.multipliers, stop, note },
         effort: raw.effort,
@@ -177,7 +240,7 @@ fn stop_reason(word: &str) -> Option<StopReason> {
 
 fn read_block(
     source: Source<'_>,
-    folder: &Path,
+    beside: Beside<'_>,
     block: &BlockText,
     index: usize,
     order: usize,
@@ -188,14 +251,9 @@ fn read_block(
     };
     match (&block.factor, &block.matrix, &block.entries, &block.file, block.holds) {
         (Some(rows), None, None, None, None) => {
-            let width = rows.first().map_or(0, Vec::len);
-            let data = rectangle(
-                source,
-                &[&here[..], &[Step::Key("factor")]].concat(),
-                rows,
-                order,
-                width,
-            )?;
+            let path = [&here[..], &[Step::Key("factor")]].concat();
+            let width = rows.width();
+            let data = rectangle(source, &path, rows, order, width)?.to_vec();
             Ok(BlockPoint::Factor(Factor { order, width, data }))
         }
         (None, Some(rows), None, None, None) => {
@@ -238,7 +296,7 @@ fn read_block(
                 let expected = "the plain name of a file in the folder of the solution".to_owned();
                 return refuse(&[Step::Key("file")], Kind::Unexpected, expected);
             }
-            block_from_file(&folder.join(name), holds, order)
+            block_from_file(&beside.folder.join(name), beside.most_bytes, holds, order)
         }
         _ => {
             let expected =
@@ -248,46 +306,39 @@ fn read_block(
     }
 }
 
-/// Puts rows one after another, once there are `order` of them and each has `width` numbers.
-fn rectangle(
+/// Returns the rows one after another, once there are `order` of them and each has `width` numbers.
+fn rectangle<'a>(
     source: Source<'_>,
     path: &[Step<'_>],
-    rows: &[Vec<f64>],
+    rows: &'a Rows,
     order: usize,
     width: usize,
-) -> Result<Vec<f64>, FormatError> {
-    if rows.len() != order {
-        let expected = format!("{order} rows, not {}", rows.len());
+) -> Result<&'a [f64], FormatError> {
+    if rows.count() != order {
+        let expected = format!("{order} rows, not {}", rows.count());
         return Err(json::error_at(source, path, Kind::OutOfRange, expected));
     }
-    if let Some(row) = rows.iter().position(|row| row.len() != width) {
+    let other = if rows.width() == width { rows.ragged() } else { Some(0) };
+    if let Some(row) = other {
         let path = [path, &[Step::Item(row)]].concat();
-        return Err(json::error_at(
-            source,
-            &path,
-            Kind::OutOfRange,
-            format!("a row of {width} numbers"),
-        ));
+        let expected = format!("a row of {width} numbers");
+        return Err(json::error_at(source, &path, Kind::OutOfRange, expected));
     }
-    Ok(rows.concat())
+    Ok(rows.data())
 }
 
-fn block_from_file(path: &Path, holds: Holds, order: usize) -> Result<BlockPoint, FormatError> {
-    let matrix = matrix_market::read(path)?;
-    let fits = matrix.rows == order && (holds == Holds::Factor || matrix.columns == order);
-    if !fits {
-        let shape =
-            if holds == Holds::Factor { "any number of".to_owned() } else { order.to_string() };
-        return Err(FormatError {
-            file: path.display().to_string(),
-            line: matrix.size_line,
-            column: 1,
-            token: format!("{} {}", matrix.rows, matrix.columns),
-            expected: format!("{order} rows and {shape} columns"),
-            kind: Kind::OutOfRange,
-            excerpt: None,
-        });
-    }
+fn block_from_file(
+    path: &Path,
+    most_bytes: u64,
+    holds: Holds,
+    order: usize,
+) -> Result<BlockPoint, FormatError> {
+    let columns = match holds {
+        // A wider factor is worth no more than one of the block's order.
+        Holds::Factor => 0..=order.max(MAX_DENSE_ORDER),
+        Holds::Matrix => order..=order,
+    };
+    let matrix = matrix_market::read_shaped(path, &Shape { rows: order, columns }, most_bytes)?;
     Ok(match holds {
         Holds::Factor => {
             BlockPoint::Factor(Factor { order, width: matrix.columns, data: matrix.data })
@@ -328,7 +379,7 @@ fn block_text(block: &BlockPoint) -> BlockText {
     match block {
         BlockPoint::Factor(factor) => {
             assert!(factor.data.iter().all(|value| value.is_finite()), "a number is not finite");
-            let rows = (0..factor.order).map(|i| factor.row(i).to_vec()).collect();
+            let rows = Rows::new(factor.order, factor.width, factor.data.clone());
             BlockText { factor: Some(rows), ..BlockText::default() }
         }
         BlockPoint::Dense(matrix) => {

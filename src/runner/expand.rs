@@ -10,7 +10,6 @@ use super::instance::{Instance, plant, read_instance};
 use super::isolation::guarded;
 use super::journal::Contents;
 use super::plan::{Imported, Plan, Sown};
-use super::schedule::Log;
 use super::selection::Selection;
 use super::{InputError, RunError};
 use crate::families::PlantError;
@@ -130,8 +129,11 @@ impl Expansion {
 
     /// Lists the positions of the selected trials.
     pub(super) fn select(&self, plan: &Plan<'_>, selection: &Selection) -> Vec<usize> {
+        let ids: Vec<&str> = self.instances.iter().map(|instance| instance.id.as_str()).collect();
+        let here = selection.shard.map(|shard| shard.share(&ids));
         let takes = |trial: &TrialSpec| {
-            selection.takes(&self.instances[trial.instance].id, &plan.entrants[trial.entrant].label)
+            here.as_ref().is_none_or(|here| here[trial.instance])
+                && selection.takes(ids[trial.instance], &plan.entrants[trial.entrant].label)
         };
         (0..self.trials.len()).filter(|at| takes(&self.trials[*at])).collect()
     }
@@ -215,22 +217,15 @@ impl Expansion {
         }
     }
 
-    /// Puts what was recorded before and now in plan order.
-    pub(super) fn in_plan_order(
-        &self,
-        before: Contents,
-        log: Log,
-    ) -> (Vec<InstanceRecord>, Vec<Record>) {
+    /// Puts what is recorded in plan order.
+    pub(super) fn in_plan_order(&self, recorded: Contents) -> (Vec<InstanceRecord>, Vec<Record>) {
         let place = |ids: &mut dyn Iterator<Item = &str>| -> BTreeMap<String, usize> {
             ids.enumerate().map(|(at, id)| (id.to_owned(), at)).collect()
         };
         let instance_place = place(&mut self.instances.iter().map(|instance| instance.id.as_str()));
         let trial_place = place(&mut self.trials.iter().map(|trial| trial.id.as_str()));
-        let mut instances = before.instances;
-        instances.extend(log.instances);
+        let (mut instances, mut records) = (recorded.instances, recorded.records);
         instances.sort_by_key(|record| instance_place.get(&record.instance).copied());
-        let mut records = before.records;
-        records.extend(log.records);
         records.sort_by_key(|record| trial_place.get(&record.trial).copied());
         (instances, records)
     }

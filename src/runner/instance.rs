@@ -5,7 +5,7 @@ use std::path::Path;
 use crate::card::Settings;
 use crate::families::{Family, PlantError};
 use crate::formats::{self, FormatError};
-use crate::problem::certificate::{Planted, Uniqueness};
+use crate::problem::certificate::{Planted, Standing, Uniqueness};
 use crate::problem::{Factor, Problem, canonical};
 use crate::record::InstanceRecord;
 use crate::referee::{Known, KnownOptimum};
@@ -16,7 +16,7 @@ use crate::seed::Stream;
 pub struct Knowledge {
     /// The rank-constrained optimum.
     pub optimum: KnownOptimum,
-    /// Multipliers of an exact dual certificate.
+    /// Multipliers of a proved dual certificate.
     pub dual: Option<Vec<f64>>,
     /// The only optimal point, by factors.
     pub unique_point: Option<Vec<Factor>>,
@@ -120,8 +120,17 @@ fn describe(problem: &Problem) -> InstanceRecord {
 }
 
 impl Instance {
-    /// Wraps a planted instance.
+    /// Wraps a planted instance. One without a proof has no known optimum, like a problem read from a file; its kind of
+    /// certificate, `no-proof`, says so in the record.
     pub fn from_planted(planted: Planted) -> Self {
+        if planted.certificate.standing() == Standing::Unproved {
+            let record = InstanceRecord {
+                certificate: planted.certificate.kind().to_owned(),
+                uniqueness: "not-proved".to_owned(),
+                ..describe(&planted.problem)
+            };
+            return Instance { problem: planted.problem, knowledge: Knowledge::none(), record };
+        }
         let (uniqueness, unique) = match planted.uniqueness {
             Uniqueness::Proved => ("proved", true),
             Uniqueness::NotProved => ("not-proved", false),
@@ -205,13 +214,17 @@ pub fn plant(
     family.plant(parameters, &mut Stream::named(seed, &labels))
 }
 
-/// Reads an instance file: sparse SDPA when its name ends in `.dat-s`, the native format otherwise.
+/// Reads an instance file: sparse SDPA when its name ends in `.dat-s`, the tables of a power network when it ends in
+/// `.toml`, the native format otherwise.
 ///
 /// # Errors
 /// The file is unreadable or not in its format, or its certificate does not hold.
 pub fn read_instance(path: &Path) -> Result<Instance, InputError> {
     if path.extension().is_some_and(|extension| extension == "dat-s") {
         return Ok(Instance::from_problem(formats::sdpa::read(path)?.problem));
+    }
+    if path.extension().is_some_and(|extension| extension == "toml") {
+        return Ok(Instance::from_problem(formats::network::read(path)?.problem));
     }
     let read = formats::instance::read(path)?;
     let Some(certificate) = read.certificate else {

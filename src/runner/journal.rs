@@ -4,7 +4,7 @@
 //! that was altered is found out. A tail without a line break is what a killed process leaves; it is
 //! cut on resuming. The first line says what run the journal is of.
 
-use std::collections::BTreeSet;
+use std::collections::BTreeMap;
 use std::fs::{File, OpenOptions, TryLockError};
 use std::io::{Read, Seek, SeekFrom, Write};
 use std::path::{Path, PathBuf};
@@ -13,7 +13,7 @@ use std::sync::{Mutex, PoisonError};
 use serde::{Deserialize, Serialize};
 
 use super::hexadecimal_digest;
-use crate::record::{InstanceRecord, Record, RunHeader, SCHEMA};
+use crate::record::{Cost, InstanceRecord, Record, RunHeader, SCHEMA};
 
 /// Name of the journal in a run folder.
 pub const FILE: &str = "journal.jsonl";
@@ -71,6 +71,11 @@ enum Entry {
     Run(RunHeader),
     Instance(InstanceRecord),
     Trial(Box<Record>),
+    /// Time and memory of a recorded trial that was run again alone.
+    Retimed {
+        trial: String,
+        cost: Cost,
+    },
 }
 
 impl Entry {
@@ -174,7 +179,7 @@ impl Contents {
             reason,
         };
         let mut contents: Option<Contents> = None;
-        let mut seen = BTreeSet::new();
+        let mut seen: BTreeMap<String, usize> = BTreeMap::new();
         for (at, line) in text[..whole].split_inclusive(|byte| *byte == b'\n').enumerate() {
             let line = std::str::from_utf8(&line[..line.len() - 1])
                 .map_err(|_| altered(at + 1, "the line is not text".to_owned()))?;
@@ -197,7 +202,7 @@ impl Contents {
                 }
                 (Entry::Instance(record), Some(contents)) => contents.instances.push(record),
                 (Entry::Trial(record), Some(contents)) => {
-                    if !seen.insert(record.trial.clone()) {
+                    if seen.insert(record.trial.clone(), contents.records.len()).is_some() {
                         return Err(altered(
                             at + 1,
                             format!("trial {} is recorded twice", record.trial),
@@ -205,6 +210,13 @@ impl Contents {
                     }
                     contents.records.push(*record);
                 }
+                (Entry::Retimed { trial, cost }, Some(contents)) => match seen.get(&trial) {
+                    Some(place) => contents.records[*place].set_cost(cost),
+                    None => {
+                        let reason = format!("trial {trial} has a time but no record");
+                        return Err(altered(at + 1, reason));
+                    }
+                },
                 _ => {
                     return Err(altered(
                         at + 1,
@@ -215,6 +227,15 @@ impl Contents {
         }
         contents.ok_or_else(|| JournalError::Missing { path: path.display().to_string() })
     }
+}
+
+/// Reads the bytes of a journal; `path` is the name that errors carry. A torn tail is left out.
+///
+/// # Errors
+/// [`JournalError::Missing`] for bytes without a whole line; a line that is not what was written; another
+/// record layout.
+pub fn parse(path: &Path, bytes: &[u8]) -> Result<Contents, JournalError> {
+    Contents::parse(path, bytes)
 }
 
 /// Reads the journal in `folder` without changing it; a torn tail is left out.
@@ -244,7 +265,17 @@ fn failed(path: &Path, error: &std::io::Error) -> JournalError {
 #[derive(Debug)]
 pub(super) struct Journal {
     path: PathBuf,
-    file: Mutex<File>,
+    tail: Mutex<Tail>,
+}
+
+/// The end of a journal that is being written.
+#[derive(Debug)]
+struct Tail {
+    file: File,
+    /// Bytes up to the last whole line.
+    whole: u64,
+    /// Whether a line could not be written: nothing may follow it.
+    broken: bool,
 }
 
 impl Journal {
@@ -263,21 +294,23 @@ impl Journal {
         let file = OpenOptions::new().read(true).append(true).open(&path);
         let journal = Journal::locked(path.clone(), file.map_err(|error| failed(&path, &error))?)?;
         let mut text = Vec::new();
-        let mut file = journal.file.lock().unwrap_or_else(PoisonError::into_inner);
-        file.read_to_end(&mut text).map_err(|error| failed(&path, &error))?;
-        drop(file);
+        let mut tail = journal.tail.lock().unwrap_or_else(PoisonError::into_inner);
+        tail.file.read_to_end(&mut text).map_err(|error| failed(&path, &error))?;
         let contents = Contents::parse(&path, &text)?;
+        tail.whole = contents.whole;
+        drop(tail);
         Ok((journal, contents))
     }
 
     fn locked(path: PathBuf, file: File) -> Result<Self, JournalError> {
         match file.try_lock() {
-            Ok(()) => Ok(Journal { path, file: Mutex::new(file) }),
             Err(TryLockError::WouldBlock) => {
                 Err(JournalError::InUse { path: path.display().to_string() })
             }
             // Some network file systems know no locks; a run there is not refused for that.
-            Err(TryLockError::Error(_)) => Ok(Journal { path, file: Mutex::new(file) }),
+            Ok(()) | Err(TryLockError::Error(_)) => {
+                Ok(Journal { path, tail: Mutex::new(Tail { file, whole: 0, broken: false }) })
+            }
         }
     }
 
@@ -286,9 +319,10 @@ impl Journal {
         if contents.torn == 0 {
             return Ok(());
         }
-        let mut file = self.file.lock().unwrap_or_else(PoisonError::into_inner);
-        file.set_len(contents.whole)
-            .and_then(|()| file.seek(SeekFrom::End(0)))
+        let mut tail = self.tail.lock().unwrap_or_else(PoisonError::into_inner);
+        tail.file
+            .set_len(contents.whole)
+            .and_then(|()| tail.file.seek(SeekFrom::End(0)))
             .map(|_| ())
             .map_err(|error| failed(&self.path, &error))
     }
@@ -303,12 +337,33 @@ impl Journal {
         self.append(&Entry::Trial(Box::new(record.clone())))
     }
 
+    /// Appends the time and memory of a recorded trial that was run again alone.
+    pub(super) fn retimed(&self, trial: &str, cost: Cost) -> Result<(), JournalError> {
+        self.append(&Entry::Retimed { trial: trial.to_owned(), cost })
+    }
+
     fn append(&self, entry: &Entry) -> Result<(), JournalError> {
         let line = entry.line();
-        let mut file = self.file.lock().unwrap_or_else(PoisonError::into_inner);
+        let mut tail = self.tail.lock().unwrap_or_else(PoisonError::into_inner);
+        if tail.broken {
+            let path = self.path.display().to_string();
+            let reason = "an earlier line could not be written".to_owned();
+            return Err(JournalError::System { path, reason });
+        }
         // One write for one line; what a kill in its middle leaves is found by the missing line break.
-        file.write_all(line.as_bytes())
-            .and_then(|()| file.flush())
-            .map_err(|error| failed(&self.path, &error))
+        match tail.file.write_all(line.as_bytes()).and_then(|()| tail.file.flush()) {
+            Ok(()) => {
+                tail.whole += line.len() as u64;
+                Ok(())
+            }
+            Err(error) => {
+                // Part of the line may be out (a full disk): no other worker may write behind it.
+                tail.broken = true;
+                let whole = tail.whole;
+                // Where this fails too, resuming finds the missing line break.
+                let _ = tail.file.set_len(whole);
+                Err(failed(&self.path, &error))
+            }
+        }
     }
 }

@@ -1,7 +1,7 @@
 //! What the run ran on, and when: the only clock readings outside of budgets.
 
 use std::collections::BTreeMap;
-use std::time::{SystemTime, UNIX_EPOCH};
+use std::time::{Instant, SystemTime, UNIX_EPOCH};
 
 use serde::{Deserialize, Serialize};
 
@@ -41,6 +41,99 @@ pub(super) fn describe() -> Machine {
         cores: cores(),
         memory_bytes: kilobytes.map(|kilobytes| kilobytes * 1024),
     }
+}
+
+/// Returns the number of processes that ran or wanted to run, averaged over the last minute; none where the
+/// system does not tell.
+pub(super) fn load_average() -> Option<f64> {
+    std::fs::read_to_string("/proc/loadavg").ok()?.split(' ').next()?.parse().ok()
+}
+
+/// Processor time spent up to a moment: by all programs, and by this one with the processes it has waited
+/// for. The unit of the first is a hundredth of a second.
+#[derive(Clone, Copy, Debug)]
+pub(super) struct Busy {
+    at: Instant,
+    all_s: f64,
+    own_s: f64,
+}
+
+impl Busy {
+    /// Reads the counters of the system; none where it has none.
+    pub(super) fn now() -> Option<Self> {
+        let text = std::fs::read_to_string("/proc/stat").ok()?;
+        Some(Busy { at: Instant::now(), all_s: busy_seconds(&text)?, own_s: own_seconds()? })
+    }
+
+    /// Returns how many cores other programs kept busy on average since `then`.
+    pub(super) fn others_since(&self, then: &Busy) -> Option<f64> {
+        let wall = self.at.duration_since(then.at).as_secs_f64();
+        let others = (self.all_s - then.all_s) - (self.own_s - then.own_s);
+        (wall > 0.0).then(|| (others / wall).max(0.0))
+    }
+}
+
+/// Sums user, nice, system, interrupt and stolen time of all cores from the first line of `/proc/stat`, whose
+/// fields are hundredths of a second (proc(5): user nice system idle iowait irq softirq steal).
+fn busy_seconds(stat: &str) -> Option<f64> {
+    let fields: Vec<f64> = stat
+        .lines()
+        .next()?
+        .strip_prefix("cpu ")?
+        .split_whitespace()
+        .map(|field| field.parse().ok())
+        .collect::<Option<_>>()?;
+    let busy = [0, 1, 2, 5, 6, 7].into_iter().filter_map(|at| fields.get(at)).sum::<f64>();
+    Some(busy / 100.0)
+}
+
+/// Returns the processor time of this process and of the processes it has waited for.
+fn own_seconds() -> Option<f64> {
+    #[cfg(unix)]
+    {
+        use nix::sys::resource::{UsageWho, getrusage};
+        use nix::sys::time::TimeValLike;
+        let spent = |who| {
+            let usage = getrusage(who).ok()?;
+            let microseconds =
+                usage.user_time().num_microseconds() + usage.system_time().num_microseconds();
+            Some(microseconds as f64 * 1e-6)
+        };
+        Some(spent(UsageWho::RUSAGE_SELF)? + spent(UsageWho::RUSAGE_CHILDREN)?)
+    }
+    #[cfg(not(unix))]
+    None
+}
+
+/// Lists the cores that threads of this process can be tied to; none where the system knows no such thing.
+pub(super) fn pinnable_cores() -> Vec<usize> {
+    #[cfg(target_os = "linux")]
+    {
+        use nix::sched::{CpuSet, sched_getaffinity};
+        use nix::unistd::Pid;
+        sched_getaffinity(Pid::from_raw(0)).map_or_else(
+            |_| Vec::new(),
+            |set| (0..CpuSet::count()).filter(|core| set.is_set(*core).unwrap_or(false)).collect(),
+        )
+    }
+    #[cfg(not(target_os = "linux"))]
+    Vec::new()
+}
+
+/// Ties the calling thread, and what it starts, to one of `cores`: the `worker`-th, counted around.
+pub(super) fn pin(worker: usize, cores: &[usize]) {
+    #[cfg(target_os = "linux")]
+    if !cores.is_empty() {
+        use nix::sched::{CpuSet, sched_setaffinity};
+        use nix::unistd::Pid;
+        let mut set = CpuSet::new();
+        if set.set(cores[worker % cores.len()]).is_ok() {
+            // A thread that the system does not tie runs where the system puts it.
+            let _ = sched_setaffinity(Pid::from_raw(0), &set);
+        }
+    }
+    #[cfg(not(target_os = "linux"))]
+    let _ = (worker, cores);
 }
 
 /// Reads `name : value` lines, the first of each name; empty where the system has no such file.
@@ -103,6 +196,18 @@ fn timestamp(seconds: u64) -> String {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn the_load_of_other_programs_is_what_this_one_did_not_spend() {
+        let stat = "cpu  100 20 30 5000 7 1 2 40 9 9\ncpu0 50 10 15 2500 3 0 1 20 4 4\n";
+        assert_eq!(busy_seconds(stat), Some((100 + 20 + 30 + 1 + 2 + 40) as f64 / 100.0));
+        assert_eq!(busy_seconds("intr 5"), None);
+        let at = Instant::now();
+        let then = Busy { at, all_s: 100.0, own_s: 3.0 };
+        let now = Busy { at: at + std::time::Duration::from_secs(10), all_s: 125.0, own_s: 13.0 };
+        assert_eq!(now.others_since(&then), Some(1.5));
+        assert_eq!(then.others_since(&then), None);
+    }
 
     #[test]
     fn timestamps_follow_the_calendar() {

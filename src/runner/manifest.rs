@@ -4,6 +4,7 @@ use std::path::Path;
 
 use serde::{Deserialize, Serialize};
 
+use super::Placement;
 use super::calibration::calibrate;
 use super::folder::{FolderError, write_whole};
 use super::machine::{self, Machine};
@@ -25,6 +26,13 @@ pub struct Stretch {
     pub commit: Option<String>,
     /// Number of trials at a time.
     pub threads: usize,
+    /// Whether each of them was tied to a core of its own.
+    pub placement: Placement,
+    /// Processes that ran or wanted to run on the machine when the stretch began, averaged over the minute
+    /// before.
+    pub load_before: Option<f64>,
+    /// Cores that other programs kept busy on average during the stretch; none while it runs.
+    pub others_busy_cores: Option<f64>,
     /// Processor time of the fixed calibration work, in seconds.
     pub calibration_s: Option<f64>,
     /// The machine.
@@ -33,7 +41,7 @@ pub struct Stretch {
 
 impl Stretch {
     /// Describes a stretch that begins now, here; the calibration is left out.
-    pub(super) fn now(threads: usize) -> Self {
+    pub(super) fn now(threads: usize, placement: Placement) -> Self {
         Stretch {
             started: machine::now(),
             ended: None,
@@ -41,6 +49,9 @@ impl Stretch {
             // Set by whoever builds from a repository; a plain build does not know its commit.
             commit: option_env!("RANKASSAY_COMMIT").map(str::to_owned),
             threads,
+            placement,
+            load_before: machine::load_average(),
+            others_busy_cores: None,
             calibration_s: None,
             machine: machine::describe(),
         }
@@ -99,10 +110,11 @@ impl Manifest {
         plan: &Plan<'_>,
         header: &RunHeader,
         threads: usize,
-    ) -> Result<Self, FolderError> {
+        placement: Placement,
+    ) -> Result<Started, FolderError> {
         let mut stretches =
             Manifest::read(folder).map_or_else(|_| Vec::new(), |before| before.stretches);
-        stretches.push(Stretch { calibration_s: calibrate(), ..Stretch::now(threads) });
+        stretches.push(Stretch { calibration_s: calibrate(), ..Stretch::now(threads, placement) });
         let manifest = Manifest {
             schema: header.schema,
             title: header.title.clone(),
@@ -120,19 +132,30 @@ impl Manifest {
             stretches,
         };
         manifest.write(folder)?;
-        Ok(manifest)
-    }
-
-    /// Writes the end of the run.
-    pub(super) fn end(mut self, folder: &Path) -> Result<(), FolderError> {
-        if let Some(stretch) = self.stretches.last_mut() {
-            stretch.ended = Some(machine::now());
-        }
-        self.write(folder)
+        Ok(Started { manifest, busy: machine::Busy::now() })
     }
 
     fn write(&self, folder: &Path) -> Result<(), FolderError> {
         let text = serde_json::to_string_pretty(self).expect("a manifest is plain data");
         write_whole(&folder.join(FILE), &format!("{text}\n"))
+    }
+}
+
+/// A stretch that is running.
+#[derive(Debug)]
+pub(super) struct Started {
+    manifest: Manifest,
+    busy: Option<machine::Busy>,
+}
+
+impl Started {
+    /// Writes the end of the stretch.
+    pub(super) fn end(mut self, folder: &Path) -> Result<(), FolderError> {
+        if let Some(stretch) = self.manifest.stretches.last_mut() {
+            stretch.ended = Some(machine::now());
+            stretch.others_busy_cores =
+                self.busy.and_then(|then| machine::Busy::now()?.others_since(&then));
+        }
+        self.manifest.write(folder)
     }
 }

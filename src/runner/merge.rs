@@ -3,6 +3,7 @@
 use std::collections::BTreeMap;
 
 use super::journal::Contents;
+use super::replay::compare;
 use crate::record::{InstanceRecord, MethodRecord, Record};
 
 /// Runs put together.
@@ -20,6 +21,36 @@ pub struct Merged {
     pub wall_limit_s: f64,
     /// Feasibility, objective and rank tolerance of the referee.
     pub tolerance: [f64; 3],
+    /// Copies of a trial that were left out because a kept one says the same.
+    pub copies: u64,
+    /// Trials whose copies do not agree; the copy of the first run is kept.
+    pub disagreements: Vec<Disagreement>,
+    /// Trials that the plans have and no run recorded.
+    pub missing: Vec<Missing>,
+}
+
+/// Two records of one trial that differ in more than time and memory.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Disagreement {
+    /// Instance, method and repeat.
+    pub trial: String,
+    /// The run whose copy is kept.
+    pub kept: String,
+    /// The other run.
+    pub other: String,
+    /// What differs: column, kept value, other value.
+    pub columns: Vec<[String; 3]>,
+}
+
+/// The trials of one plan that no run recorded.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Missing {
+    /// A run of the plan, as a position in the list that was merged.
+    pub run: usize,
+    /// How many trials the plan has.
+    pub of: u64,
+    /// Positions in the plan, from 0, in ascending order.
+    pub places: Vec<u64>,
 }
 
 /// Says why runs cannot be put together.
@@ -38,19 +69,13 @@ pub enum MergeError {
         /// What differs.
         reason: String,
     },
-    /// Two runs recorded the same trial.
-    #[error("{first} and {second} both recorded {what}")]
-    Twice {
-        /// One run.
-        first: String,
-        /// The other run.
-        second: String,
-        /// Instance, method and repeat.
-        what: String,
-    },
 }
 
 /// Puts runs together; each has a name for messages.
+///
+/// A trial is its instance, method and repeat. Where several runs recorded one (a task of a cluster that ran
+/// twice), the copy of the first run is kept; the others are counted when they say the same but for time and
+/// memory, and listed when not.
 ///
 /// # Errors
 /// See [`MergeError`].
@@ -60,7 +85,8 @@ pub fn merge(runs: Vec<(String, Contents)>) -> Result<Merged, MergeError> {
     };
     let (wall_limit_s, tolerance) = (first.header.wall_limit_s, first.header.tolerance);
     check_conditions(&runs)?;
-    check_trials(&runs)?;
+    let missing = missing(&runs);
+    let (runs, copies, disagreements) = without_copies(runs);
     let mut methods: Vec<MethodRecord> = Vec::new();
     for method in runs.iter().flat_map(|(_, run)| &run.header.methods) {
         if !methods.contains(method) {
@@ -92,7 +118,17 @@ pub fn merge(runs: Vec<(String, Contents)>) -> Result<Merged, MergeError> {
     }
     let origins = records.iter().map(|(_, at, _)| *at).collect();
     let records = records.into_iter().map(|(_, _, record)| record).collect();
-    Ok(Merged { records, origins, instances: ordered, methods, wall_limit_s, tolerance })
+    Ok(Merged {
+        records,
+        origins,
+        instances: ordered,
+        methods,
+        wall_limit_s,
+        tolerance,
+        copies,
+        disagreements,
+        missing,
+    })
 }
 
 /// Refuses runs whose figures are not comparable.
@@ -138,21 +174,83 @@ fn check_conditions(runs: &[(String, Contents)]) -> Result<(), MergeError> {
     Ok(())
 }
 
-/// Refuses runs that recorded the same trial.
-fn check_trials(runs: &[(String, Contents)]) -> Result<(), MergeError> {
-    let mut trials: BTreeMap<(&str, &str, u64), &str> = BTreeMap::new();
-    for (name, run) in runs {
+/// Drops every copy of a trial after the first; returns how many agreed, and those that did not.
+fn without_copies(
+    mut runs: Vec<(String, Contents)>,
+) -> (Vec<(String, Contents)>, u64, Vec<Disagreement>) {
+    let mut first: BTreeMap<(&str, &str, u64), (&str, &Record)> = BTreeMap::new();
+    let (mut copies, mut disagreements) = (0, Vec::new());
+    let mut kept: Vec<Vec<bool>> = Vec::new();
+    for (name, run) in &runs {
+        let mut keep = Vec::with_capacity(run.records.len());
         for record in &run.records {
             let key = (record.instance.as_str(), record.method.as_str(), record.repeat);
-            if let Some(other) = trials.insert(key, name) {
-                let what =
-                    format!("{} {} repeat {}", record.instance, record.method, record.repeat);
-                let (first, second) = (other.to_owned(), name.clone());
-                return Err(MergeError::Twice { first, second, what });
+            let before = first.get(&key);
+            keep.push(before.is_none());
+            match before {
+                None => {
+                    first.insert(key, (name, record));
+                }
+                Some((kept_in, kept)) => match disagreement((kept_in, kept), (name, record)) {
+                    Some(found) => disagreements.push(found),
+                    None => copies += 1,
+                },
+            }
+        }
+        kept.push(keep);
+    }
+    for ((_, run), keep) in runs.iter_mut().zip(kept) {
+        let mut keep = keep.into_iter();
+        run.records.retain(|_| keep.next() == Some(true));
+    }
+    (runs, copies, disagreements)
+}
+
+/// Compares two copies of a trial in everything but time and memory.
+fn disagreement(
+    (kept_in, kept): (&str, &Record),
+    (other, copy): (&str, &Record),
+) -> Option<Disagreement> {
+    // The number in front of a trial's id is its place in its own plan.
+    let copy = Record { trial: kept.trial.clone(), ..copy.without_measurements() };
+    let columns = compare(&kept.without_measurements(), &copy);
+    (!columns.is_empty()).then(|| Disagreement {
+        trial: format!("{} {} repeat {}", kept.instance, kept.method, kept.repeat),
+        kept: kept_in.to_owned(),
+        other: other.to_owned(),
+        columns: columns
+            .into_iter()
+            .map(|difference| [difference.column, difference.recorded, difference.replayed])
+            .collect(),
+    })
+}
+
+/// Finds the places of every plan, and of every round of it, that no run recorded.
+fn missing(runs: &[(String, Contents)]) -> Vec<Missing> {
+    let mut plans: BTreeMap<(&str, u64), (usize, Vec<bool>)> = BTreeMap::new();
+    for (at, (_, run)) in runs.iter().enumerate() {
+        let (trials, round) = (run.header.trials, run.header.round);
+        let (_, seen) = plans
+            .entry((&run.header.plan_digest, round))
+            .or_insert_with(|| (at, vec![false; trials as usize]));
+        for record in &run.records {
+            let place = number(&record.trial).checked_sub(round * trials + 1);
+            if let Some(mark) = place.and_then(|place| seen.get_mut(place as usize)) {
+                *mark = true;
             }
         }
     }
-    Ok(())
+    let mut all: Vec<Missing> = plans
+        .into_values()
+        .map(|(run, seen)| Missing {
+            run,
+            of: seen.len() as u64,
+            places: (0..seen.len()).filter(|at| !seen[*at]).map(|at| at as u64).collect(),
+        })
+        .filter(|missing| !missing.places.is_empty())
+        .collect();
+    all.sort_by_key(|missing| missing.run);
+    all
 }
 
 /// Returns the number that a trial's id starts with: its place in the plan.

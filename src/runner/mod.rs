@@ -15,6 +15,7 @@ mod manifest;
 mod merge;
 mod plan;
 mod replay;
+pub mod scatter;
 mod schedule;
 mod selection;
 mod trial;
@@ -25,7 +26,7 @@ pub use instance::{InputError, Instance, Knowledge, plant, read_instance};
 pub use journal::{Contents, JournalError};
 pub use machine::Machine;
 pub use manifest::{Manifest, Stretch};
-pub use merge::{MergeError, Merged, merge};
+pub use merge::{Disagreement, MergeError, Merged, Missing, merge};
 pub use plan::{
     Entrant, Imported, Located, Plan, PlanError, Player, ReportedOptimum, Roster, Sown, Span,
     Traced,
@@ -35,12 +36,14 @@ pub use selection::{Pattern, Selection, Shard};
 
 use std::path::PathBuf;
 use std::sync::Arc;
-use std::sync::atomic::{AtomicBool, Ordering};
+use std::sync::atomic::AtomicBool;
 
+use serde::{Deserialize, Serialize};
 use sha2::{Digest, Sha256};
 
 use crate::record::{InstanceRecord, Record, RunHeader};
 use expand::Expansion;
+use schedule::{Before, Reached};
 
 /// Returns the SHA-256 of `bytes` in hexadecimal digits.
 pub(crate) fn hexadecimal_digest(bytes: &[u8]) -> String {
@@ -58,6 +61,10 @@ pub struct RunOptions {
     pub selection: Selection,
     /// Where the methods run.
     pub isolation: Isolation,
+    /// On which cores.
+    pub placement: Placement,
+    /// Whether solved trials are timed once more when all have ended.
+    pub retiming: Retiming,
     /// Set to end the run at the next check of every running method.
     pub interrupt: Arc<AtomicBool>,
 }
@@ -72,10 +79,35 @@ pub enum Isolation {
     Processes(PathBuf),
 }
 
+/// On which cores trials run.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Placement {
+    /// Where the system puts them.
+    #[default]
+    Free,
+    /// Each of the trials at a time is tied to a core of its own (Linux).
+    Pinned,
+}
+
+/// Whether solved trials are timed once more, one at a time.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub enum Retiming {
+    /// No: times are those of trials side by side.
+    #[default]
+    None,
+    /// Yes: their time and memory are those without neighbours.
+    Solved,
+}
+
 /// Hears how a run goes. Calls come from several threads.
 pub trait Observer: Sync {
     /// Learns how many of the selected trials are to be run, and how many are recorded already.
     fn begin(&self, pending: usize, recorded: usize);
+    /// Learns that so many solved trials are timed once more.
+    fn begin_retiming(&self, pending: usize) {
+        let _ = pending;
+    }
     /// Learns something worth telling.
     fn notice(&self, text: &str);
     /// Learns of a trial that has ended.
@@ -130,6 +162,16 @@ pub enum RunError {
     /// The process of a trial cannot be started.
     #[error("a trial's process cannot be started: {0}")]
     Worker(String),
+    /// The system refused to take a record.
+    #[error(
+        "{reason}; the records so far are kept in {folder}, go on by `--resume --into {folder}` when there is room"
+    )]
+    Stopped {
+        /// What the system says, and of which file.
+        reason: String,
+        /// The run folder.
+        folder: String,
+    },
     /// A defect of this program: a certificate, a family or the referee is wrong.
     #[error("internal error: a certificate, a family or the referee is wrong; {trial}: {detail}")]
     Internal {
@@ -141,7 +183,7 @@ pub enum RunError {
 }
 
 impl RunError {
-    /// Says of a defect where the records up to it are kept.
+    /// Says of what stopped a run where the records up to it are kept.
     fn kept_in(self, folder: &std::path::Path) -> Self {
         match self {
             RunError::Internal { trial, detail } => {
@@ -151,6 +193,14 @@ impl RunError {
                     detail: format!("{detail}; the records so far are kept in {kept}"),
                 }
             }
+            RunError::Journal(error @ JournalError::System { .. }) => RunError::Stopped {
+                reason: error.to_string(),
+                folder: folder.display().to_string(),
+            },
+            RunError::Folder(error @ FolderError::System { .. }) => RunError::Stopped {
+                reason: error.to_string(),
+                folder: folder.display().to_string(),
+            },
             other => other,
         }
     }
@@ -166,6 +216,11 @@ impl From<InputError> for RunError {
     fn from(error: InputError) -> Self {
         RunError::Input(Box::new(error))
     }
+}
+
+/// Lists the ids of all trials of a plan, in plan order.
+pub fn trial_ids(plan: &Plan<'_>) -> Vec<String> {
+    Expansion::new(plan).trials.into_iter().map(|trial| trial.id).collect()
 }
 
 /// Runs a plan.
@@ -198,28 +253,39 @@ pub fn run(
     let imports = expansion.check(plan, &pool)?;
     let header = expansion.header(plan, imports);
     let (folder, journal, before) = folder::open(&options.target, &header, observer)?;
-    let started = manifest::Manifest::begin(&folder, plan, &header, jobs)?;
-    let log = schedule::run(&schedule::Work {
+    let before = Before::of(before);
+    if options.placement == Placement::Pinned && machine::pinnable_cores().is_empty() {
+        observer
+            .notice("this system does not tie processes to cores: trials run where it puts them");
+    }
+    let started = Manifest::begin(&folder, plan, &header, jobs, options.placement)?;
+    let work = schedule::Work {
         plan,
         expansion: &expansion,
         selected: &selected,
         isolation: &options.isolation,
+        placement: options.placement,
         before: &before,
         folder: &folder,
         journal: &journal,
         pool: &pool,
         interrupt: &options.interrupt,
         observer,
-    })
-    .map_err(|error| error.kept_in(&folder))?;
-    let ending = if options.interrupt.load(Ordering::Relaxed) && !log.complete {
-        Ending::Interrupted
-    } else {
-        Ending::Complete
     };
-    let (instances, records) = expansion.in_plan_order(before, log);
+    let mut reached = schedule::run(&work).map_err(|error| error.kept_in(&folder))?;
+    let mut recorded = journal::read(&folder)?;
+    if reached == Reached::All && options.retiming == Retiming::Solved {
+        reached =
+            schedule::retime(&work, &recorded.records).map_err(|error| error.kept_in(&folder))?;
+        recorded = journal::read(&folder)?;
+    }
+    let (instances, records) = expansion.in_plan_order(recorded);
     folder::write_rows(&folder, "instances.csv", &instances)?;
     folder::write_rows(&folder, "trials.csv", &records)?;
     started.end(&folder)?;
+    let ending = match reached {
+        Reached::All => Ending::Complete,
+        Reached::Part => Ending::Interrupted,
+    };
     Ok(Outcome { folder, header, instances, records, ending })
 }

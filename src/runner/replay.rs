@@ -242,7 +242,7 @@ fn surroundings(manifest: &Manifest) -> Vec<[String; 3]> {
     let Some(there) = manifest.stretches.last() else {
         return Vec::new();
     };
-    let here = Stretch::now(1);
+    let here = Stretch::now(1, super::Placement::Free);
     let word = |text: &Option<String>| text.clone().unwrap_or_else(|| "unknown".to_owned());
     let machine = |stretch: &Stretch| {
         let machine = &stretch.machine;
@@ -304,7 +304,8 @@ fn columns_of<T: serde::Serialize>(record: &T) -> Vec<(String, String)> {
     names.iter().map(str::to_owned).zip(values.iter().map(str::to_owned)).collect()
 }
 
-fn compare<T: serde::Serialize>(recorded: &T, replayed: &T) -> Vec<Difference> {
+/// Lists the columns in which two flat records differ.
+pub(super) fn compare<T: serde::Serialize>(recorded: &T, replayed: &T) -> Vec<Difference> {
     let pairs = columns_of(recorded).into_iter().zip(columns_of(replayed));
     pairs
         .filter(|(then, now)| then.1 != now.1)

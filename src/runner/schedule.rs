@@ -11,8 +11,9 @@ use super::instance::Instance;
 use super::journal::{Contents, Journal, JournalError};
 use super::plan::Plan;
 use super::trial::TrialEnd;
-use super::{Isolation, Observer, RunError, folder, worker};
-use crate::record::{InstanceRecord, Record};
+use super::{Isolation, Observer, Placement, RunError, folder, machine, worker};
+use crate::record::{Cost, InstanceRecord, Record, Timing};
+use crate::seed::Stream;
 
 /// What is to be run, and with what.
 pub(super) struct Work<'w> {
@@ -20,7 +21,8 @@ pub(super) struct Work<'w> {
     pub(super) expansion: &'w Expansion,
     pub(super) selected: &'w [usize],
     pub(super) isolation: &'w Isolation,
-    pub(super) before: &'w Contents,
+    pub(super) placement: Placement,
+    pub(super) before: &'w Before,
     pub(super) folder: &'w Path,
     pub(super) journal: &'w Journal,
     pub(super) pool: &'w rayon::ThreadPool,
@@ -28,13 +30,23 @@ pub(super) struct Work<'w> {
     pub(super) observer: &'w dyn Observer,
 }
 
-/// What was recorded now, in the order of its end.
-#[derive(Debug, Default)]
-pub(super) struct Log {
-    pub(super) instances: Vec<InstanceRecord>,
-    pub(super) records: Vec<Record>,
-    /// Whether every selected trial is recorded.
-    pub(super) complete: bool,
+/// What is recorded already. Records themselves stay in the journal, so that the memory of a run does not
+/// grow with what it has done.
+#[derive(Debug)]
+pub(super) struct Before {
+    trials: BTreeSet<String>,
+    instances: BTreeMap<String, InstanceRecord>,
+}
+
+impl Before {
+    /// Keeps of a journal's contents what a run needs.
+    pub(super) fn of(contents: Contents) -> Self {
+        let named = |record: InstanceRecord| (record.instance.clone(), record);
+        Before {
+            trials: contents.records.into_iter().map(|record| record.trial).collect(),
+            instances: contents.instances.into_iter().map(named).collect(),
+        }
+    }
 }
 
 /// The place of one instance while it has trials to come.
@@ -48,23 +60,35 @@ struct Desk<'w> {
     work: &'w Work<'w>,
     pending: Vec<&'w TrialSpec>,
     slots: BTreeMap<usize, Slot>,
-    recorded_instances: BTreeMap<&'w str, &'w InstanceRecord>,
     next: AtomicUsize,
+    done: AtomicUsize,
     stop: AtomicBool,
-    log: Mutex<Log>,
     error: Mutex<Option<RunError>>,
+}
+
+/// Whether every selected trial is recorded.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub(super) enum Reached {
+    /// Yes.
+    All,
+    /// No: the run was interrupted.
+    Part,
 }
 
 /// Runs the selected trials that are not recorded yet.
 ///
+/// Instances come in plan order. The trials of one instance come in an order drawn from the master seed, so
+/// that no method always runs first, on a cool machine, or always beside the same other one.
+///
 /// # Errors
 /// The first defect or refusal of the system that stopped the run; what was recorded is kept.
-pub(super) fn run(work: &Work<'_>) -> Result<Log, RunError> {
-    let recorded: BTreeSet<&str> =
-        work.before.records.iter().map(|record| record.trial.as_str()).collect();
+pub(super) fn run(work: &Work<'_>) -> Result<Reached, RunError> {
     let selected = work.selected.iter().map(|at| &work.expansion.trials[*at]);
-    let pending: Vec<&TrialSpec> =
-        selected.filter(|trial| !recorded.contains(trial.id.as_str())).collect();
+    let mut pending: Vec<&TrialSpec> =
+        selected.filter(|trial| !work.before.trials.contains(&trial.id)).collect();
+    pending.sort_by_cached_key(|trial| {
+        (trial.instance, Stream::named(work.plan.seed, &["order", &trial.id]).bits())
+    });
     let mut slots: BTreeMap<usize, Slot> = BTreeMap::new();
     for trial in &pending {
         let slot = slots
@@ -72,25 +96,73 @@ pub(super) fn run(work: &Work<'_>) -> Result<Log, RunError> {
             .or_insert_with(|| Slot { instance: Mutex::new(None), remaining: AtomicUsize::new(0) });
         *slot.remaining.get_mut() += 1;
     }
-    let instances = work.before.instances.iter();
     let desk = Desk {
         work,
         slots,
-        recorded_instances: instances.map(|record| (record.instance.as_str(), record)).collect(),
         next: AtomicUsize::new(0),
+        done: AtomicUsize::new(0),
         stop: AtomicBool::new(false),
-        log: Mutex::new(Log::default()),
         error: Mutex::new(None),
         pending,
     };
     work.observer.begin(desk.pending.len(), work.selected.len() - desk.pending.len());
-    work.pool.broadcast(|_| desk.serve());
+    let cores = match work.placement {
+        Placement::Free => Vec::new(),
+        Placement::Pinned => machine::pinnable_cores(),
+    };
+    work.pool.broadcast(|worker| {
+        // The processes that a thread starts stay on its core.
+        machine::pin(worker.index(), &cores);
+        desk.serve();
+    });
     if let Some(error) = desk.error.into_inner().unwrap_or_else(PoisonError::into_inner) {
         return Err(error);
     }
-    let mut log = desk.log.into_inner().unwrap_or_else(PoisonError::into_inner);
-    log.complete = log.records.len() == desk.pending.len();
-    Ok(log)
+    let done = desk.done.into_inner();
+    Ok(if done == desk.pending.len() { Reached::All } else { Reached::Part })
+}
+
+/// Runs solved trials again, one at a time, and records their time and memory without neighbours.
+///
+/// # Errors
+/// As for [`run`].
+pub(super) fn retime(work: &Work<'_>, recorded: &[Record]) -> Result<Reached, RunError> {
+    let wanted: BTreeMap<&str, &Record> = recorded
+        .iter()
+        .filter(|record| record.verdict.is_success() && record.timing == Timing::Shared)
+        .map(|record| (record.trial.as_str(), record))
+        .collect();
+    let selected = work.selected.iter().map(|at| &work.expansion.trials[*at]);
+    let pending: Vec<(&TrialSpec, &Record)> =
+        selected.filter_map(|trial| Some((trial, *wanted.get(trial.id.as_str())?))).collect();
+    work.observer.begin_retiming(pending.len());
+    let mut planted: Option<(usize, Instance)> = None;
+    for (spec, recorded) in pending {
+        if work.interrupt.load(Ordering::Relaxed) {
+            return Ok(Reached::Part);
+        }
+        let instance = match planted.take() {
+            Some((at, instance)) if at == spec.instance => instance,
+            _ => work.expansion.load(work.plan, spec.instance)?,
+        };
+        let place = &work.expansion.instances[spec.instance];
+        let end = work.pool.install(|| {
+            worker::play(work.isolation, work.plan, (spec, place), &instance, work.interrupt)
+        })?;
+        let TrialEnd::Recorded(again, _) = end else { return Ok(Reached::Part) };
+        if again.without_measurements() == recorded.without_measurements() {
+            let cost = Cost { timing: Timing::Alone, ..again.cost() };
+            work.journal.retimed(&again.trial, cost)?;
+        } else {
+            work.observer.notice(&format!(
+                "{} did not end alone as it did beside others; its time stays the first one",
+                again.trial
+            ));
+        }
+        work.observer.finished(&again);
+        planted = Some((spec.instance, instance));
+    }
+    Ok(Reached::All)
 }
 
 impl Desk<'_> {
@@ -118,7 +190,7 @@ impl Desk<'_> {
                 }
                 self.work.journal.trial(&record)?;
                 self.work.observer.finished(&record);
-                self.log.lock().unwrap_or_else(PoisonError::into_inner).records.push(*record);
+                self.done.fetch_add(1, Ordering::Relaxed);
                 Ok(())
             }
         }
@@ -138,8 +210,8 @@ impl Desk<'_> {
             return Ok(Arc::clone(instance));
         }
         let instance = Arc::new(self.work.expansion.load(self.work.plan, at)?);
-        match self.recorded_instances.get(instance.record.instance.as_str()) {
-            Some(recorded) if **recorded == instance.record => {}
+        match self.work.before.instances.get(instance.record.instance.as_str()) {
+            Some(recorded) if *recorded == instance.record => {}
             Some(_) => {
                 let reason = format!(
                     "instance {} is not what was recorded; was the run started by another version?",
@@ -151,11 +223,7 @@ impl Desk<'_> {
                 }
                 .into());
             }
-            None => {
-                self.work.journal.instance(&instance.record)?;
-                let mut log = self.log.lock().unwrap_or_else(PoisonError::into_inner);
-                log.instances.push(instance.record.clone());
-            }
+            None => self.work.journal.instance(&instance.record)?,
         }
         *place = Some(Arc::clone(&instance));
         Ok(instance)

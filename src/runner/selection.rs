@@ -49,8 +49,9 @@ fn matches_whole(pattern: &[char], text: &[char]) -> bool {
     pattern[p..].iter().all(|sign| *sign == '*')
 }
 
-/// One of several parts of a plan, by a hash of the instance's id: all trials of an instance fall
-/// into the same part.
+/// One of several parts of a plan: its instances are dealt out in the order of a hash of their ids, so
+/// that all trials of an instance fall into the same part, parts differ by one instance at most, and
+/// neighbours of one size do not all fall into one.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub struct Shard {
     part: u64,
@@ -58,12 +59,16 @@ pub struct Shard {
 }
 
 impl Shard {
-    /// Returns whether the instance falls into this part.
-    pub fn takes(&self, instance: &str) -> bool {
-        let hash = Sha256::digest(instance.as_bytes());
-        let mut head = [0u8; 8];
-        head.copy_from_slice(&hash[..8]);
-        u64::from_be_bytes(head) % self.parts == self.part - 1
+    /// Returns for each instance of a plan whether it falls into this part.
+    pub fn share(&self, instances: &[&str]) -> Vec<bool> {
+        let hash = |at: &usize| <[u8; 32]>::from(Sha256::digest(instances[*at].as_bytes()));
+        let mut order: Vec<usize> = (0..instances.len()).collect();
+        order.sort_by_cached_key(|at| (hash(at), *at));
+        let mut takes = vec![false; instances.len()];
+        for (turn, at) in order.into_iter().enumerate() {
+            takes[at] = turn as u64 % self.parts == self.part - 1;
+        }
+        takes
     }
 }
 
@@ -93,10 +98,9 @@ pub struct Selection {
 }
 
 impl Selection {
-    /// Returns whether a trial is selected.
-    pub fn takes(&self, instance: &str, method: &str) -> bool {
-        self.shard.is_none_or(|shard| shard.takes(instance))
-            && self.methods.as_ref().is_none_or(|labels| labels.iter().any(|label| label == method))
+    /// Returns whether a trial passes the tests of its own names; the shard is a matter of the whole plan.
+    pub(super) fn takes(&self, instance: &str, method: &str) -> bool {
+        self.methods.as_ref().is_none_or(|labels| labels.iter().any(|label| label == method))
             && self.only.as_ref().is_none_or(|only| only.matches(&format!("{instance} {method}")))
     }
 }
@@ -126,15 +130,16 @@ mod tests {
 
     #[test]
     fn every_instance_falls_into_one_part() {
-        let shards: Vec<Shard> = (1..=3).map(|part| format!("{part}/3").parse().unwrap()).collect();
-        let mut counts = [0; 3];
-        for number in 0..300 {
-            let id = format!("instance-{number}");
-            let taking: Vec<_> = (0..3).filter(|at| shards[*at].takes(&id)).collect();
-            assert_eq!(taking.len(), 1);
-            counts[taking[0]] += 1;
-        }
-        assert!(counts.iter().all(|count| *count > 50), "{counts:?}");
+        let ids: Vec<String> = (0..301).map(|number| format!("instance-{number}")).collect();
+        let ids: Vec<&str> = ids.iter().map(String::as_str).collect();
+        let shares: Vec<Vec<bool>> =
+            (1..=3).map(|part| format!("{part}/3").parse::<Shard>().unwrap().share(&ids)).collect();
+        assert!((0..301).all(|at| shares.iter().filter(|share| share[at]).count() == 1));
+        let counts = shares.iter().map(|share| share.iter().filter(|takes| **takes).count());
+        assert_eq!(counts.collect::<Vec<_>>(), [101, 100, 100]);
+        // Neighbours are spread: 50 of a size would otherwise land in one part of six.
+        let first = shares[0][..50].iter().filter(|takes| **takes).count();
+        assert!((8..=25).contains(&first), "{first}");
         for bad in ["", "1", "0/3", "4/3", "a/b", "1/0", "1/200000"] {
             assert!(bad.parse::<Shard>().is_err(), "{bad}");
         }

@@ -14,7 +14,7 @@ use super::plan::{Entrant, Plan, Traced};
 use crate::budget::{Budget, Counting, Effort, Halt, Meter, TracePoint, Tracing};
 use crate::methods::Trial;
 use crate::problem::{Answer, StopReason};
-use crate::record::{Cost, Figures, Identity, Record, TraceRow, Verdict, Work, measured};
+use crate::record::{Cost, Figures, Identity, Record, Timing, TraceRow, Verdict, Work, measured};
 use crate::referee::{self, Finding, Judgement};
 use crate::seed::Stream;
 
@@ -172,6 +172,7 @@ fn play(
         wall_s: Some(wall.as_secs_f64()),
         cpu_s: cpu.map(|cpu| cpu.as_secs_f64()),
         peak_bytes,
+        timing: Timing::Shared,
     };
     let effort = (trial.meter.counting() == Counting::Counted).then_some(trial.meter.effort);
     let trace = trial.meter.take_trace().into_iter().map(trace_row).collect();

@@ -24,7 +24,7 @@ use super::trial::{self, TrialEnd};
 use super::{Isolation, RunError};
 use crate::budget::{Budget, Halt, Stopwatch};
 use crate::methods::outside::process::{self, Ending, Outcome, Watch};
-use crate::record::{Cost, Record, TraceRow, Verdict};
+use crate::record::{Cost, Record, Timing, TraceRow, Verdict};
 
 /// What the worker prints when the instance is planted, and again when the method has ended.
 const MARK: &[u8] = b"\n";
@@ -185,6 +185,7 @@ fn conclude(
         wall_s: Some(outcome.wall.as_secs_f64()),
         cpu_s: outcome.processor.map(|processor| processor.as_secs_f64()),
         peak_bytes: outcome.peak_bytes,
+        timing: Timing::Shared,
     };
     let record = trial::unanswered(plan, spec, instance, verdict, &message, cost);
     Ok(TrialEnd::Recorded(Box::new(record), Vec::new()))

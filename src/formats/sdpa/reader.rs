@@ -225,8 +225,7 @@ impl<'a> Reader<'a> {
         most: usize,
         expected: &str,
     ) -> Result<usize, FormatError> {
-        let digits = token.1.strip_prefix('+').unwrap_or(token.1);
-        match digits.parse::<i128>() {
+        match token.1.parse::<i128>() {
             Ok(value) if value >= least as i128 && value <= most as i128 => Ok(value as usize),
             Ok(_) => Err(self.error(token, Kind::OutOfRange, expected)),
             Err(_) => Err(self.error(token, Kind::Unexpected, expected)),

@@ -7,17 +7,21 @@
 //! becomes a verdict with the reason and never stops the run.
 //!
 //! What is limited: wall time (the group is killed at the limit), processor time and address space
-//! (by the shell's `ulimit`), the size of each file it writes, and what it prints. What is not: the
-//! number of processes, which systems count for the user and not for the group, and a child that leaves
-//! its group. An answer that is there and whole when the wall limit ends the program still counts.
+//! (by the shell's `ulimit`), the size of each file it writes, what it prints, and how long an answer is
+//! read at all ([`answer_bytes`]), and, where there is a `/proc`, the number of processes at once
+//! ([`MOST_PROCESSES`]). Children go with the program, those that left its group too where they can be found
+//! (see [`census`]). An answer that is there and whole when the wall limit ends the program still counts.
 
+mod census;
 pub(crate) mod process;
 pub mod task;
 
+use std::cell::Cell;
 use std::path::{Path, PathBuf};
+use std::time::Duration;
 
 use super::{Method, Trial};
-use crate::budget::{Charge, Counting, Halt};
+use crate::budget::{Charge, Counting, Halt, Stopwatch};
 use crate::card::{MethodCard, MethodClass};
 use crate::formats::solution;
 use crate::problem::{Answer, Problem, StopReason};
@@ -26,11 +30,23 @@ use process::{Ending, Limits, Outcome, Watch};
 /// Version of the protocol: the layout of the folder, the task and the answer.
 pub const PROTOCOL: u32 = 1;
 
-/// Most bytes of an answer file, and of each Matrix Market file beside it.
+/// Most bytes of an answer file, and of each Matrix Market file beside it, whatever the problem.
 pub const MOST_ANSWER_BYTES: u64 = 256 << 20;
+
+/// Bytes of an answer that every problem is granted.
+const LEAST_ANSWER_BYTES: u64 = 1 << 20;
+
+/// Bytes of an answer that are granted for each number of a dense one, blanks and brackets included.
+const BYTES_A_NUMBER: u64 = 64;
 
 /// Most bytes that a program may print.
 pub const MOST_PRINTED_BYTES: u64 = 16 << 20;
+
+/// Most processes that a program may have at once.
+pub const MOST_PROCESSES: usize = 256;
+
+/// How long after a count of its processes the next one follows.
+const BETWEEN_COUNTS: Duration = Duration::from_millis(100);
 
 /// How much of the end of its output is kept for messages, in bytes.
 const KEPT_BYTES: usize = 2000;
@@ -89,13 +105,28 @@ impl Method for Outside {
         };
         let mut command = process::limited(&self.command, &self.folder, room.path(), &limits);
         let meter = &trial.meter;
+        let counted = Cell::new(Stopwatch::start());
+        let check = |_| {
+            if counted.get().elapsed() > BETWEEN_COUNTS {
+                counted.set(Stopwatch::start());
+                let processes = census::members(room.path()).len();
+                if processes > MOST_PROCESSES {
+                    return Err(Halt::Crashed(format!(
+                        "the program had {processes} processes at once, more than {MOST_PROCESSES}, and was ended"
+                    )));
+                }
+            }
+            meter.check()
+        };
         let watch = Watch {
             input: Vec::new(),
             printed_bytes: MOST_PRINTED_BYTES,
             kept_bytes: KEPT_BYTES,
-            check: &|_| meter.check(),
+            check: &check,
         };
         let outcome = process::run(&mut command, watch);
+        // What left the process group goes with the trial too.
+        census::end_all(room.path());
         let outcome = outcome.map_err(|error| {
             Halt::Crashed(format!("{} cannot be started: {error}", self.command[0]))
         })?;
@@ -155,23 +186,37 @@ fn died_of_memory(limit: Option<u64>, outcome: &Outcome) -> bool {
     held || outcome.last_words().to_lowercase().contains("memory")
 }
 
+/// Returns how many bytes an answer to `problem`, or a file beside it, may have: what a reader holds of it
+/// is then in proportion to the problem.
+pub fn answer_bytes(problem: &Problem) -> u64 {
+    let square = |order: usize| (order as u64).saturating_mul(order as u64);
+    let dense = problem.blocks().iter().map(|block| square(block.order));
+    let others = [problem.orthant() as u64, problem.constraints().len() as u64];
+    let numbers = dense.chain(others).fold(0u64, u64::saturating_add);
+    LEAST_ANSWER_BYTES.saturating_add(numbers.saturating_mul(BYTES_A_NUMBER)).min(MOST_ANSWER_BYTES)
+}
+
 /// Reads `answer.json` and adds the reported effort to the meter.
 fn read_answer(problem: &Problem, trial: &mut Trial, room: &Path) -> Result<Answer, Halt> {
     let path = room.join(task::ANSWER);
+    let most = answer_bytes(problem);
     match std::fs::metadata(&path) {
         Err(_) => {
             return Err(Halt::Malformed(format!("the program wrote no {}", task::ANSWER)));
         }
-        Ok(file) if !file.is_file() || file.len() > MOST_ANSWER_BYTES => {
+        Ok(file) if !file.is_file() => {
+            return Err(Halt::Malformed(format!("{} is no file", task::ANSWER)));
+        }
+        Ok(file) if file.len() > most => {
             return Err(Halt::Malformed(format!(
-                "{} is no file of at most {} MiB",
+                "{} has {} bytes, more than the {most} that an answer to this problem may have",
                 task::ANSWER,
-                MOST_ANSWER_BYTES >> 20
+                file.len()
             )));
         }
         Ok(_) => {}
     }
-    let read = solution::read(&path, problem).map_err(|error| {
+    let read = solution::read_within(&path, problem, most).map_err(|error| {
         // The folder is gone when somebody reads this: only the file's name helps.
         let text = error.to_string().replace(&format!("{}/", room.display()), "");
         Halt::Malformed(text)

@@ -54,6 +54,7 @@ pub(super) fn write(room: &Path, problem: &Problem, trial: &mut Trial) -> io::Re
 /// `$defs`.
 pub fn schema() -> serde_json::Value {
     let count = json!({"type": "integer", "minimum": 0});
+    let counted = json!({"type": ["integer", "null"], "minimum": 0});
     let numbers = json!({"type": "array", "items": {"type": "number"}});
     let rows = json!({"type": "array", "items": numbers});
     let one = |name: &str, holds: serde_json::Value| {
@@ -104,17 +105,18 @@ pub fn schema() -> serde_json::Value {
                                 {"type": "number"}],
                             "minItems": 3, "maxItems": 3}})),
                         {"type": "object", "required": ["file", "holds"], "additionalProperties": false,
-                         "properties": {"file": {"type": "string"},
+                         "properties": {"file": {"type": "string", "pattern": r"^[^/\\]+$",
+                                                 "not": {"enum": [".", ".."]}},
                                         "holds": {"enum": ["factor", "matrix"]}}},
                     ]}},
                     "nonnegative": numbers,
-                    "multipliers": numbers,
+                    "multipliers": {"oneOf": [numbers, {"type": "null"}]},
                     "stop": {"enum": ["converged", "iteration-limit", "stalled", "time-limit",
-                                       "memory-limit", "primal-infeasible", "dual-infeasible"]},
+                                       "memory-limit", "primal-infeasible", "dual-infeasible", null]},
                     "note": {"type": "string"},
                     "effort": {"type": "object", "additionalProperties": false, "properties": {
-                        "flops": count, "eigendecompositions": count, "factorisations": count,
-                        "operator_products": count, "inner_steps": count}},
+                        "flops": counted, "eigendecompositions": counted, "factorisations": counted,
+                        "operator_products": counted, "inner_steps": counted}},
                 },
             },
         },

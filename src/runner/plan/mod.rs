@@ -49,6 +49,12 @@ impl std::fmt::Debug for Roster<'_> {
     }
 }
 
+/// Longest plan that is read, in bytes.
+pub const MOST_BYTES: usize = 1 << 20;
+
+/// Most combinations of families and parameters in a plan.
+const MOST_COMBINATIONS: usize = 100_000;
+
 /// A place in the plan's text, as byte offsets.
 pub type Span = std::ops::Range<usize>;
 
@@ -218,6 +224,10 @@ impl<'a> Plan<'a> {
         roster: Roster<'a>,
     ) -> Result<Self, PlanError> {
         let document = Document::new(text, file_name);
+        if text.len() > MOST_BYTES {
+            let message = format!("a plan of {} bytes", text.len());
+            return Err(document.missing(&message, &format!("at most {MOST_BYTES} bytes")));
+        }
         let table = document.parse()?;
         let top = Section::top(&document, &table);
         top.only(&[

@@ -1,5 +1,7 @@
 //! Walking a parsed document with the place of every key and value at hand.
 
+use std::collections::BTreeSet;
+
 use toml::Spanned;
 use toml::de::{DeTable, DeValue};
 
@@ -116,8 +118,13 @@ impl<'d, 't> Section<'d, 't> {
 
     /// Makes an error about a key the section lacks; it stands where the section starts.
     pub(super) fn lacks(&self, key: &str, expected: &str) -> PlanError {
+        self.beginning(&format!("{} has no `{key}`", self.name), expected)
+    }
+
+    /// Makes an error about the section as a whole; it stands where the section starts.
+    pub(super) fn beginning(&self, message: &str, expected: &str) -> PlanError {
         let head = self.span.start..self.span.start;
-        self.document.error(head, &format!("{} has no `{key}`", self.name), expected, None)
+        self.document.error(head, message, expected, None)
     }
 
     /// Makes an error about the value of `entry`.
@@ -274,9 +281,10 @@ pub(super) fn settings(
         return Err(wrong(document, key, value, "at least one value in the list"));
     }
     let mut read: Vec<Placed<Setting>> = Vec::with_capacity(items.len());
+    let mut seen = BTreeSet::new();
     for item in items.iter() {
         let next = setting(document, key, item)?;
-        if read.iter().any(|before| before.value == next.value) {
+        if !seen.insert(next.value.clone()) {
             let message = format!("`{key}` lists a value twice");
             return Err(document.error(next.span, &message, "different values", None));
         }

@@ -6,7 +6,9 @@ use std::time::Duration;
 
 use super::quantity::{self, DURATION, SIZE};
 use super::reader::{Document, Placed, Section, setting, settings};
-use super::{Entrant, Imported, PlanError, Player, ReportedOptimum, Sown, Span, Traced};
+use super::{
+    Entrant, Imported, MOST_COMBINATIONS, PlanError, Player, ReportedOptimum, Sown, Span, Traced,
+};
 use crate::budget::Budget;
 use crate::card::{Setting, SettingError, SettingSpec, Settings, nearest_word};
 use crate::families::Family;
@@ -142,7 +144,8 @@ pub(super) fn families<'a>(
             .ok_or_else(|| section.lacks("name", "a line such as `name = \"tight-unique\"`"))?;
         let family = look_up(document, "family", &named, known, |family| family.card().id)?;
         let count = section.whole("count", 1, 1_000_000)?.map_or(1, |count| count.value);
-        for (parameters, places) in combinations(&section, family.card().parameters)? {
+        let room = MOST_COMBINATIONS - sown.len();
+        for (parameters, places) in combinations(&section, family.card().parameters, room)? {
             if !seen.insert((family.card().id, parameters.clone())) {
                 let message =
                     format!("family with the parameters {parameters} stands in the plan twice");
@@ -154,10 +157,12 @@ pub(super) fn families<'a>(
     Ok(sown)
 }
 
-/// Crosses the lists of a family's parameters; the first parameter of the file varies slowest.
+/// Crosses the lists of a family's parameters, at most `room` combinations; the first parameter of the file
+/// varies slowest.
 fn combinations(
     section: &Section<'_, '_>,
     specs: &[SettingSpec],
+    room: usize,
 ) -> Result<Vec<(Settings, Places)>, PlanError> {
     let document = section.document;
     let mut axes: Vec<(String, Span, Vec<Placed<Setting>>)> = Vec::new();
@@ -178,8 +183,9 @@ fn combinations(
         }
     }
     let total = axes.iter().try_fold(1usize, |product, axis| product.checked_mul(axis.2.len()));
-    let Some(total) = total.filter(|total| *total <= 1_000_000) else {
-        return Err(section.lacks("end", "at most 1000000 combinations of parameters"));
+    let Some(total) = total.filter(|total| *total <= room) else {
+        let expected = format!("at most {MOST_COMBINATIONS} combinations in a plan");
+        return Err(section.beginning("too many combinations of parameters", &expected));
     };
     let mut resolved = Vec::with_capacity(total);
     for number in 0..total {
@@ -202,13 +208,14 @@ fn combinations(
 
 pub(super) fn imports(top: &Section<'_, '_>, folder: &Path) -> Result<Vec<Imported>, PlanError> {
     let mut imported: Vec<Imported> = Vec::new();
+    let mut seen = BTreeSet::new();
     for section in top.tables("import", "[[import]]")? {
         section.only(&["path", "rank", "optimum"])?;
         let path = section
             .text("path")?
             .ok_or_else(|| section.lacks("path", "a line such as `path = \"example.dat-s\"`"))?;
         let rank = section.whole("rank", 1, u64::from(u32::MAX))?.map(|rank| rank.value as usize);
-        if imported.iter().any(|before| before.path == path.value && before.rank == rank) {
+        if !seen.insert((path.value.clone(), rank)) {
             let message = "file with this rank stands in the plan twice";
             return Err(section.document.error(
                 path.span,
@@ -253,11 +260,12 @@ pub(super) fn methods<'a>(
     folder: &Path,
 ) -> Result<Vec<Entrant<'a>>, PlanError> {
     let mut entrants: Vec<Entrant<'a>> = Vec::new();
+    let mut labels = BTreeSet::new();
     for section in top.tables("method", "[[method]]")? {
         let document = section.document;
         if section.get("command").is_some() {
             let entrant = outside(&section, folder)?;
-            refuse_twin(document, &entrants, &entrant.label)?;
+            refuse_twin(document, &mut labels, &entrant.label)?;
             let (label, method) = (entrant.label.value, entrant.method);
             let options = Settings::of_word("command", &method.command.join(" "));
             entrants.push(Entrant { label, player: Player::Outside(method), options });
@@ -273,7 +281,7 @@ pub(super) fn methods<'a>(
             Some(label) => checked_label(document, label)?,
             None => Placed { value: default_label(method, &options), span: named.span },
         };
-        refuse_twin(document, &entrants, &label)?;
+        refuse_twin(document, &mut labels, &label)?;
         entrants.push(Entrant { label: label.value, player: Player::Listed(method), options });
     }
     Ok(entrants)
@@ -282,10 +290,10 @@ pub(super) fn methods<'a>(
 /// Refuses a label that a method before has.
 fn refuse_twin(
     document: &Document<'_>,
-    before: &[Entrant<'_>],
+    before: &mut BTreeSet<String>,
     label: &Placed<String>,
 ) -> Result<(), PlanError> {
-    if before.iter().any(|before| before.label == label.value) {
+    if !before.insert(label.value.clone()) {
         let message = format!("label {} stands in the plan twice", label.value);
         let expected = "another `label` for each method with the same name and options";
         return Err(document.error(label.span.clone(), &message, expected, None));
