@@ -4,7 +4,8 @@ use std::collections::{BTreeMap, BTreeSet};
 
 use rankassay::card::{Setting, Settings};
 use rankassay::families::{find, registry};
-use rankassay::problem::certificate::{Certificate, RelaxationFact};
+use rankassay::formats::{self, instance::Instance};
+use rankassay::problem::certificate::{Certificate, IntegerFactor, RelaxationFact, Standing};
 use rankassay::problem::exact::f64_of_i128;
 use rankassay::problem::{Coefficient, Functional, Planted, Problem, SparseSymmetric, Uniqueness};
 use rankassay::problem::{Factor, canonical};
@@ -47,6 +48,9 @@ fn sizes() -> Vec<(&'static str, Vec<(&'static str, Setting)>)> {
         ("frustrated-loops", [12, 24, 200]),
         ("high-width-trap", [8, 20, 60]),
         ("lattice-tiles", [16, 36, 400]),
+        ("noisy-signs", [10, 40, 150]),
+        ("phase", [6, 20, 60]),
+        ("radial-feeder", [9, 39, 201]),
         ("symbol-detection", [6, 20, 80]),
     ] {
         for n in orders {
@@ -59,6 +63,7 @@ fn sizes() -> Vec<(&'static str, Vec<(&'static str, Setting)>)> {
         ("ky-fan-gap", [(8, 1), (12, 2), (28, 3)]),
         ("localisation", [(8, 2), (22, 2), (103, 3)]),
         ("orthogonal-sync", [(10, 1), (60, 3), (2000, 4)]),
+        ("sensing", [(8, 1), (20, 2), (30, 3)]),
         ("weak-complementarity", [(8, 1), (20, 2), (60, 3)]),
     ] {
         for (n, rank) in cases {
@@ -67,6 +72,12 @@ fn sizes() -> Vec<(&'static str, Vec<(&'static str, Setting)>)> {
     }
     for (n, cliques) in [(8, 3), (20, 5), (60, 12)] {
         put("clique-cover", &[("order", n), ("cliques", cliques)]);
+    }
+    for (n, clusters) in [(8, 2), (15, 3), (40, 5)] {
+        put("clusters", &[("order", n), ("clusters", clusters)]);
+    }
+    for (n, block) in [(7, 7), (20, 10), (300, 12)] {
+        put("enumerated-cut", &[("order", n), ("block", block)]);
     }
     for (n, face, rank) in [(8, 3, 1), (20, 4, 2), (50, 7, 3)] {
         put("flat-face", &[("order", n), ("face", face), ("rank", rank)]);
@@ -96,7 +107,7 @@ fn sizes() -> Vec<(&'static str, Vec<(&'static str, Setting)>)> {
 fn the_registry_is_sorted_and_every_family_plants_without_parameters() {
     let ids: Vec<&str> = registry().iter().map(|family| family.card().id).collect();
     assert!(ids.windows(2).all(|pair| pair[0] < pair[1]), "{ids:?}");
-    assert_eq!(ids.len(), 18);
+    assert_eq!(ids.len(), 24);
     for id in ids {
         let planted = plant(id, 1, &[]);
         assert_eq!(planted.certificate.check(&planted.problem).unwrap(), planted.proof);
@@ -138,10 +149,10 @@ fn digests_are_golden_and_certificates_exact() {
     assert_eq!(table.lines().count(), golden.lines().count());
 }
 
-/// Evaluates `<F, V V'>` over all blocks in floats; exact here, since all partial sums are whole and
+/// Evaluates `<F, V V'> + f'x` over all blocks in floats; exact here, since all partial sums are whole and
 /// below 2^53.
-fn value(functional: &Functional, point: &[Factor]) -> f64 {
-    let mut sum = 0.0;
+fn value(functional: &Functional, point: &[Factor], orthant: &[f64]) -> f64 {
+    let mut sum = functional.orthant.iter().map(|(i, entry)| entry * orthant[i]).sum::<f64>();
     for (block, part) in &functional.parts {
         let factor = &point[*block];
         for (i, j, entry) in part.to_sparse().iter() {
@@ -158,9 +169,13 @@ fn planted_points_are_feasible_and_attain_the_optimum() {
         let planted = plant(id, 2, &pairs);
         let problem = &planted.problem;
         for (constraint, rhs) in problem.constraints().iter().zip(problem.rhs()) {
-            assert_eq!(value(constraint, &planted.point), *rhs, "{id}");
+            assert_eq!(value(constraint, &planted.point, &planted.orthant_point), *rhs, "{id}");
         }
-        assert_eq!(value(problem.cost(), &planted.point), planted.optimum, "{id}");
+        assert_eq!(
+            value(problem.cost(), &planted.point, &planted.orthant_point),
+            planted.optimum,
+            "{id}"
+        );
         for (block, factor) in problem.blocks().iter().zip(&planted.point) {
             assert_eq!(factor.order, block.order);
             assert!(block.rank.is_none_or(|rank| factor.width == rank), "{id}");
@@ -170,12 +185,21 @@ fn planted_points_are_feasible_and_attain_the_optimum() {
 
 #[test]
 fn certificates_survive_being_written_and_read() {
-    for (id, pairs) in sizes() {
+    let unproved = ("noisy-signs", vec![("noise", Setting::decimal(2.0))]);
+    for (id, pairs) in sizes().into_iter().chain([unproved]) {
         let planted = plant(id, 3, &pairs);
         let text = serde_json::to_string(&planted.certificate).unwrap();
         let read: Certificate = serde_json::from_str(&text).unwrap();
         assert_eq!(read, planted.certificate, "{id}");
         assert!(text.contains(planted.certificate.kind()));
+        let written = Instance {
+            problem: planted.problem,
+            certificate: Some(planted.certificate),
+            origin: id.to_owned(),
+        };
+        let read = formats::instance::parse(&formats::instance::write(&written), id).unwrap();
+        assert_eq!(read.problem, written.problem, "{id}");
+        assert_eq!(read.certificate, written.certificate, "{id}");
     }
 }
 
@@ -187,6 +211,7 @@ fn what_each_family_promises_is_proved() {
         "ill-scaled",
         "low-width-trap",
         "orthogonal-sync",
+        "radial-feeder",
         "symbol-detection",
         "tight-unique",
         "trust-region",
@@ -219,6 +244,24 @@ fn what_each_family_promises_is_proved() {
             assert_eq!(planted.uniqueness, Uniqueness::NotProved, "{id}");
             assert_eq!(planted.proof.relaxation, RelaxationFact::SameOptimum, "{id}");
         }
+        let planted = plant("clusters", seed, &[]);
+        assert_eq!(planted.certificate.standing(), Standing::Exact);
+        assert_eq!(planted.uniqueness, Uniqueness::Proved);
+        assert_eq!(planted.proof.relaxation, RelaxationFact::SameOptimum);
+        for id in ["phase", "sensing"] {
+            let planted = plant(id, seed, &[]);
+            assert_eq!(planted.certificate.standing(), Standing::Exact);
+            assert_eq!(planted.uniqueness, Uniqueness::Proved, "{id}");
+            let planted = plant(id, seed, &[("objective", word("zero"))]);
+            assert_eq!(planted.proved_optimum(), Some(0.0), "{id}");
+            assert_eq!(planted.uniqueness, Uniqueness::NotProved, "{id}");
+        }
+        let planted = plant("noisy-signs", seed, &[]);
+        assert_eq!(planted.certificate.standing(), Standing::Verified);
+        assert_eq!(planted.uniqueness, Uniqueness::Proved);
+        assert_eq!(planted.proof.relaxation, RelaxationFact::SameOptimum);
+        let planted = plant("enumerated-cut", seed, &[("graph", word("complete"))]);
+        assert_eq!(planted.proof.relaxation, RelaxationFact::StrictlyLower);
         let planted = plant("weak-complementarity", seed, &[]);
         assert_eq!(planted.proof.dual_uniqueness, Uniqueness::Proved);
         let planted = plant("ky-fan-gap", seed, &[]);
@@ -329,7 +372,76 @@ fn corruptions(certificate: &Certificate) -> Vec<(String, Certificate)> {
                 *rank = rank.wrapping_add_signed(s as isize);
             });
         }
+        Certificate::VerifiedPair(pair) => {
+            for (k, factor) in pair.factors.iter().enumerate() {
+                for (field, change) in factor_changes(factor) {
+                    spoil(field, &mut |c, s| change(&mut pick!(VerifiedPair, c).factors[k], s));
+                }
+            }
+            for i in 0..pair.multipliers.len() {
+                spoil(format!("y {i}"), &mut |c, s| pick!(VerifiedPair, c).multipliers[i] += s);
+            }
+            for i in 0..pair.orthant.len() {
+                spoil(format!("x {i}"), &mut |c, s| pick!(VerifiedPair, c).orthant[i] += s);
+                spoil(format!("z {i}"), &mut |c, s| pick!(VerifiedPair, c).orthant_slack[i] += s);
+            }
+        }
+        Certificate::Enumerated(cut) => {
+            for i in 0..cut.signs.len() {
+                spoil(format!("t {i}"), &mut |c, s| pick!(Enumerated, c).signs[i] += s);
+            }
+            for (k, part) in cut.parts.iter().enumerate() {
+                for i in 0..part.vertices.len() {
+                    spoil(format!("vertex {k} {i}"), &mut |c, s| {
+                        let vertex = &mut pick!(Enumerated, c).parts[k].vertices[i];
+                        *vertex = vertex.wrapping_add_signed(s as i32);
+                    });
+                    spoil(format!("gauge {k} {i}"), &mut |c, s| {
+                        pick!(Enumerated, c).parts[k].gauge[i] += s;
+                    });
+                }
+                for e in 0..part.weights.len() {
+                    spoil(format!("weight {k} {e}"), &mut |c, s| {
+                        pick!(Enumerated, c).parts[k].weights[e] += s;
+                    });
+                }
+                spoil(format!("largest cut {k}"), &mut |c, s| {
+                    pick!(Enumerated, c).parts[k].largest_cut += s;
+                });
+            }
+        }
+        Certificate::NoProof(point) => {
+            for (k, factor) in point.factors.iter().enumerate() {
+                for (field, change) in factor_changes(factor) {
+                    spoil(field, &mut |c, s| change(&mut pick!(NoProof, c).factors[k], s));
+                }
+            }
+            for i in 0..point.orthant.len() {
+                spoil(format!("x {i}"), &mut |c, s| pick!(NoProof, c).orthant[i] += s);
+            }
+        }
     }
+    out
+}
+
+type FactorChange = Box<dyn Fn(&mut IntegerFactor, i64)>;
+
+/// Returns a change of every number of a factor by a given step.
+fn factor_changes(factor: &IntegerFactor) -> Vec<(String, FactorChange)> {
+    let mut out: Vec<(String, FactorChange)> = Vec::new();
+    for e in 0..factor.rows.len() {
+        let change = move |copy: &mut IntegerFactor, step: i64| copy.rows[e] += step;
+        out.push((format!("V {e}"), Box::new(change)));
+    }
+    let resize = |size: usize, step: i64| size.wrapping_add_signed(step as isize);
+    out.push((
+        "width".to_owned(),
+        Box::new(move |copy, step| copy.width = resize(copy.width, step)),
+    ));
+    out.push((
+        "order".to_owned(),
+        Box::new(move |copy, step| copy.order = resize(copy.order, step)),
+    ));
     out
 }
 
@@ -378,7 +490,8 @@ fn changed_problems(planted: &Planted) -> Vec<(Change, Problem)> {
     let harmless = |i: usize, (block, row, column): Place| {
         let factor = &planted.point[block];
         let dot: f64 = factor.row(row).iter().zip(factor.row(column)).map(|(a, b)| a * b).sum();
-        let is_pair = matches!(planted.certificate, Certificate::DualPair(_));
+        let kind = &planted.certificate;
+        let is_pair = matches!(kind, Certificate::DualPair(_) | Certificate::VerifiedPair(_));
         is_pair && dot == 0.0 && planted.dual.as_ref().is_some_and(|y| y[i] == 0.0)
     };
     let mut out = Vec::new();
@@ -411,8 +524,12 @@ fn a_change_of_one_unit_anywhere_is_rejected() {
         ("balanced-graph", vec![order(9)]),
         ("balanced-graph", vec![order(9), ("cost", word("adjacency"))]),
         ("clique-cover", vec![order(9), ("cliques", integer(3))]),
+        ("clusters", vec![order(8), ("clusters", integer(2))]),
+        ("clusters", vec![order(8), ("clusters", integer(2)), ("separation", integer(350))]),
         ("distance-completion", vec![order(7)]),
         ("distance-completion", vec![order(8), ("rank", integer(3)), ("extra", integer(2))]),
+        ("enumerated-cut", vec![order(12), ("block", integer(6))]),
+        ("enumerated-cut", vec![order(10), ("graph", word("petersen"))]),
         ("flat-face", vec![order(8), ("face", integer(3)), ("rank", integer(2))]),
         ("frustrated-loops", vec![order(9), ("weight", integer(3))]),
         ("hidden-partition", vec![order(8), ("columns", integer(1))]),
@@ -426,8 +543,17 @@ fn a_change_of_one_unit_anywhere_is_rejected() {
         ("localisation", vec![order(7)]),
         ("localisation", vec![order(8), ("rank", integer(3)), ("extra", integer(2))]),
         ("low-width-trap", vec![order(6)]),
+        ("noisy-signs", vec![order(14)]),
+        ("noisy-signs", vec![order(14), ("model", word("flips")), ("degree", integer(8))]),
         ("orthogonal-sync", vec![order(8), ("rank", integer(2))]),
         ("orthogonal-sync", vec![order(9), ("cost", word("adjacency")), ("degree", integer(2))]),
+        ("phase", vec![order(5)]),
+        ("phase", vec![order(5), ("objective", word("zero"))]),
+        ("radial-feeder", vec![order(9)]),
+        ("radial-feeder", vec![order(9), ("limits", word("active"))]),
+        ("sensing", vec![order(6)]),
+        ("sensing", vec![order(6), ("rank", integer(2)), ("model", word("rank-one"))]),
+        ("sensing", vec![order(6), ("objective", word("zero"))]),
         ("sign-trap", vec![order(8)]),
         ("symbol-detection", vec![order(6)]),
         ("tight-unique", vec![order(7)]),
@@ -451,6 +577,48 @@ fn a_change_of_one_unit_anywhere_is_rejected() {
                 (Err(_), Change::Rejected) => {}
                 (Ok(proof), Change::Harmless) => assert_eq!(proof.optimum, planted.proof.optimum),
                 (found, _) => panic!("{id}: change {position} of the problem gave {found:?}"),
+            }
+        }
+    }
+}
+
+/// Instances that no proof covers say so, and what they state of their point is checked.
+#[test]
+fn instances_without_a_proof_are_labelled_and_their_point_is_checked() {
+    for (id, pairs) in [
+        (
+            "clusters",
+            vec![("order", integer(8)), ("clusters", integer(2)), ("separation", integer(100))],
+        ),
+        ("noisy-signs", vec![("order", integer(20)), ("noise", Setting::decimal(2.0))]),
+        ("phase", vec![("objective", word("trace"))]),
+        ("sensing", vec![("objective", word("trace")), ("rank", integer(2))]),
+    ] {
+        let planted = plant(id, 1, &pairs);
+        assert_eq!(planted.certificate.kind(), "no-proof", "{id}");
+        assert_eq!(planted.certificate.standing(), Standing::Unproved);
+        assert_eq!((planted.proved_optimum(), &planted.dual), (None, &None));
+        assert_eq!(planted.uniqueness, Uniqueness::NotProved);
+        assert_eq!(planted.proof.relaxation, RelaxationFact::NotProved);
+        let found = value(planted.problem.cost(), &planted.point, &planted.orthant_point);
+        assert_eq!(found, planted.optimum, "{id}: the value of the point");
+        for (field, certificate) in corruptions(&planted.certificate) {
+            assert!(certificate.check(&planted.problem).is_err(), "{id}: {field} went through");
+        }
+    }
+}
+
+#[test]
+fn enumerated_cuts_agree_with_enumerating_the_whole() {
+    for seed in 0..6 {
+        for (n, block) in [(9, 9), (16, 8), (15, 5)] {
+            for density in [30, 60, 100] {
+                let pairs = [("order", n), ("block", block), ("density", density)];
+                let pairs = pairs.map(|(name, value)| (name, integer(value)));
+                let planted = plant("enumerated-cut", seed, &pairs);
+                assert_eq!(least_energy(&planted.problem), planted.optimum);
+                let gap = descent(&planted).is_some();
+                assert_eq!(gap, planted.proof.relaxation == RelaxationFact::StrictlyLower);
             }
         }
     }
@@ -641,15 +809,35 @@ fn impossible_parameters_are_refused_with_the_nearest_possible_value() {
         ("clique-cover", vec![n(4), ("cliques", integer(9))], "cliques", 4),
         ("distance-completion", vec![n(4), ("rank", integer(3))], "order", 5),
         ("distance-completion", vec![n(100), ("radius", integer(4))], "radius", 10),
+        ("clusters", vec![n(9), ("clusters", integer(5))], "order", 10),
+        ("clusters", vec![n(16)], "order", 15),
+        ("enumerated-cut", vec![n(13)], "order", 10),
+        (
+            "enumerated-cut",
+            vec![n(26), ("block", integer(11)), ("graph", word("paley"))],
+            "block",
+            13,
+        ),
         ("hidden-partition", vec![n(8), ("columns", integer(7))], "columns", 6),
         ("high-width-trap", vec![n(9)], "order", 8),
         ("ill-scaled", vec![n(6), ("rank", integer(6))], "rank", 5),
         ("localisation", vec![n(3), ("rank", integer(3))], "order", 4),
         ("low-width-trap", vec![n(7)], "order", 6),
         ("low-width-trap", vec![n(10), ("width", integer(3))], "width", 2),
+        ("noisy-signs", vec![n(9), ("model", word("flips")), ("degree", integer(9))], "degree", 8),
         ("orthogonal-sync", vec![n(7)], "order", 6),
         ("orthogonal-sync", vec![n(3)], "order", 6),
         ("orthogonal-sync", vec![n(15), ("degree", integer(9))], "degree", 4),
+        ("phase", vec![n(4), ("measurements", integer(11))], "measurements", 10),
+        ("radial-feeder", vec![n(20)], "order", 19),
+        ("sensing", vec![n(6), ("rank", integer(6))], "rank", 5),
+        (
+            "sensing",
+            vec![n(6), ("rank", integer(3)), ("measurements", integer(5))],
+            "measurements",
+            6,
+        ),
+        ("sensing", vec![n(200), ("measurements", integer(300))], "measurements", 208),
         ("trust-region", vec![n(5), ("case", word("hard")), ("nullity", integer(9))], "nullity", 3),
         (
             "weak-complementarity",

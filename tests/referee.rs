@@ -686,3 +686,88 @@ fn a_sparse_problem_of_order_20000_is_judged_by_its_factor() {
     eprintln!("order {n}: judged with restoration in {:.2} s", start.elapsed().as_secs_f64());
     assert_eq!(judgement.finding, Finding::Near);
 }
+
+/// Scales constraint i by `rows[i]`, the cost by `cost` and X by `point`.
+fn scaled(instance: &Balanced, rows: &[f64], cost: f64, point: f64) -> Problem {
+    let problem = &instance.problem;
+    let times = |functional: &Functional, factor: f64| Functional {
+        parts: functional
+            .parts
+            .iter()
+            .map(|(block, coefficient)| {
+                let sparse = coefficient.to_sparse();
+                let entries = sparse.iter().map(|(i, j, value)| (i, j, factor * value)).collect();
+                let order = problem.blocks()[*block].order;
+                (*block, Coefficient::Sparse(SparseSymmetric::gather(order, entries)))
+            })
+            .collect(),
+        orthant: SparseVector::default(),
+    };
+    let constraints =
+        problem.constraints().iter().zip(rows).map(|(a, row)| times(a, *row)).collect();
+    let rhs = problem.rhs().iter().zip(rows).map(|(b, row)| b * row * point).collect();
+    let blocks = problem.blocks().to_vec();
+    Problem::new(blocks, 0, times(problem.cost(), cost), constraints, rhs).unwrap()
+}
+
+#[test]
+fn relative_figures_do_not_move_with_the_scaling_of_the_data() {
+    let instance = balanced(14, 8);
+    let mut draw = Draw(77);
+    for size in [0.0, 1e-7, 1e-5, 1e-3] {
+        let data: Vec<f64> =
+            instance.signs.iter().map(|t| t * (1.0 + size * draw.unit())).collect();
+        let known = |factor: f64| Known {
+            optimum: KnownOptimum::Certified(factor * instance.optimum),
+            dual: None,
+            unique_point: None,
+        };
+        let tolerance = Tolerance::default();
+        let plain = factor_answer(14, 1, data.clone());
+        let plain = judge(&instance.problem, &plain, &known(1.0), &tolerance).unwrap();
+        // Powers of four for X, so that its factor is scaled by a power of two: nothing is rounded.
+        for (cost, point) in [(1024.0, 1.0), (1.0, 4096.0), (0.125, 1.0 / 1024.0)] {
+            let rows: Vec<f64> = (0..instance.problem.constraints().len())
+                .map(|i| 2f64.powi(i as i32 % 21 - 10))
+                .collect();
+            let problem = scaled(&instance, &rows, cost, point);
+            let factor = point.sqrt();
+            let answer = factor_answer(14, 1, data.iter().map(|x| x * factor).collect());
+            let judged = judge(&problem, &answer, &known(cost * point), &tolerance).unwrap();
+            assert_eq!(judged.finding, plain.finding, "{size} {cost} {point}");
+            assert_eq!(judged.feasibility, plain.feasibility, "{size} {cost} {point}");
+            assert_eq!(judged.objective_error, plain.objective_error, "{size} {cost} {point}");
+            assert_eq!(judged.raw_feasibility, plain.raw_feasibility, "{size} {cost} {point}");
+        }
+    }
+}
+
+#[test]
+fn canonical_figures_are_those_of_their_formulas() {
+    // Two constraints 3 X_11 = 12, 4 X_22 = 4 with cost 2 X_12, order 2: a = (3, 4), x = |(4, 1)|, c = 2 sqrt 2.
+    let entry = |i: usize, j: usize, value: f64| {
+        Functional::on_block(
+            0,
+            Coefficient::Sparse(SparseSymmetric::gather(2, vec![(i, j, value)])),
+        )
+    };
+    let problem = Problem::new(
+        vec![Block { order: 2, rank: Some(1) }],
+        0,
+        entry(0, 1, 2.0),
+        vec![entry(0, 0, 3.0), entry(1, 1, 4.0)],
+        vec![12.0, 4.0],
+    )
+    .unwrap();
+    let known = Known { optimum: KnownOptimum::Certified(-8.0), dual: None, unique_point: None };
+    let (first, second) = (2.0 + 1e-3, -1.0 + 2e-3);
+    let answer = factor_answer(2, 1, vec![first, second]);
+    let judged = judge(&problem, &answer, &known, &Tolerance::default()).unwrap();
+    let unit = 17f64.sqrt();
+    let residual = ((first * first - 4.0).powi(2) + (second * second - 1.0).powi(2)).sqrt();
+    let feasibility = residual / (2.0 * unit);
+    let objective_error = (4.0 * first * second + 8.0).abs() / (8f64.sqrt() * unit + 8.0);
+    let near = |a: Option<f64>, b: f64| (a.unwrap() - b).abs() <= 1e-12 * b;
+    assert!(near(judged.feasibility, feasibility), "{judged:?}");
+    assert!(near(judged.objective_error, objective_error), "{judged:?}");
+}

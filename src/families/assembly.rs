@@ -6,6 +6,7 @@ use std::collections::BTreeMap;
 use super::PlantError;
 use crate::problem::certificate::{
     BlockPair, Certificate, CertificateError, DualPair, IntegerColumn, IntegerFactor, Planted,
+    PlantedPoint, VerifiedPair,
 };
 use crate::problem::{
     Block, Coefficient, Functional, OuterSum, OuterTerm, Problem, SparseSymmetric, SparseVector,
@@ -299,7 +300,7 @@ impl TriangleSum {
     }
 }
 
-/// Makes a problem that a family has put together.
+/// Makes a problem that a family has put together, without a nonnegative part.
 ///
 /// # Errors
 /// A defect of the family.
@@ -309,8 +310,52 @@ pub(super) fn problem(
     constraints: Vec<Functional>,
     rhs: Vec<f64>,
 ) -> Result<Problem, PlantError> {
-    Problem::new(blocks, 0, cost, constraints, rhs)
+    problem_with_orthant(blocks, 0, cost, constraints, rhs)
+}
+
+/// Makes a problem that a family has put together, with `orthant` nonnegative scalars.
+///
+/// # Errors
+/// A defect of the family.
+pub(super) fn problem_with_orthant(
+    blocks: Vec<Block>,
+    orthant: usize,
+    cost: Functional,
+    constraints: Vec<Functional>,
+    rhs: Vec<f64>,
+) -> Result<Problem, PlantError> {
+    Problem::new(blocks, orthant, cost, constraints, rhs)
         .map_err(|error| PlantError::Certificate(CertificateError::Form(error.to_string())))
+}
+
+/// Makes the problem `min <C, X>` subject to `X_ii = 1`, X PSD of rank one.
+///
+/// # Errors
+/// A defect of the family.
+pub(super) fn sign_problem(cost: Coefficient) -> Result<Problem, PlantError> {
+    let order = cost.order();
+    let unit = |i: usize| {
+        let entry = SparseSymmetric::gather(order, vec![(i, i, 1.0)]);
+        Functional::on_block(0, Coefficient::Sparse(entry))
+    };
+    let blocks = vec![Block { order, rank: Some(1) }];
+    let cost = Functional::on_block(0, cost);
+    problem(blocks, cost, (0..order).map(unit).collect(), vec![1.0; order])
+}
+
+/// Proves a pair whose slack is tested in floating point. Where only that test fails, the instance is planted all the
+/// same, without a proof.
+///
+/// # Errors
+/// A defect of the family: any other condition that fails.
+pub(super) fn plant_verified(problem: Problem, pair: VerifiedPair) -> Result<Planted, PlantError> {
+    let point = PlantedPoint { factors: pair.factors.clone(), orthant: pair.orthant.clone() };
+    match Planted::prove(problem.clone(), Certificate::VerifiedPair(pair)) {
+        Err(CertificateError::Definiteness { .. }) => {
+            Ok(Planted::prove(problem, Certificate::NoProof(point))?)
+        }
+        other => Ok(other?),
+    }
 }
 
 /// Returns `X_ii = 1` for i = 0..order.

@@ -1,9 +1,8 @@
 //! What the families of signed cycles share: the gauge and the assembly of cost and certificate.
 
 use super::PlantError;
-use super::assembly::{TriangleSum, problem};
+use super::assembly::{TriangleSum, sign_problem};
 use crate::problem::certificate::{Certificate, Planted, SharedMinimiser, SignedCycle};
-use crate::problem::{Block, Coefficient, Functional, SparseSymmetric};
 use crate::seed::Stream;
 
 /// A frustrated cycle before the gauge: the planted vector satisfies every bond but one.
@@ -44,15 +43,7 @@ pub(super) fn plant_cycles(
         }
         gauged.push(cycle);
     }
-    let constraints = (0..order)
-        .map(|i| {
-            let entry = SparseSymmetric::gather(order, vec![(i, i, 1.0)]);
-            Functional::on_block(0, Coefficient::Sparse(entry))
-        })
-        .collect();
-    let blocks = vec![Block { order, rank: Some(1) }];
-    let cost = Functional::on_block(0, cost.floats()?);
-    let problem = problem(blocks, cost, constraints, vec![1.0; order])?;
+    let problem = sign_problem(cost.floats()?)?;
     let certificate = SharedMinimiser { signs, cycles: gauged };
     Ok(Planted::prove(problem, Certificate::SharedMinimiser(certificate))?)
 }

@@ -3,11 +3,14 @@
 //! A family is one file here, one `mod` line and one line in [`registry`].
 
 mod assembly;
+mod balance;
 mod balanced_graph;
 mod clique_cover;
 mod cliques;
+mod clusters;
 mod cycles;
 mod distance_completion;
+mod enumerated_cut;
 mod face;
 mod flat_face;
 mod frustrated_loops;
@@ -20,7 +23,12 @@ mod ky_fan_gap;
 mod lattice_tiles;
 mod localisation;
 mod low_width_trap;
+mod measuring;
+mod noisy_signs;
 mod orthogonal_sync;
+mod phase;
+mod radial_feeder;
+mod sensing;
 mod sign_trap;
 mod symbol_detection;
 mod tight_unique;
@@ -29,7 +37,9 @@ mod weak_complementarity;
 
 pub use balanced_graph::BalancedGraph;
 pub use clique_cover::CliqueCover;
+pub use clusters::Clusters;
 pub use distance_completion::DistanceCompletion;
+pub use enumerated_cut::EnumeratedCuts;
 pub use flat_face::FlatFace;
 pub use frustrated_loops::FrustratedLoops;
 pub use hidden_partition::HiddenPartition;
@@ -39,7 +49,11 @@ pub use ky_fan_gap::KyFanGap;
 pub use lattice_tiles::LatticeTiles;
 pub use localisation::Localisation;
 pub use low_width_trap::LowWidthTrap;
+pub use noisy_signs::NoisySigns;
 pub use orthogonal_sync::OrthogonalSync;
+pub use phase::Phase;
+pub use radial_feeder::RadialFeeder;
+pub use sensing::Sensing;
 pub use sign_trap::SignTrap;
 pub use symbol_detection::SymbolDetection;
 pub use tight_unique::TightUnique;
@@ -81,7 +95,9 @@ pub fn registry() -> &'static [&'static dyn Family] {
     &[
         &BalancedGraph,
         &CliqueCover,
+        &Clusters,
         &DistanceCompletion,
+        &EnumeratedCuts,
         &FlatFace,
         &FrustratedLoops,
         &HiddenPartition,
@@ -91,7 +107,11 @@ pub fn registry() -> &'static [&'static dyn Family] {
         &LatticeTiles,
         &Localisation,
         &LowWidthTrap,
+        &NoisySigns,
         &OrthogonalSync,
+        &Phase,
+        &RadialFeeder,
+        &Sensing,
         &SignTrap,
         &SymbolDetection,
         &TightUnique,

@@ -1,26 +1,33 @@
 //! Exact certificates: whole numbers from which the optimum of a planted problem is proved.
 //!
 //! A certificate is checked in `i128` with every overflow caught, or in big integers after an
-//! overflow; nothing rounds. The checks read the problem itself, so they hold for the very floats a
+//! overflow; nothing rounds but one definiteness test of [`VerifiedPair`], whose error is bounded. The checks read the problem itself, so they hold for the very floats a
 //! method receives. What is not here: making certificates (that is `families`) and judging points
 //! (that is `referee`).
 //!
 //! Ranks are taken modulo the prime 2^61 - 1. They are lower bounds of the rational ranks, which is
 //! the direction every proof below needs.
 
+mod cholesky;
 mod dual_pair;
 mod entries;
+mod enumerated;
+mod no_proof;
 mod nondegeneracy;
 mod rank_bound;
 mod shared_minimiser;
+mod verified;
 
 use num_bigint::BigInt;
 use serde::{Deserialize, Serialize};
 
 pub use dual_pair::{BlockPair, DualPair, IntegerColumn, IntegerFactor};
+pub use enumerated::{CutPart, EnumeratedCut, LargestCut, MOST_VERTICES, largest_cut};
+pub use no_proof::PlantedPoint;
 pub use nondegeneracy::{compressed_rank, image_rank};
 pub use rank_bound::RankBound;
 pub use shared_minimiser::{SharedMinimiser, SignedCycle};
+pub use verified::VerifiedPair;
 
 use super::exact::{Overflow, Whole, f64_of_i128};
 use super::{Factor, Problem};
@@ -35,6 +42,23 @@ pub enum Certificate {
     SharedMinimiser(SharedMinimiser),
     /// A rank-r point that attains the Ky Fan bound over 0 <= X <= nI.
     RankBound(RankBound),
+    /// A point and multipliers whose slack is proved PSD in floating point with a bound of the error.
+    VerifiedPair(VerifiedPair),
+    /// A direct sum of small cut problems that are enumerated.
+    Enumerated(EnumeratedCut),
+    /// No certificate: a feasible point of which no optimality is proved.
+    NoProof(PlantedPoint),
+}
+
+/// How firmly a certificate proves its optimum.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Standing {
+    /// Everything is proved in whole numbers.
+    Exact,
+    /// Everything is proved, a definiteness in floating point with a bound of its error.
+    Verified,
+    /// The planted point is feasible; its optimality is not proved, the optimum is not known.
+    Unproved,
 }
 
 /// Whether a fact is proved. `NotProved` says nothing of its contrary.
@@ -49,7 +73,7 @@ pub enum Uniqueness {
 /// What a checked certificate proves.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Proof {
-    /// The rank-constrained optimum.
+    /// The rank-constrained optimum; for [`Standing::Unproved`] the value of the planted point, which only bounds it.
     pub optimum: i128,
     /// Whether the planted point is the only optimum of the rank-constrained problem.
     pub uniqueness: Uniqueness,
@@ -119,6 +143,16 @@ pub enum CertificateError {
         /// The number.
         value: String,
     },
+    /// Every identity holds, but the slack is not proved PSD.
+    #[error(
+        "the slack of block {block} is not proved PSD: the factorisation with its error bound stops at column {column}"
+    )]
+    Definiteness {
+        /// The block, from 1.
+        block: usize,
+        /// Where the factorisation stopped, from 1.
+        column: usize,
+    },
     /// A result has no exact float or leaves 128 bits.
     #[error("{what} has no exact 64-bit float")]
     Range {
@@ -183,6 +217,9 @@ impl Certificate {
             Certificate::DualPair(pair) => pair.check(problem),
             Certificate::SharedMinimiser(shared) => shared.check(problem),
             Certificate::RankBound(bound) => bound.check(problem),
+            Certificate::VerifiedPair(pair) => pair.check(problem),
+            Certificate::Enumerated(enumerated) => enumerated.check(problem),
+            Certificate::NoProof(point) => point.check(problem),
         }
     }
 
@@ -192,18 +229,34 @@ impl Certificate {
             Certificate::DualPair(_) => "dual-pair",
             Certificate::SharedMinimiser(_) => "shared-minimiser",
             Certificate::RankBound(_) => "rank-bound",
+            Certificate::VerifiedPair(_) => "verified-pair",
+            Certificate::Enumerated(_) => "enumerated",
+            Certificate::NoProof(_) => "no-proof",
+        }
+    }
+
+    /// Returns how firmly a certificate of this kind proves its optimum once it has been checked.
+    pub fn standing(&self) -> Standing {
+        match self {
+            Certificate::DualPair(_)
+            | Certificate::SharedMinimiser(_)
+            | Certificate::RankBound(_)
+            | Certificate::Enumerated(_) => Standing::Exact,
+            Certificate::VerifiedPair(_) => Standing::Verified,
+            Certificate::NoProof(_) => Standing::Unproved,
         }
     }
 }
 
-/// A problem with a proved rank-constrained optimum. It is made only by [`Planted::prove`].
+/// A problem with a planted point and what is proved of it. It is made only by [`Planted::prove`].
 #[derive(Clone, Debug)]
 pub struct Planted {
     /// The problem.
     pub problem: Problem,
     /// The certificate, checked.
     pub certificate: Certificate,
-    /// The rank-constrained optimum, a whole number.
+    /// The value of the planted point, a whole number: the rank-constrained optimum unless the certificate's standing is
+    /// [`Standing::Unproved`]; see [`Planted::proved_optimum`].
     pub optimum: f64,
     /// The planted point X* = V V' by one factor V a block.
     pub point: Vec<Factor>,
@@ -231,9 +284,19 @@ impl Planted {
             }
             Certificate::SharedMinimiser(shared) => (vec![shared.point()], Vec::new(), None),
             Certificate::RankBound(bound) => (bound.point(), Vec::new(), None),
+            Certificate::VerifiedPair(pair) => {
+                (pair.point()?, floats(&pair.orthant, "x")?, Some(floats(&pair.multipliers, "y")?))
+            }
+            Certificate::Enumerated(enumerated) => (vec![enumerated.point()], Vec::new(), None),
+            Certificate::NoProof(point) => (point.point()?, floats(&point.orthant, "x")?, None),
         };
         let uniqueness = proof.uniqueness;
         Ok(Planted { problem, certificate, optimum, point, orthant_point, uniqueness, dual, proof })
+    }
+
+    /// Returns the rank-constrained optimum where it is proved, and nothing otherwise.
+    pub fn proved_optimum(&self) -> Option<f64> {
+        (self.certificate.standing() != Standing::Unproved).then_some(self.optimum)
     }
 }
 

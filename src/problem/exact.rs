@@ -4,12 +4,14 @@
 //! This module is for proofs, not for speed: nothing here rounds. It does not know problems or
 //! certificates.
 
+mod definite;
 mod modular;
 mod rank;
 
 use num_bigint::BigInt;
 use num_traits::{FromPrimitive, ToPrimitive, Zero};
 
+pub use definite::is_positive_semidefinite;
 pub use modular::{PRIME, add, inverse, multiply, residue, residue_of_f64, subtract};
 pub use rank::{Echelon, ResidueColumns};
 

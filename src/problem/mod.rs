@@ -5,6 +5,7 @@ pub mod canonical;
 pub mod certificate;
 pub mod exact;
 pub mod line;
+pub mod network;
 pub mod operator;
 pub mod pattern;
 pub mod point;

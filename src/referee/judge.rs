@@ -1,6 +1,7 @@
 //! The judgement: measurements and the finding drawn from them.
 
 use super::measure::{self, View};
+use super::units::Units;
 use super::{Finding, Known, KnownOptimum, Tolerance};
 use super::{bound, dimacs, distance, restore, shape, truncate};
 use crate::linalg::compensated::{Accumulator, dot2};
@@ -21,14 +22,14 @@ pub struct Judgement {
     pub reason: String,
     /// `-log10(max(feasibility, objective_error))`, held within 0 and 16; none without a known optimum.
     pub digits: Option<f64>,
-    /// `||A(X_r) - b||_2 / (1 + ||b||_2)` of the truncated point.
+    /// `||A(X_r) - b|| / (1 + ||b||)` of the truncated point in canonical units ([`super`]).
     pub feasibility: Option<f64>,
     /// Least eigenvalue of the untruncated blocks, and least entry of the nonnegative part; a factored
     /// block counts as exactly 0.
     pub min_eigenvalue: Option<f64>,
     /// `<C, X_r>` of the truncated point.
     pub objective: Option<f64>,
-    /// `|<C, X_r> - p*| / (1 + |p*|)`; none without a known optimum.
+    /// `|<C, X_r> - p*| / (1 + |p*|)` in canonical units; none without a known optimum.
     pub objective_error: Option<f64>,
     /// `||X_r - X*||_F / (1 + ||X*||_F)`, when the optimal point is known to be the only one.
     pub distance: Option<f64>,
@@ -83,9 +84,9 @@ pub struct Contradiction {
 /// Judges an answer.
 ///
 /// The finding, with `X_r` the truncated and `X_f` the restored point, "feasible" meaning
-/// `||A(X) - b||_2 <= tolerance.feasibility * (1 + ||b||_2)` and "optimal"
-/// `|<C,X> - p*| <= t (1 + |p*|)`, where t is `tolerance.objective`, or the accuracy of a reported
-/// optimum where that is larger:
+/// `||A(X) - b|| <= tolerance.feasibility * (1 + ||b||)` and "optimal"
+/// `|<C,X> - p*| <= tolerance.objective * (1 + |p*|)`, both in canonical units ([`super`]); a reported optimum
+/// also allows its own inaccuracy, `accuracy * (1 + |p*|)` in the given units:
 ///
 /// - `Malformed`: shapes or numbers cannot be read (beyond 1e100 in magnitude counts as such);
 /// - `Solved`: X_r is feasible and optimal; `Near`: X_f is;
@@ -129,9 +130,9 @@ pub fn judge(
         Ok(truncated) => truncated,
         Err(reason) => return Ok(Judgement::malformed(reason)),
     };
-    let size = 1.0 + norms::euclidean(problem.rhs());
+    let units = Units::of(problem);
     let mut judgement = Judgement::malformed(String::new());
-    judge_untruncated(problem, answer, &truncated, size, &mut judgement);
+    judge_untruncated(problem, answer, &truncated, &units, &mut judgement);
 
     let point = Measured::of(problem, truncated.factors, truncated.orthant);
     let restored = restore::restore(problem, &point.factors, &point.orthant, &point.residual);
@@ -150,7 +151,7 @@ pub fn judge(
     }
     judgement.distance =
         known.unique_point.and_then(|known| finite(distance::relative(&point.factors, known)));
-    conclude(&point, &restored, size, known, tolerance, &mut judgement);
+    conclude(&point, &restored, &units, known, tolerance, &mut judgement);
     if judgement.reason.is_empty() && judgement.finding != Finding::Solved {
         let rank = rank_over(problem, &truncated.spectra, tolerance.rank).unwrap_or(0);
         judgement.reason = format!("rank {rank} at cut-off {:e} before truncation", tolerance.rank);
@@ -163,13 +164,13 @@ fn judge_untruncated(
     problem: &Problem,
     answer: &Answer,
     truncated: &Truncated,
-    size: f64,
+    units: &Units,
     judgement: &mut Judgement,
 ) {
     let view = View::of_point(problem, &answer.point.blocks, &answer.point.orthant);
     let residual = view.residual(problem);
     let objective = view.value(problem.cost());
-    judgement.raw_feasibility = finite(norms::euclidean(&residual) / size);
+    judgement.raw_feasibility = finite(units.feasibility(&residual));
     judgement.raw_objective = finite(objective);
     judgement.min_eigenvalue = finite(truncated.least_eigenvalue);
     if !problem.blocks().is_empty() {
@@ -202,33 +203,34 @@ fn rank_over(problem: &Problem, spectra: &[Vec<f64>], cut: f64) -> Option<usize>
 fn conclude(
     point: &Measured,
     restored: &Measured,
-    size: f64,
+    units: &Units,
     known: &Known<'_>,
     tolerance: &Tolerance,
     judgement: &mut Judgement,
 ) {
     let optimum = match known.optimum {
-        KnownOptimum::Certified(value) => Some((value, tolerance.objective)),
+        KnownOptimum::Certified(value) => Some((value, 0.0)),
         KnownOptimum::Reported { value, accuracy } => {
-            Some((value, tolerance.objective.max(accuracy)))
+            Some((value, accuracy * (1.0 + value.abs()) / units.objective_size(value)))
         }
         KnownOptimum::Unknown => None,
     };
-    let feasibility = norms::euclidean(&point.residual) / size;
-    let restored_feasibility = norms::euclidean(&restored.residual) / size;
+    let feasibility = units.feasibility(&point.residual);
+    let restored_feasibility = units.feasibility(&restored.residual);
     judgement.feasibility = finite(feasibility);
     judgement.objective = finite(point.objective);
     judgement.restored_feasibility = finite(restored_feasibility);
     let feasible = feasibility <= tolerance.feasibility;
     let restorable = restored_feasibility <= tolerance.feasibility;
-    let Some((value, objective_tolerance)) = optimum else {
+    let Some((value, inaccuracy)) = optimum else {
         judgement.finding =
             if feasible || restorable { Finding::Feasible } else { Finding::Infeasible };
         judgement.reason = residual_reason(feasible, restorable, feasibility, restored_feasibility);
         return;
     };
-    let error = (point.objective - value).abs() / (1.0 + value.abs());
-    let restored_error = (restored.objective - value).abs() / (1.0 + value.abs());
+    let objective_tolerance = tolerance.objective.max(inaccuracy);
+    let error = units.objective_error(point.objective, value);
+    let restored_error = units.objective_error(restored.objective, value);
     judgement.objective_error = finite(error);
     judgement.restored_objective_error = finite(restored_error);
     let worst = feasibility.max(error);

@@ -14,6 +14,14 @@
 //! 5. distance, DIMACS errors and a rigorous lower bound where they can be had (`distance`,
 //!    `dimacs`, `bound`);
 //! 6. the finding (`judge`).
+//!
+//! # Canonical units
+//!
+//! Relative figures are stated for the problem with constraint i divided by `a_i = ||A_i||_F`, the cost by
+//! `c = ||C||_F`, and X in units of `x = ||(b_i / a_i)_i||_2` (1 in place of a norm that is 0), so that they do
+//! not move with the scaling of the data. In the given data, `||A(X) - b|| / (1 + ||b||)` then is
+//! `||((<A_i, X> - b_i) / a_i)_i||_2 / (2 x)` (over x alone when b = 0), and `|<C, X> - p*| / (1 + |p*|)` is
+//! `|<C, X> - p*| / (c x + |p*|)`.
 
 mod bound;
 mod dimacs;
@@ -25,6 +33,7 @@ mod shape;
 mod slack;
 mod spectral;
 mod truncate;
+mod units;
 
 pub use bound::lower_bound;
 pub use judge::{Contradicted, Contradiction, Judgement, judge};
@@ -34,9 +43,9 @@ use crate::problem::Factor;
 /// Tolerances of a verdict.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Tolerance {
-    /// `||A(X_r) - b||_2 <= feasibility * (1 + ||b||_2)`.
+    /// `||A(X_r) - b|| <= feasibility * (1 + ||b||)` in canonical units ([`self`]).
     pub feasibility: f64,
-    /// `|<C, X_r> - p*| <= objective * (1 + |p*|)`.
+    /// `|<C, X_r> - p*| <= objective * (1 + |p*|)` in canonical units.
     pub objective: f64,
     /// Eigenvalues above `rank` times the largest count towards the rank.
     pub rank: f64,

@@ -76,6 +76,26 @@ pub struct DualPair {
 }
 
 impl DualPair {
+    /// Makes a pair that states no slack on its blocks, for the checks that need none.
+    pub(super) fn without_slack(
+        factors: &[IntegerFactor],
+        multipliers: &[i64],
+        orthant: &[i64],
+        orthant_slack: &[i64],
+    ) -> Self {
+        let bare = |factor: &IntegerFactor| BlockPair {
+            factor: factor.clone(),
+            slack: Vec::new(),
+            weights: Vec::new(),
+        };
+        DualPair {
+            blocks: factors.iter().map(bare).collect(),
+            multipliers: multipliers.to_vec(),
+            orthant: orthant.to_vec(),
+            orthant_slack: orthant_slack.to_vec(),
+        }
+    }
+
     /// Checks the pair against `problem` exactly; see the module's theorem.
     ///
     /// # Errors
@@ -113,7 +133,7 @@ impl DualPair {
         self.blocks.iter().enumerate().map(convert).collect()
     }
 
-    fn check_shapes(&self, problem: &Problem) -> Result<(), CertificateError> {
+    pub(super) fn check_shapes(&self, problem: &Problem) -> Result<(), CertificateError> {
         expect_size("the list of blocks", problem.blocks().len(), self.blocks.len())?;
         expect_size("y", problem.constraints().len(), self.multipliers.len())?;
         expect_size("x", problem.orthant(), self.orthant.len())?;
@@ -148,7 +168,7 @@ impl DualPair {
         Ok(())
     }
 
-    fn check_signs(&self) -> Result<(), CertificateError> {
+    pub(super) fn check_signs(&self) -> Result<(), CertificateError> {
         let fail = |condition, place: String, value: i64| {
             Err(CertificateError::Condition { condition, place, value: value.to_string() })
         };
@@ -179,6 +199,11 @@ impl DualPair {
             self.check_cost_block::<W>(k, problem)?;
         }
         self.check_cost_orthant::<W>(problem)?;
+        self.value_at_point(problem)
+    }
+
+    /// Checks that the point satisfies every constraint and returns b'y.
+    pub(super) fn value_at_point<W: Whole>(&self, problem: &Problem) -> Result<W, Stop> {
         let mut optimum = W::of(0);
         for (i, constraint) in problem.constraints().iter().enumerate() {
             let place = || format!("constraint {}", i + 1);
@@ -222,7 +247,7 @@ impl DualPair {
     }
 
     /// Checks `c = A_l'y + z`.
-    fn check_cost_orthant<W: Whole>(&self, problem: &Problem) -> Result<(), Stop> {
+    pub(super) fn check_cost_orthant<W: Whole>(&self, problem: &Problem) -> Result<(), Stop> {
         let mut sum = vec![W::of(0); problem.orthant()];
         for (i, &z) in self.orthant_slack.iter().enumerate() {
             sum[i].increase(&W::of(z))?;
@@ -267,7 +292,12 @@ fn check_orthogonality<W: Whole>(k: usize, pair: &BlockPair) -> Result<(), Stop>
     Ok(())
 }
 
-fn unequal<W: Whole>(identity: &'static str, place: String, left: &W, right: &W) -> Stop {
+pub(super) fn unequal<W: Whole>(
+    identity: &'static str,
+    place: String,
+    left: &W,
+    right: &W,
+) -> Stop {
     let (left, right) = (left.to_string(), right.to_string());
     Stop::Fails(CertificateError::Identity { identity, place, left, right })
 }

@@ -86,6 +86,18 @@ impl<W: Whole> EntrySum<W> {
         Ok(())
     }
 
+    /// Returns the upper triangle of the sum, packed by columns: n(n+1)/2 numbers.
+    pub(super) fn packed(self) -> Result<Vec<W>, Stop> {
+        if !self.triangle.is_empty() {
+            return Ok(self.triangle);
+        }
+        let mut packed = vec![W::of(0); self.triangle_size()];
+        for (key, value) in &self.list {
+            packed[*key as usize].increase(value)?;
+        }
+        Ok(packed)
+    }
+
     /// Returns the place and the value of an entry of the sum that is not zero, if there is one.
     pub(super) fn first_nonzero(mut self) -> Result<Option<(usize, usize, W)>, Stop> {
         if !self.triangle.is_empty() {

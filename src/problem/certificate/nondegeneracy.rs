@@ -38,6 +38,12 @@ impl DualPair {
                 return Uniqueness::NotProved;
             }
         }
+        self.face_is_a_point(problem)
+    }
+
+    /// Tests the second condition of primal uniqueness alone: that the map of the module's first item is injective
+    /// with N_k = V_k. It proves uniqueness where range(V_k) is known to be the whole null space of each S*_k.
+    pub(super) fn face_is_a_point(&self, problem: &Problem) -> Uniqueness {
         let starts = offsets(self.blocks.iter().map(|pair| triangle(pair.factor.width)));
         let free = (0..self.orthant.len()).filter(|&j| self.orthant_slack[j] == 0);
         let places = scatter(self.orthant.len(), free);

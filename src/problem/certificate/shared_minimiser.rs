@@ -91,7 +91,7 @@ impl SharedMinimiser {
     /// # Errors
     /// The first identity or condition that fails.
     pub fn check(&self, problem: &Problem) -> Result<Proof, CertificateError> {
-        check_form(problem)?;
+        check_sign_problem(problem)?;
         self.check_parts(problem.blocks()[0].order)?;
         let optimum = settle(self.identities::<i128>(problem), || self.identities(problem))?;
         let statement = format!(
@@ -185,7 +185,7 @@ impl SharedMinimiser {
 }
 
 /// Checks that the problem is one block of rank one with unit diagonal and nothing else.
-fn check_form(problem: &Problem) -> Result<(), CertificateError> {
+pub(super) fn check_sign_problem(problem: &Problem) -> Result<(), CertificateError> {
     let form = |reason: String| Err(CertificateError::Form(reason));
     if problem.blocks().len() != 1 || problem.orthant() != 0 {
         return form("it must have one block and no nonnegative scalar".to_owned());
