@@ -348,8 +348,13 @@ pub struct FamilyCard {
 pub enum MethodClass {
     /// Solves the convex relaxation and truncates.
     Relaxation,
+    /// Solves relaxations again and again with a cost that grows dearer for the eigenvalues beyond the target
+    /// rank.
+    RankPromoting,
     /// Moves along the optimal face of the relaxation to lower rank.
     Reduction,
+    /// Draws points of the target rank from the relaxation's solution.
+    Rounding,
     /// Optimises over X = V V'.
     Factored,
     /// Projects alternately on simple sets.
@@ -365,7 +370,9 @@ impl MethodClass {
     pub fn word(self) -> &'static str {
         match self {
             MethodClass::Relaxation => "relaxation",
+            MethodClass::RankPromoting => "rank promoting",
             MethodClass::Reduction => "reduction",
+            MethodClass::Rounding => "rounding",
             MethodClass::Factored => "factored",
             MethodClass::Projection => "projection",
             MethodClass::ProjectedInteriorPoint => "projected interior point",

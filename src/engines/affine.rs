@@ -1,31 +1,25 @@
 //! Projection onto {A(X) + a(x) = b}, and onto its part with <C, X> + c'x <= gamma, for dense points.
 //!
-//! P(Z) = Z - A*(w) with AA* w = A(Z) - b. AA* is formed and factored for up to 1500 constraints; beyond that
-//! the system is solved by conjugate gradients with the Jacobi preconditioner diag(||A_i||^2), which also
-//! tolerates dependent rows of a consistent system. The intersection with the half-space is projected on in
-//! closed form: with C' = C - A*(h), AA* h = A(C), the nearest point to Z is P(Z), or
-//! P(Z) - t C', t = (<C, P(Z)> - gamma)/||C'||^2, when P(Z) lies beyond.
+//! P(Z) = Z - A*(w) with AA* w = A(Z) - b; `gram` solves with AA*. The intersection with the half-space is projected on
+//! in closed form: with C' = C - A*(h), AA* h = A(C), the nearest point to Z is P(Z), or
+//! P(Z) - t C', t = (<C, P(Z)> - gamma)/||C'||^2, when P(Z) lies beyond. In the same way the minimiser of
+//! <C, X> + ||X - Z||^2/(2 t) on the set is P(Z) - t C'.
 //!
 //! It is for dense points: factors have their own restoration by Newton steps.
 
-use crate::budget::Meter;
-use crate::linalg::cg::{self, CgWorkspace, Diagonal};
-use crate::linalg::eigen::flops;
-use crate::linalg::lanczos::LinearOperator;
-use crate::linalg::vector::{axpy, dot, norm2};
-use crate::linalg::workspace::Workspace;
-use crate::linalg::{Mat, cholesky, dense};
-use crate::problem::{Operator, Problem, Slack};
+pub mod gram;
+pub mod maps;
+mod sparse;
 
-/// Most constraints for which AA* is factored.
-pub const DIRECT_LIMIT: usize = 1500;
-/// Share of the largest diagonal entry of AA* added to its diagonal, so that dependent rows do no harm;
-/// refinement takes its effect out again.
-const SHIFT: f64 = 1e-12;
-/// Refinements of a direct solution.
-const REFINEMENTS: usize = 2;
-/// Conjugate gradients stop at this relative residual.
-const CG_TOLERANCE: f64 = 1e-13;
+use crate::budget::Meter;
+use crate::linalg::vector::{axpy, dot, norm2};
+use crate::linalg::{Mat, dense};
+use crate::problem::{Operator, Problem};
+use gram::GramSolver;
+use maps::{DenseMaps, dense_cost};
+
+pub use gram::DIRECT_LIMIT;
+
 /// A projected cost below this share of the cost counts as zero.
 const CONSTANT_COST: f64 = 1e-10;
 
@@ -57,20 +51,14 @@ pub enum Cut {
 pub struct AffineProjector<'a> {
     op: &'a Operator,
     rhs: &'a [f64],
-    solver: Solver,
+    solver: GramSolver<'a>,
+    maps: DenseMaps<'a>,
     weights: Vec<f64>,
     residual: Vec<f64>,
-    slacks: Vec<Slack>,
-    orthant_slack: Vec<f64>,
     cost: Vec<Mat<f64>>,
     cost_orthant: Vec<f64>,
     cost_square: f64,
     cut: Cut,
-}
-
-enum Solver {
-    Direct { gram: Mat<f64>, factor: Mat<f64>, correction: Vec<f64> },
-    Iterative { diagonal: Diagonal, images: Vec<Mat<f64>>, workspace: CgWorkspace },
 }
 
 impl<'a> AffineProjector<'a> {
@@ -83,40 +71,16 @@ impl<'a> AffineProjector<'a> {
         op: &'a Operator,
         meter: &mut Meter,
     ) -> Result<Self, AffineError> {
-        let m = op.constraints();
-        let zeros =
-            || op.blocks.iter().map(|b| Mat::zeros(b.order, b.order)).collect::<Vec<Mat<f64>>>();
-        let solver = if m <= DIRECT_LIMIT {
-            let gram = gram_matrix(problem, op);
-            let mut factor = gram.clone();
-            let largest = (0..m).fold(f64::MIN_POSITIVE, |s, i| s.max(gram[(i, i)]));
-            for i in 0..m {
-                factor[(i, i)] += SHIFT * largest;
-            }
-            cholesky::factor_in_place(factor.as_mut(), &mut Workspace::new())
-                .map_err(|error| AffineError::NotPositive { constraints: m, pivot: error.index })?;
-            meter.effort.factorisations += 1;
-            meter.effort.flops += flops::cholesky(m);
-            Solver::Direct { gram, factor, correction: vec![0.0; m] }
-        } else {
-            let square = |norm: f64| if norm > 0.0 { 1.0 / (norm * norm) } else { 1.0 };
-            let entries = problem.constraints().iter().map(|a| square(a.norm())).collect();
-            Solver::Iterative {
-                diagonal: Diagonal { entries },
-                images: zeros(),
-                workspace: CgWorkspace::new(),
-            }
-        };
+        let (cost, cost_orthant) = dense_cost(op);
         let mut projector = AffineProjector {
             op,
             rhs: problem.rhs(),
-            solver,
-            weights: vec![0.0; m],
-            residual: vec![0.0; m],
-            slacks: op.blocks.iter().map(|block| block.slack()).collect(),
-            orthant_slack: vec![0.0; problem.orthant()],
-            cost: zeros(),
-            cost_orthant: op.orthant_cost.clone(),
+            solver: GramSolver::new(problem, op, meter)?,
+            maps: DenseMaps::new(op),
+            weights: vec![0.0; op.constraints()],
+            residual: vec![0.0; op.constraints()],
+            cost,
+            cost_orthant,
             cost_square: 0.0,
             cut: Cut::Constant,
         };
@@ -155,18 +119,47 @@ impl<'a> AffineProjector<'a> {
         self.subtract_adjoint(points, x);
         let beyond = self.op.cost_dense(points, x) - gamma;
         if self.cut == Cut::Works && beyond > 0.0 {
-            let t = beyond / self.cost_square;
-            for (point, cost) in points.iter_mut().zip(&self.cost) {
-                dense::axpy_matrix(-t, cost.as_ref(), point.as_mut());
-            }
-            axpy(-t, &self.cost_orthant, x);
+            self.descend(beyond / self.cost_square, points, x);
         }
         self.measure(points, x, meter);
         norm2(&self.residual)
     }
 
+    /// Replaces `points` and `x` by the minimiser of <C, X> + c'x + ||X - Z||^2/(2 t) on the affine set, Z being
+    /// what they hold, and returns ||A(X) + a(x) - b||_2 of the result.
+    #[track_caller]
+    pub fn project_tilted(
+        &mut self,
+        points: &mut [Mat<f64>],
+        x: &mut [f64],
+        t: f64,
+        meter: &mut Meter,
+    ) -> f64 {
+        self.measure(points, x, meter);
+        self.solve(meter);
+        self.subtract_adjoint(points, x);
+        if self.cut == Cut::Works {
+            self.descend(t, points, x);
+        }
+        self.measure(points, x, meter);
+        norm2(&self.residual)
+    }
+
+    /// Returns ||C'||, the norm of the projected cost.
+    pub fn cost_norm(&self) -> f64 {
+        self.cost_square.sqrt()
+    }
+
+    /// Subtracts t C'.
+    fn descend(&self, t: f64, points: &mut [Mat<f64>], x: &mut [f64]) {
+        for (point, cost) in points.iter_mut().zip(&self.cost) {
+            dense::axpy_matrix(-t, cost.as_ref(), point.as_mut());
+        }
+        axpy(-t, &self.cost_orthant, x);
+    }
+
     fn measure(&mut self, points: &[Mat<f64>], x: &[f64], meter: &mut Meter) {
-        self.op.apply_dense(points, x, &mut self.residual);
+        self.maps.apply(points, x, &mut self.residual);
         axpy(-1.0, self.rhs, &mut self.residual);
         meter.effort.operator_products += 1;
         meter.effort.flops +=
@@ -175,66 +168,20 @@ impl<'a> AffineProjector<'a> {
 
     /// Solves AA* w = residual.
     fn solve(&mut self, meter: &mut Meter) {
-        match &mut self.solver {
-            Solver::Direct { gram, factor, correction } => {
-                self.weights.fill(0.0);
-                correction.copy_from_slice(&self.residual);
-                for round in 0..=REFINEMENTS {
-                    cholesky::solve_vector(factor.as_ref(), correction);
-                    axpy(1.0, correction, &mut self.weights);
-                    if round == REFINEMENTS {
-                        break;
-                    }
-                    correction.copy_from_slice(&self.residual);
-                    let product = dense::Accumulate::Add;
-                    dense::gemv(correction, product, -1.0, gram.as_ref(), &self.weights);
-                }
-                let m = self.weights.len() as u64;
-                meter.effort.flops += (REFINEMENTS as u64 + 1) * 4 * m * m;
-            }
-            Solver::Iterative { diagonal, images, workspace } => {
-                let mut product = Product {
-                    op: self.op,
-                    slacks: &mut self.slacks,
-                    images,
-                    x: &mut self.orthant_slack,
-                };
-                self.weights.fill(0.0);
-                let params = cg::Params { tolerance: CG_TOLERANCE, max_steps: 2000 };
-                let info = cg::solve_preconditioned(
-                    &mut product,
-                    diagonal,
-                    &self.residual,
-                    &mut self.weights,
-                    &params,
-                    workspace,
-                );
-                meter.effort.operator_products += 2 * info.steps as u64;
-            }
-        }
+        self.solver.solve(&self.residual, &mut self.weights, meter);
     }
 
     /// Subtracts A*(w).
     fn subtract_adjoint(&mut self, points: &mut [Mat<f64>], x: &mut [f64]) {
-        for (k, block) in self.op.blocks.iter().enumerate() {
-            block.fill_slack(&self.weights, 0.0, &mut self.slacks[k]);
-            block.add_slack_to(&self.slacks[k], 1.0, &mut points[k]);
-        }
-        self.op.orthant_slack(&self.weights, 0.0, &mut self.orthant_slack);
-        axpy(1.0, &self.orthant_slack, x);
+        self.maps.add_adjoint(&self.weights, -1.0, points, x);
     }
 
     /// Computes C' = C - A*(h) with AA* h = A(C).
     fn project_cost(&mut self, problem: &Problem, meter: &mut Meter) {
-        let zero = vec![0.0; self.op.constraints()];
         let mut cost = std::mem::take(&mut self.cost);
         let mut orthant = std::mem::take(&mut self.cost_orthant);
-        for (k, block) in self.op.blocks.iter().enumerate() {
-            block.fill_slack(&zero, 1.0, &mut self.slacks[k]);
-            block.add_slack_to(&self.slacks[k], 1.0, &mut cost[k]);
-        }
         for _ in 0..2 {
-            self.op.apply_dense(&cost, &orthant, &mut self.residual);
+            self.maps.apply(&cost, &orthant, &mut self.residual);
             self.solve(meter);
             self.subtract_adjoint(&mut cost, &mut orthant);
         }
@@ -247,95 +194,6 @@ impl<'a> AffineProjector<'a> {
         self.cost = cost;
         self.cost_orthant = orthant;
     }
-}
-
-/// w -> A(A*(w)), by way of dense images.
-struct Product<'a, 'b> {
-    op: &'a Operator,
-    slacks: &'b mut [Slack],
-    images: &'b mut [Mat<f64>],
-    x: &'b mut [f64],
-}
-
-impl LinearOperator for Product<'_, '_> {
-    fn order(&self) -> usize {
-        self.op.constraints()
-    }
-
-    fn apply(&mut self, w: &[f64], out: &mut [f64]) {
-        for (k, block) in self.op.blocks.iter().enumerate() {
-            block.fill_slack(w, 0.0, &mut self.slacks[k]);
-            self.images[k].fill(0.0);
-            block.add_slack_to(&self.slacks[k], -1.0, &mut self.images[k]);
-        }
-        self.op.orthant_slack(w, 0.0, self.x);
-        self.x.iter_mut().for_each(|value| *value = -*value);
-        self.op.apply_dense(self.images, self.x, out);
-    }
-}
-
-/// Forms AA*, both triangles: inner products of all constraints.
-fn gram_matrix(problem: &Problem, op: &Operator) -> Mat<f64> {
-    let m = op.constraints();
-    let mut gram = Mat::zeros(m, m);
-    for block in &op.blocks {
-        // 1. Sparse with sparse: constraints that share a place, sorted by place.
-        let entries = &block.entries;
-        let mut places: Vec<(u32, u32, u32, f64)> = Vec::with_capacity(entries.values.len());
-        for (g, &id) in entries.ids.iter().enumerate() {
-            places.extend(
-                entries
-                    .range(g)
-                    .map(|k| (entries.columns[k], entries.rows[k], id, entries.values[k])),
-            );
-        }
-        places.sort_by_key(|place| (place.0, place.1, place.2));
-        for same in places.chunk_by(|a, b| (a.0, a.1) == (b.0, b.1)) {
-            let weight = if same[0].0 == same[0].1 { 1.0 } else { 2.0 };
-            for a in same {
-                for b in same {
-                    gram[(a.2 as usize, b.2 as usize)] += weight * a.3 * b.3;
-                }
-            }
-        }
-        // 2. Long outer products with each other and with the sparse parts.
-        let Some(outer) = &block.outer else { continue };
-        let count = outer.ids.len();
-        for k in 0..count {
-            let a = outer.vectors.col_as_slice(k);
-            let id = outer.ids[k] as usize;
-            for l in 0..count {
-                let inner = dot(a, outer.vectors.col_as_slice(l));
-                gram[(id, outer.ids[l] as usize)] +=
-                    outer.weights[k] * outer.weights[l] * inner * inner;
-            }
-            for (g, &other) in entries.ids.iter().enumerate() {
-                let sum: f64 = entries
-                    .range(g)
-                    .map(|e| {
-                        let (i, j) = (entries.rows[e] as usize, entries.columns[e] as usize);
-                        let value = entries.values[e] * a[i] * a[j];
-                        if i == j { value } else { 2.0 * value }
-                    })
-                    .sum();
-                gram[(id, other as usize)] += outer.weights[k] * sum;
-                gram[(other as usize, id)] += outer.weights[k] * sum;
-            }
-        }
-    }
-    // 3. The nonnegative part.
-    let mut columns: Vec<Vec<(usize, f64)>> = vec![Vec::new(); problem.orthant()];
-    for (id, row) in op.orthant_rows.iter().enumerate() {
-        row.iter().for_each(|(index, a)| columns[index].push((id, a)));
-    }
-    for column in columns {
-        for &(i, a) in &column {
-            for &(j, b) in &column {
-                gram[(i, j)] += a * b;
-            }
-        }
-    }
-    gram
 }
 
 #[cfg(test)]
@@ -453,13 +311,7 @@ mod tests {
         dependent.project(&mut found.0, &mut found.1, &mut meter);
         let change = minus(&found, &expected);
         assert!(inner(&change, &change).sqrt() < 1e-8);
-        dependent.solver = Solver::Iterative {
-            diagonal: Diagonal {
-                entries: doubled.constraints().iter().map(|a| 1.0 / a.norm().powi(2)).collect(),
-            },
-            images: op.blocks.iter().map(|b| Mat::zeros(b.order, b.order)).collect(),
-            workspace: CgWorkspace::new(),
-        };
+        dependent.solver = GramSolver::iterative(&doubled, &op_doubled);
         let mut found = start;
         dependent.project(&mut found.0, &mut found.1, &mut meter);
         let change = minus(&found, &expected);

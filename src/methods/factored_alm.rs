@@ -3,7 +3,7 @@
 use super::{Method, Trial};
 use crate::budget::Halt;
 use crate::card::{DefaultSetting, Kind, MethodCard, MethodClass, Setting, SettingSpec};
-use crate::engines::alm::{AlmError, AlmInfo, AlmParams, Finish, Lift, solve};
+use crate::engines::alm::{AlmError, AlmInfo, AlmParams, Finish, Lift, Schedule, solve};
 use crate::problem::{Answer, BlockPoint, Operator, Point, Problem};
 
 /// The method.
@@ -57,14 +57,15 @@ projections), 16 times as many at width 1.",
         },
         SettingSpec {
             name: "lift",
-            kind: Kind::Word(&["when-needed", "never"]),
+            kind: Kind::Word(&["when-needed", "one-by-one", "never"]),
             default: DefaultSetting::Word("when-needed"),
             meaning: "Whether wider factors help on the way. General constraints: after an uncertified first \
 start the width doubles up to the bound until certified, and each wide point is truncated to its leading columns \
 and solved again at the width. Fixed \
 diagonal: the first descent is at width max(3, width + 1, within the bound), doubled with the escape vector of \
 S as a new column until certified, then brought down to the width by leading columns and random projections \
-with rows normalised, and polished. `never` works at the width alone.",
+with rows normalised, and polished. `one-by-one` lifts as `when-needed` does, but widens by one column at a time in the \
+place of doubling. `never` works at the width alone.",
         },
     ],
 };
@@ -82,6 +83,9 @@ impl Method for FactoredAlm {
             "never" => Lift::Never,
             _ => Lift::WhenNeeded,
         };
+        if trial.options.word("lift") == "one-by-one" {
+            params.schedule = Schedule::One;
+        }
         params.finish = Finish::Newton;
         let solution =
             solve(problem, &op, &params, &mut trial.stream, &mut trial.meter).map_err(|error| {

@@ -234,7 +234,7 @@ fn attempt(
     trial: &mut Trial,
 ) -> Result<Attempt, Halt> {
     let mut hook = TailWeight::new(problem.blocks(), params, first);
-    let ipm_params = ipm::Params { tolerance: 1e-9, max_iterations: 200 };
+    let ipm_params = ipm::Params { max_iterations: 200, ..ipm::Params::default() };
     let solution = ipm::solve(problem, &ipm_params, Some(&mut hook), &mut trial.meter)?;
     finish(problem, op, solution, hook.info.steered, trial)
 }

@@ -5,13 +5,30 @@
 //! point or the certificate.
 
 pub mod alternating_projections;
+pub mod complementarity_penalty;
+pub mod convex_iteration;
+pub mod douglas_rachford;
 pub mod factored_alm;
 pub mod factored_newton;
+pub mod gaussian_rounding;
+pub mod hyperplane_rounding;
 pub mod ipm_tail_weight;
+pub mod iterative_rank_minimisation;
+pub mod ky_fan_dc;
+pub mod log_det;
+pub mod newton_projections;
 pub mod outside;
+pub mod rank_admm;
 pub mod reduce_both_ends;
+pub mod reduce_gaussian;
 pub mod reduce_largest;
+pub mod reduce_random;
+pub mod reduce_tail;
+pub mod relax_admm;
 pub mod relax_ipm;
+pub mod reweighted_trace;
+pub mod singular_value_projection;
+pub mod staircase;
 
 use crate::budget::{Halt, Meter};
 use crate::card::{MethodCard, Settings};
@@ -45,12 +62,29 @@ pub trait Method: Sync {
 pub fn registry() -> &'static [&'static dyn Method] {
     &[
         &alternating_projections::AlternatingProjections,
+        &complementarity_penalty::ComplementarityPenalty,
+        &convex_iteration::ConvexIteration,
+        &douglas_rachford::DouglasRachford,
         &factored_alm::FactoredAlm,
         &factored_newton::FactoredNewton,
+        &gaussian_rounding::GaussianRounding,
+        &hyperplane_rounding::HyperplaneRounding,
         &ipm_tail_weight::IpmTailWeight,
+        &iterative_rank_minimisation::IterativeRankMinimisation,
+        &ky_fan_dc::KyFanDc,
+        &log_det::LogDet,
+        &newton_projections::NewtonProjections,
+        &rank_admm::RankAdmm,
         &reduce_both_ends::ReduceBothEnds,
+        &reduce_gaussian::ReduceGaussian,
         &reduce_largest::ReduceLargest,
+        &reduce_random::ReduceRandom,
+        &reduce_tail::ReduceTail,
+        &relax_admm::RelaxAdmm,
         &relax_ipm::RelaxIpm,
+        &reweighted_trace::ReweightedTrace,
+        &singular_value_projection::SingularValueProjection,
+        &staircase::Staircase,
     ]
 }
 

@@ -1,7 +1,9 @@
-//! The loops: limited-memory BFGS with the exact line search inside, multipliers and penalty outside.
+//! The loops: limited-memory BFGS (or [`super::truncated`] Newton steps) with the exact line search inside, multipliers
+//! and penalty outside.
 
 use super::lagrangian::Lagrangian;
 use super::quartic::least_step;
+use super::truncated::{self, TruncatedWorkspace};
 use crate::budget::{Halt, Meter, TracePoint};
 use crate::engines::lbfgs::Lbfgs;
 use crate::linalg::vector::{dot, norm2};
@@ -27,6 +29,15 @@ pub const INNER_LIMITS: usize = 3;
 /// Residual and cost are recomputed from their definitions after this many updates.
 pub const REFRESH_EVERY: usize = 64;
 
+/// What minimises the augmented Lagrangian at fixed multipliers and penalty.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum InnerSolver {
+    /// Limited-memory BFGS.
+    Lbfgs,
+    /// Truncated Newton steps.
+    Newton,
+}
+
 /// Settings of the loops.
 #[derive(Clone, Copy, Debug)]
 pub struct DescentParams {
@@ -40,6 +51,8 @@ pub struct DescentParams {
     pub inner: usize,
     /// Pairs of the quasi-Newton memory.
     pub pairs: usize,
+    /// Inner solver.
+    pub solver: InnerSolver,
 }
 
 /// How a descent ended.
@@ -76,6 +89,7 @@ pub struct DescentWorkspace {
     memory: Lbfgs,
     direction: Vec<f64>,
     old_gradient: Vec<f64>,
+    newton: Option<TruncatedWorkspace>,
 }
 
 impl DescentWorkspace {
@@ -85,13 +99,14 @@ impl DescentWorkspace {
             memory: Lbfgs::new(length, pairs),
             direction: vec![0.0; length],
             old_gradient: vec![0.0; length],
+            newton: None,
         }
     }
 }
 
 /// Why the inner loop ended.
 #[derive(Clone, Debug, PartialEq)]
-enum InnerEnd {
+pub(super) enum InnerEnd {
     Converged,
     Limit,
     Diverged,
@@ -182,7 +197,13 @@ pub fn descend(
     };
     while info.outer < params.outer {
         info.outer += 1;
-        let end = minimise(l, tolerance, params.inner, ws, meter, &mut info.inner);
+        let end = match params.solver {
+            InnerSolver::Lbfgs => minimise(l, tolerance, params.inner, ws, meter, &mut info.inner),
+            InnerSolver::Newton => {
+                let newton = ws.newton.get_or_insert_with(|| TruncatedWorkspace::new(l));
+                truncated::minimise(l, tolerance, params.inner, newton, meter, &mut info.inner)
+            }
+        };
         let violation = norm2(&l.residual);
         info.stationarity = norm2(&l.gradient) / (1.0 + norm2(&l.z));
         info.feasibility = violation / right;

@@ -4,7 +4,7 @@ use super::certificate::{Certificate, CertificateParams, certify};
 use super::descent::{DescentEnd, DescentParams, DescentWorkspace, descend};
 use super::lagrangian::Lagrangian;
 use super::start::{principal, random, resized};
-use super::{AlmError, AlmInfo, AlmParams, AlmSolution, Finish, Lift, finish_info, stop_of};
+use super::{AlmError, AlmInfo, AlmParams, AlmSolution, Finish, Lift, Start, finish_info, stop_of};
 use crate::budget::{Halt, Meter};
 use crate::engines::newton::{NewtonEnd, NewtonParams, polish};
 use crate::linalg::vector::norm2;
@@ -17,7 +17,7 @@ const HAND_OVER: f64 = 1e-5;
 /// one that violates the constraints, and no step leads on.
 const PROMISING: f64 = 1e-3;
 /// A point is feasible for the choice between points when its residual is at most this.
-const FEASIBLE: f64 = 1e-7;
+pub(super) const FEASIBLE: f64 = 1e-7;
 /// A wide point that is not finished is truncated at once when the eigenvalues dropped are at most this share of
 /// the trace.
 const LOW_SHARE: f64 = 0.1;
@@ -26,20 +26,20 @@ const ESCAPES: usize = 4;
 
 /// A point with everything the choice between points needs.
 #[derive(Clone, Debug)]
-struct Candidate {
-    factors: Vec<Factor>,
-    orthant: Vec<f64>,
-    y: Vec<f64>,
-    objective: f64,
-    feasibility: f64,
+pub(super) struct Candidate {
+    pub(super) factors: Vec<Factor>,
+    pub(super) orthant: Vec<f64>,
+    pub(super) y: Vec<f64>,
+    pub(super) objective: f64,
+    pub(super) feasibility: f64,
     converged: bool,
     /// Penalty at the end of the descent.
-    sigma: f64,
+    pub(super) sigma: f64,
 }
 
 impl Candidate {
     /// Feasible before infeasible, then the lower objective, or the smaller residual.
-    fn better_than(&self, other: &Candidate) -> bool {
+    pub(super) fn better_than(&self, other: &Candidate) -> bool {
         match (self.feasibility <= FEASIBLE, other.feasibility <= FEASIBLE) {
             (true, true) => self.objective < other.objective,
             (true, false) => true,
@@ -50,17 +50,17 @@ impl Candidate {
 }
 
 /// The run: problem, settings and budget in one place.
-struct Run<'a, 'm> {
-    problem: &'a Problem,
-    op: &'a Operator,
-    params: &'a AlmParams,
-    meter: &'m mut Meter,
-    halt: Option<Halt>,
-    best: Option<Candidate>,
+pub(super) struct Run<'a, 'm> {
+    pub(super) problem: &'a Problem,
+    pub(super) op: &'a Operator,
+    pub(super) params: &'a AlmParams,
+    pub(super) meter: &'m mut Meter,
+    pub(super) halt: Option<Halt>,
+    pub(super) best: Option<Candidate>,
     /// Best bound met, with the multipliers that gave it.
     bound: Option<(f64, Vec<f64>)>,
     starts: usize,
-    widest: usize,
+    pub(super) widest: usize,
 }
 
 /// Solves a problem by the augmented Lagrangian.
@@ -71,11 +71,8 @@ pub fn solve(
     stream: &mut Stream,
     meter: &mut Meter,
 ) -> Result<AlmSolution, AlmError> {
-    let widest = params.widths.iter().copied().max().unwrap_or(0);
-    let mut run =
-        Run { problem, op, params, meter, halt: None, best: None, bound: None, starts: 0, widest };
+    let mut run = Run::new(problem, op, params, meter);
     // 1. One random start at the widths asked for.
-    run.starts = 1;
     let mut certified = run.start_randomly(&params.widths, stream);
     // 2. A lift: solve wider, truncate, solve again.
     if !certified && run.halt.is_none() && params.lift == Lift::WhenNeeded {
@@ -87,6 +84,37 @@ pub fn solve(
         certified = run.start_randomly(&params.widths, stream);
     }
     run.answer()
+}
+
+/// Descends from a given point at the widths of its factors.
+pub fn refine(
+    problem: &Problem,
+    op: &Operator,
+    start: &Start<'_>,
+    params: &AlmParams,
+    meter: &mut Meter,
+) -> Result<AlmSolution, AlmError> {
+    let widths: Vec<usize> = start.factors.iter().map(|factor| factor.width).collect();
+    let mut run = Run::new(problem, op, params, meter);
+    run.widest = widths.iter().copied().max().unwrap_or(0);
+    let mut l = Lagrangian::new(problem, op, &widths);
+    l.import(start.factors, start.orthant, start.multipliers);
+    l.sigma = super::descent::FIRST_SIGMA;
+    run.best = run.descend(l);
+    run.answer()
+}
+
+impl<'a, 'm> Run<'a, 'm> {
+    /// Begins a run with nothing found; it will make one start at least.
+    pub(super) fn new(
+        problem: &'a Problem,
+        op: &'a Operator,
+        params: &'a AlmParams,
+        meter: &'m mut Meter,
+    ) -> Self {
+        let widest = params.widths.iter().copied().max().unwrap_or(0);
+        Run { problem, op, params, meter, halt: None, best: None, bound: None, starts: 1, widest }
+    }
 }
 
 impl Run<'_, '_> {
@@ -109,6 +137,7 @@ impl Run<'_, '_> {
             outer: p.outer,
             inner: p.inner,
             pairs: p.pairs,
+            solver: p.solver,
         }
     }
 
@@ -125,7 +154,7 @@ impl Run<'_, '_> {
     }
 
     /// Descends from a loaded Lagrangian, finishes by Newton steps.
-    fn descend(&mut self, mut l: Lagrangian<'_>) -> Option<Candidate> {
+    pub(super) fn descend(&mut self, mut l: Lagrangian<'_>) -> Option<Candidate> {
         let p = self.params;
         let loose = p.finish == Finish::Newton;
         let mut params = self.descent_params(if loose { HAND_OVER } else { 0.0 });
@@ -184,7 +213,7 @@ impl Run<'_, '_> {
         }
     }
 
-    fn certify(&mut self, c: &Candidate) -> Certificate {
+    pub(super) fn certify(&mut self, c: &Candidate) -> Certificate {
         let settings = CertificateParams::default();
         let (problem, op) = (self.problem, self.op);
         let found = certify(problem, op, &c.factors, &c.orthant, &c.y, &settings, self.meter);
@@ -239,7 +268,7 @@ impl Run<'_, '_> {
 
     /// Moves along the escape vector, put into the smallest principal column of its block when that column is
     /// negligible, and descends.
-    fn escape(
+    pub(super) fn escape(
         &mut self,
         c: &Candidate,
         block: usize,
@@ -274,7 +303,7 @@ impl Run<'_, '_> {
         loop {
             let before = widths.clone();
             for (k, width) in widths.iter_mut().enumerate() {
-                *width = (2 * *width).max(*width + 1).min(limits[k]).max(*width);
+                *width = self.params.schedule.next(*width).min(limits[k]).max(*width);
             }
             if widths == before || self.halt.is_some() {
                 return false;
@@ -341,7 +370,7 @@ impl Run<'_, '_> {
     }
 
     /// Makes the answer from the best point.
-    fn answer(mut self) -> Result<AlmSolution, AlmError> {
+    pub(super) fn answer(mut self) -> Result<AlmSolution, AlmError> {
         let Some(best) = self.best.take() else {
             return Err(match self.halt.take() {
                 Some(halt) => AlmError::Halted(halt),

@@ -238,9 +238,53 @@ impl<'a> Lagrangian<'a> {
         self.cost += a * self.line_cost.0 + a * a * self.line_cost.1;
     }
 
+    /// Computes `out = H d`, H being the Hessian at the last gradient: `(2 S D + 2 sigma A*(J d) R, 2 s o d + 2 sigma
+    /// a*(J d) o u)`. `adjoint` holds one slack a block and `image` a vector of the length of z; both are scratch. It
+    /// calls [`Self::line`].
+    pub fn hessian_times(
+        &mut self,
+        d: &[f64],
+        adjoint: &mut [Slack],
+        image: &mut [f64],
+        out: &mut [f64],
+    ) {
+        self.line(d);
+        for i in 0..self.first.len() {
+            self.weights[i] = -self.sigma * self.scaling.rows[i] * self.first[i];
+        }
+        for (k, block) in self.op.blocks.iter().enumerate() {
+            block.fill_slack(&self.weights, 0.0, &mut adjoint[k]);
+            let range = self.layout.ranges[k].clone();
+            let width = self.layout.shapes[k].1;
+            let (target, image) = (&mut out[range.clone()], &mut image[range.clone()]);
+            let scratch = &mut self.scratch[k];
+            block.slack_rows(&self.slacks[k], &d[range.clone()], width, scratch, target);
+            block.slack_rows(&adjoint[k], &self.z[range], width, scratch, image);
+            axpy(1.0, image, target);
+            scale(2.0, target);
+        }
+        self.op.orthant_slack(&self.weights, 0.0, &mut self.squares);
+        for (j, place) in self.layout.orthant.clone().enumerate() {
+            let both = self.orthant_slack[j] * d[place] + self.squares[j] * self.z[place];
+            out[place] = 2.0 * both;
+        }
+    }
+
+    /// Makes one empty slack a block, for [`Self::hessian_times`].
+    pub fn empty_slacks(&self) -> Vec<Slack> {
+        self.op.blocks.iter().map(|block| block.slack()).collect()
+    }
+
     /// Returns p1 = J d of the last [`Self::line`], scaled.
     pub fn first(&self) -> &[f64] {
         &self.first
+    }
+
+    /// Sets the multipliers to `factor` times p1 of the last [`Self::line`].
+    pub fn take_first_as_multipliers(&mut self, factor: f64) {
+        for (y, p) in self.y.iter_mut().zip(&self.first) {
+            *y = factor * p;
+        }
     }
 
     /// Returns the scaled slack of block k at the last gradient.

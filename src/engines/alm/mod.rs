@@ -10,9 +10,12 @@ pub mod certificate;
 pub mod descent;
 mod general;
 pub mod lagrangian;
+pub mod pivoted;
 pub mod quartic;
 pub mod spheres;
+pub mod staircase;
 pub mod start;
+mod truncated;
 
 #[cfg(test)]
 pub(crate) mod tests;
@@ -22,7 +25,9 @@ use crate::linalg::vector::{distance, dot, norm2};
 use crate::problem::{Factor, Operator, Problem, StopReason};
 use crate::seed::Stream;
 use certificate::{Certificate, CertificateParams, certify};
-use spheres::Whole;
+pub use descent::InnerSolver;
+use spheres::cost::{SphereBlock, recognise};
+use spheres::{BlockOutcome, Whole};
 
 /// Whether the engine may work at a greater width for a while.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -40,6 +45,25 @@ pub enum Finish {
     Newton,
     /// It does not; the augmented Lagrangian iterates to the end.
     Plain,
+}
+
+/// How widths grow.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Schedule {
+    /// Twofold.
+    Double,
+    /// By one column.
+    One,
+}
+
+impl Schedule {
+    /// Returns the width after `width`.
+    pub fn next(self, width: usize) -> usize {
+        match self {
+            Schedule::Double => (2 * width).max(width + 1),
+            Schedule::One => width + 1,
+        }
+    }
 }
 
 /// Settings of the engine.
@@ -66,6 +90,10 @@ pub struct AlmParams {
     pub inner: usize,
     /// Pairs of the quasi-Newton memory.
     pub pairs: usize,
+    /// Inner solver of the general path; the path with unit rows has its own.
+    pub solver: InnerSolver,
+    /// How the width grows.
+    pub schedule: Schedule,
 }
 
 impl AlmParams {
@@ -82,6 +110,8 @@ impl AlmParams {
             outer: 60,
             inner: 2000,
             pairs: 8,
+            solver: InnerSolver::Lbfgs,
+            schedule: Schedule::Double,
         }
     }
 }
@@ -145,19 +175,53 @@ pub fn solve(
     meter: &mut Meter,
 ) -> Result<AlmSolution, AlmError> {
     assert_eq!(params.widths.len(), problem.blocks().len(), "one width a block");
-    match spheres::cost::recognise(problem, &op.blocks) {
-        Some(blocks) => solve_spheres(problem, op, &blocks, params, stream, meter),
+    match recognise(problem, &op.blocks) {
+        Some(blocks) => by_blocks(problem, op, &blocks, |k, whole| {
+            let (operator, width) = (&op.blocks[k], params.widths[k]);
+            spheres::solve_block(&blocks[k], operator, width, whole, params, stream, meter)
+        }),
         None => general::solve(problem, op, params, stream, meter),
     }
 }
 
-fn solve_spheres(
+/// Descends from a given point at the widths of its factors, without random starts, lift or escapes.
+///
+/// # Errors
+/// As [`solve`].
+pub fn refine(
     problem: &Problem,
     op: &Operator,
-    blocks: &[spheres::cost::SphereBlock],
+    start: &Start<'_>,
     params: &AlmParams,
     stream: &mut Stream,
     meter: &mut Meter,
+) -> Result<AlmSolution, AlmError> {
+    match recognise(problem, &op.blocks) {
+        Some(blocks) => by_blocks(problem, op, &blocks, |k, whole| {
+            let (operator, factor) = (&op.blocks[k], &start.factors[k]);
+            spheres::refine_block(&blocks[k], operator, factor, whole, params, stream, meter)
+        }),
+        None => general::refine(problem, op, start, params, meter),
+    }
+}
+
+/// A point to start from.
+#[derive(Clone, Copy, Debug)]
+pub struct Start<'a> {
+    /// One factor a block.
+    pub factors: &'a [Factor],
+    /// Nonnegative part.
+    pub orthant: &'a [f64],
+    /// Multipliers, zero when unknown; unit rows need none.
+    pub multipliers: &'a [f64],
+}
+
+/// Puts the outcomes of independent blocks with unit rows together.
+fn by_blocks(
+    problem: &Problem,
+    op: &Operator,
+    blocks: &[SphereBlock],
+    mut outcome_of: impl FnMut(usize, Whole) -> BlockOutcome,
 ) -> Result<AlmSolution, AlmError> {
     let mut factors = Vec::new();
     let mut multipliers = vec![0.0; op.constraints()];
@@ -172,9 +236,8 @@ fn solve_spheres(
     };
     let mut least = Some(f64::INFINITY);
     let whole = if blocks.len() == 1 { Whole::Yes } else { Whole::No };
-    for (k, block) in blocks.iter().enumerate() {
-        let (operator, width) = (&op.blocks[k], params.widths[k]);
-        let outcome = spheres::solve_block(block, operator, width, whole, params, stream, meter);
+    for k in 0..blocks.len() {
+        let outcome = outcome_of(k, whole);
         for (id, value) in outcome.multipliers {
             multipliers[id] = value;
         }
@@ -203,8 +266,11 @@ fn solve_spheres(
     Ok(AlmSolution { factors, orthant: Vec::new(), multipliers, info })
 }
 
-/// Turns a halt into the stop reason of an answer that exists; an interruption stays an error.
-fn stop_of(halt: &Halt) -> Result<StopReason, Halt> {
+/// Turns a halt into the stop reason of an answer that exists.
+///
+/// # Errors
+/// The halt itself, when it is no limit but an interruption, say.
+pub fn stop_of(halt: &Halt) -> Result<StopReason, Halt> {
     match halt {
         Halt::TimeLimit => Ok(StopReason::TimeLimit),
         Halt::MemoryLimit => Ok(StopReason::MemoryLimit),

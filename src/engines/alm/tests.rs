@@ -386,3 +386,92 @@ fn a_time_limit_still_gives_a_point() {
     assert!(solution.info.feasibility < 1e-12, "unit rows are feasible");
     assert!(solution.info.certificate.is_none());
 }
+
+/// The products with the Hessian, against differences of gradients (Richardson's rule leaves nothing: the gradient is cubic).
+#[test]
+fn hessian_products_are_difference_quotients_of_the_gradient() {
+    let (problem, _, _) = mixed("hessian");
+    let op = Operator::new(&problem);
+    let mut l = loaded(&problem, &op, &[3, 2], "hessian-point");
+    let mut draw = stream("hessian-direction");
+    let d: Vec<f64> = (0..l.z.len()).map(|_| draw.normal()).collect();
+    let base = l.z.clone();
+    let gradient_at = |t: f64, l: &mut Lagrangian<'_>| {
+        l.z.copy_from_slice(&base);
+        axpy(t, &d, &mut l.z);
+        l.refresh();
+        l.compute_gradient();
+        l.gradient.clone()
+    };
+    let h = 1e-2;
+    let points: Vec<Vec<f64>> =
+        [2.0 * h, -2.0 * h, h, -h].iter().map(|t| gradient_at(*t, &mut l)).collect();
+    gradient_at(0.0, &mut l);
+    let (mut adjoint, mut image) = (l.empty_slacks(), vec![0.0; d.len()]);
+    let mut product = vec![0.0; d.len()];
+    l.hessian_times(&d, &mut adjoint, &mut image, &mut product);
+    let size = norm2(&product);
+    for (i, value) in product.iter().enumerate() {
+        let coarse = (points[0][i] - points[1][i]) / (4.0 * h);
+        let fine = (points[2][i] - points[3][i]) / (2.0 * h);
+        let quotient = (4.0 * fine - coarse) / 3.0;
+        assert!((value - quotient).abs() < 1e-9 * (1.0 + size), "{i}: {value} {quotient}");
+    }
+    // The form agrees with the quartic of the line.
+    let q = l.line(&d);
+    assert!((dot(&d, &product) - 2.0 * q[1]).abs() < 1e-11 * (1.0 + q[1].abs()));
+}
+
+/// Both inner solvers reach the closed form of the 5-cycle (n/2)(1 + cos(pi/n)); Newton in fewer inner steps.
+#[test]
+fn truncated_newton_steps_reach_the_same_optimum_in_fewer_steps() {
+    let problem = with_trace_row(&max_cut(5, &cycle(5)));
+    let value = 2.5 * (1.0 + (std::f64::consts::PI / 5.0).cos());
+    let op = Operator::new(&problem);
+    let mut steps = Vec::new();
+    for solver in [InnerSolver::Lbfgs, InnerSolver::Newton] {
+        let mut params = AlmParams::with_widths(vec![3]);
+        params.solver = solver;
+        params.finish = Finish::Plain;
+        params.lift = Lift::Never;
+        let mut meter = Meter::unlimited();
+        let solution = solve(&problem, &op, &params, &mut stream("inner"), &mut meter).unwrap();
+        let info = &solution.info;
+        assert!((-info.objective - value).abs() < 1e-7, "{solver:?}: {info:?}");
+        assert!(info.certificate.as_ref().unwrap().gap < 1e-6, "{solver:?}: {info:?}");
+        steps.push(meter.effort.inner_steps);
+    }
+    assert!(steps[1] < steps[0], "{steps:?}");
+}
+
+/// Started within 1e-6 of a saddle with a small gradient, truncated Newton steps leave it along negative curvature.
+#[test]
+fn truncated_newton_steps_leave_a_saddle() {
+    let (problem, v) = trap();
+    let problem = with_trace_row(&problem);
+    let op = Operator::new(&problem);
+    let mut y = vec![300.0; 6];
+    y.push(0.0);
+    // [V, 0] at width 3 is a saddle: C - 300 I has the eigenvector 1 of value -300.
+    let mut l = Lagrangian::new(&problem, &op, &[3]);
+    l.import(&[start::resized(&v, 3)], &[], &y);
+    let place = l.layout.ranges[0].start;
+    (0..6).for_each(|i| l.z[place + 3 * i + 2] += 1e-6);
+    l.sigma = descent::FIRST_SIGMA;
+    let params = descent::DescentParams {
+        feasibility: 1e-9,
+        stationarity: 1e-9,
+        outer: 60,
+        inner: 200,
+        pairs: 8,
+        solver: InnerSolver::Newton,
+    };
+    let mut ws = descent::DescentWorkspace::new(l.layout.length(), 8);
+    let mut meter = Meter::unlimited();
+    let info = descent::descend(&problem, &mut l, &params, &mut ws, &mut meter);
+    assert!(info.inner > 0, "{info:?}");
+    // The start was feasible, so that the outer loop has no better residual to go by and leaves the multipliers; the
+    // direction is what counts here: all rows are parallel, as in the optimum, and the cost is near 0.
+    let objective = l.cost * l.scaling.variable / l.scaling.cost;
+    assert!(objective.abs() < 1e-4, "{objective}, the trap has 1800");
+}

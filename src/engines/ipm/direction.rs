@@ -1,6 +1,9 @@
 //! Newton system of one iteration: right sides, multipliers, directions and step lengths.
 
-use super::iterate::{BlockState, add_product_by_entries, add_scaled, inner, slack_times_dense};
+use super::iterate::{
+    BlockState, add_product_by_entries, add_scaled, fill_full, inner, slack_times_dense,
+};
+use super::nt::scaled_or;
 use super::schur::SchurPlan;
 use crate::budget::Effort;
 use crate::linalg::cholesky;
@@ -9,7 +12,7 @@ use crate::linalg::eigen::flops;
 use crate::linalg::vector::{dot, norm2};
 use crate::linalg::workspace::Workspace;
 use crate::linalg::{Mat, MatRef};
-use crate::problem::{BlockOperator, Operator, Slack, SlackStore};
+use crate::problem::{BlockOperator, Operator, SlackStore};
 
 /// The iterate, its residuals and all workspace of the loop, in scaled data.
 #[derive(Debug)]
@@ -52,9 +55,9 @@ pub(super) struct Reach {
 }
 
 impl State {
-    pub fn new(op: Operator, b: Vec<f64>, blocks: Vec<BlockState>, xi: f64, eta: f64) -> Self {
+    /// Takes the memory; the iterate is set by `Run::begin`.
+    pub fn new(op: Operator, b: Vec<f64>, blocks: Vec<BlockState>, orthant: usize) -> Self {
         let m = b.len();
-        let orthant = op.orthant_cost.len();
         let by_entries = op.blocks.iter().map(single_entries_are_cheaper).collect();
         State {
             plan: SchurPlan::new(&op, orthant),
@@ -71,8 +74,8 @@ impl State {
             perturbed: false,
             reach_calls: 0,
             y: vec![0.0; m],
-            x: vec![xi; orthant],
-            z: vec![eta; orthant],
+            x: vec![0.0; orthant],
+            z: vec![0.0; orthant],
             dx: vec![0.0; orthant],
             dz: vec![0.0; orthant],
             rdz: vec![0.0; orthant],
@@ -127,14 +130,27 @@ impl State {
     /// Forms and factors the Schur complement; false when it cannot be factored even perturbed.
     pub fn factor_schur(&mut self, effort: &mut Effort) -> bool {
         for state in &mut self.blocks {
-            state.invert_s(&mut self.ws);
-            effort.flops += flops::inverse_from_factor(state.order);
+            match &mut state.nt {
+                Some(nt) => {
+                    if !nt.update(&state.x, &state.ls) {
+                        return false;
+                    }
+                    effort.eigendecompositions += 1;
+                    effort.flops += nt.flops_update();
+                }
+                None => {
+                    state.invert_s(&mut self.ws);
+                    effort.flops += flops::inverse_from_factor(state.order);
+                }
+            }
         }
         for ((ratio, x), z) in self.ratios.iter_mut().zip(&self.x).zip(&self.z) {
             *ratio = x / z;
         }
-        let points: Vec<&Mat<f64>> = self.blocks.iter().map(|state| &state.x).collect();
-        let inverses: Vec<&Mat<f64>> = self.blocks.iter().map(|state| &state.si).collect();
+        let points: Vec<&Mat<f64>> =
+            self.blocks.iter().map(|state| scaled_or(&state.nt, &state.x)).collect();
+        let inverses: Vec<&Mat<f64>> =
+            self.blocks.iter().map(|state| scaled_or(&state.nt, &state.si)).collect();
         self.plan.form(&self.op, &points, &inverses, &self.ratios, &mut self.schur);
         dense::mirror_lower(self.schur.as_mut());
         effort.flops += self.plan.flops + flops::cholesky(self.b.len());
@@ -195,7 +211,8 @@ impl State {
             return;
         }
         for (index, state) in self.blocks.iter_mut().enumerate() {
-            slack_times_dense(&state.rd, &state.x, Accumulate::Replace, &mut state.t);
+            let left = scaled_or(&state.nt, &state.x);
+            slack_times_dense(&state.rd, left, Accumulate::Replace, &mut state.t);
             let block = &self.op.blocks[index];
             add_product(block, state, self.by_entries[index], 1.0, &mut self.base);
         }
@@ -211,8 +228,9 @@ impl State {
         self.solve_schur();
         self.dual_directions();
         for state in &mut self.blocks {
-            slack_times_dense(&state.ds, &state.x, Accumulate::Replace, &mut state.t);
-            close_direction(state, 0.0);
+            let left = scaled_or(&state.nt, &state.x);
+            slack_times_dense(&state.ds, left, Accumulate::Replace, &mut state.t);
+            close_direction(state);
         }
         for j in 0..self.x.len() {
             self.dx[j] = -self.x[j] - self.ratios[j] * self.dz[j];
@@ -226,13 +244,23 @@ impl State {
         for index in 0..self.blocks.len() {
             let block = &self.op.blocks[index];
             let state = &mut self.blocks[index];
+            let (target, share) = match &mut state.nt {
+                Some(nt) => {
+                    nt.second_order(&state.dx, &state.ds, sigma_mu);
+                    effort.flops += nt.flops_second_order();
+                    (&nt.second, 1.0)
+                }
+                None => (&state.si, sigma_mu),
+            };
             self.image.fill(0.0);
-            block.add_dense(state.si.as_ref(), &mut self.image);
+            block.add_dense(target.as_ref(), &mut self.image);
             for (value, image) in self.rhs.iter_mut().zip(&self.image) {
-                *value -= sigma_mu * image;
+                *value -= share * image;
             }
-            slack_times_dense(&state.ds, &state.dx, Accumulate::Replace, &mut state.t);
-            add_product(block, state, self.by_entries[index], 1.0, &mut self.rhs);
+            if state.nt.is_none() {
+                slack_times_dense(&state.ds, &state.dx, Accumulate::Replace, &mut state.t);
+                add_product(block, state, self.by_entries[index], 1.0, &mut self.rhs);
+            }
         }
         for j in 0..self.x.len() {
             self.second[j] = (sigma_mu - self.dx[j] * self.dz[j]) / self.z[j];
@@ -244,8 +272,16 @@ impl State {
         self.solve_schur();
         self.dual_directions();
         for state in &mut self.blocks {
-            slack_times_dense(&state.ds, &state.x, Accumulate::Add, &mut state.t);
-            close_direction(state, sigma_mu);
+            // Of HKM, T holds the second-order product already.
+            let beta = if state.nt.is_some() { Accumulate::Replace } else { Accumulate::Add };
+            let left = scaled_or(&state.nt, &state.x);
+            slack_times_dense(&state.ds, left, beta, &mut state.t);
+            close_direction(state);
+            let (target, share) = match &state.nt {
+                Some(nt) => (&nt.second, 1.0),
+                None => (&state.si, sigma_mu),
+            };
+            dense::axpy_matrix(share, target.as_ref(), state.dx.as_mut());
         }
         for j in 0..self.x.len() {
             self.dx[j] = self.second[j] - self.x[j] - self.ratios[j] * self.dz[j];
@@ -276,9 +312,10 @@ impl State {
             for (block, state) in self.op.blocks.iter().zip(&mut self.blocks) {
                 fill_full(block, &self.dy, 0.0, &mut state.rd, &mut state.outer_scratch);
                 add_scaled(1.0, &state.rd, &mut state.ds);
-                slack_times_dense(&state.rd, &state.x, Accumulate::Replace, &mut state.t);
-                let t = state.t.transpose();
-                dense::gemm(state.p.as_mut(), Accumulate::Replace, -1.0, t, state.si.as_ref());
+                let left = scaled_or(&state.nt, &state.x);
+                slack_times_dense(&state.rd, left, Accumulate::Replace, &mut state.t);
+                let (t, right) = (state.t.transpose(), scaled_or(&state.nt, &state.si));
+                dense::gemm(state.p.as_mut(), Accumulate::Replace, -1.0, t, right.as_ref());
                 dense::symmetrise(state.p.as_mut());
                 dense::axpy_matrix(1.0, state.p.as_ref(), state.dx.as_mut());
             }
@@ -399,46 +436,16 @@ impl State {
     }
 }
 
-/// Fills a slack with `cost_scale C - A*(y)`, long outer products multiplied into a dense store.
-pub(super) fn fill_full(
-    block: &BlockOperator,
-    y: &[f64],
-    cost_scale: f64,
-    slack: &mut Slack,
-    scratch: &mut Mat<f64>,
-) {
-    block.fill_slack(y, cost_scale, slack);
-    let Some(outer) = &block.outer else { return };
-    if let SlackStore::Dense(matrix) = &mut slack.store {
-        for (k, weight) in slack.outer_weights.iter_mut().enumerate() {
-            let target = scratch.col_as_slice_mut(k);
-            for (value, source) in target.iter_mut().zip(outer.vectors.col_as_slice(k)) {
-                *value = *weight * source;
-            }
-            *weight = 0.0;
-        }
-        let vectors_t = outer.vectors.transpose();
-        dense::gemm(matrix.as_mut(), Accumulate::Add, 1.0, scratch.as_ref(), vectors_t);
-    }
+/// Sets dX = -X - sym(T' S^-1), with W in the place of S^-1 for the NT direction.
+fn close_direction(state: &mut BlockState) {
+    let right = scaled_or(&state.nt, &state.si);
+    let (t, dx) = (state.t.transpose(), &mut state.dx);
+    dense::gemm(dx.as_mut(), Accumulate::Replace, -1.0, t, right.as_ref());
+    dense::symmetrise(dx.as_mut());
+    dense::axpy_matrix(-1.0, state.x.as_ref(), dx.as_mut());
 }
 
-/// Sets dX = -X + sigma_mu S^-1 - sym(T' S^-1).
-fn close_direction(state: &mut BlockState, sigma_mu: f64) {
-    dense::gemm(
-        state.dx.as_mut(),
-        Accumulate::Replace,
-        -1.0,
-        state.t.transpose(),
-        state.si.as_ref(),
-    );
-    dense::symmetrise(state.dx.as_mut());
-    dense::axpy_matrix(-1.0, state.x.as_ref(), state.dx.as_mut());
-    if sigma_mu != 0.0 {
-        dense::axpy_matrix(sigma_mu, state.si.as_ref(), state.dx.as_mut());
-    }
-}
-
-/// Adds `scale * <A_i, T' S^-1>` to `out[i]`.
+/// Adds `scale * <A_i, T' S^-1>` to `out[i]`, with W in the place of S^-1 for the NT direction.
 fn add_product(
     block: &BlockOperator,
     state: &mut BlockState,
@@ -446,12 +453,13 @@ fn add_product(
     scale: f64,
     out: &mut [f64],
 ) {
+    let right = scaled_or(&state.nt, &state.si);
     if by_entries {
-        add_product_by_entries(block, &state.t, &state.si, scale, out);
+        add_product_by_entries(block, &state.t, right, scale, out);
         return;
     }
     let t: MatRef<'_, f64> = state.t.transpose();
-    dense::gemm(state.p.as_mut(), Accumulate::Replace, scale, t, state.si.as_ref());
+    dense::gemm(state.p.as_mut(), Accumulate::Replace, scale, t, right.as_ref());
     dense::symmetrise(state.p.as_mut());
     block.add_dense(state.p.as_ref(), out);
 }

@@ -1,5 +1,7 @@
 //! One block of the iterate with its factors, and the operations on slacks that the loop needs.
 
+use super::NewtonDirection;
+use super::nt::NtScaling;
 use crate::linalg::cholesky;
 use crate::linalg::dense::{self, Accumulate};
 use crate::linalg::eigen::SymmetricEigen;
@@ -34,6 +36,8 @@ pub(super) struct BlockState {
     pub p: Mat<f64>,
     /// Extra cost, when a hook steers.
     pub weight: Option<Mat<f64>>,
+    /// Scaling point and factors of the NT direction; none for HKM.
+    pub nt: Option<NtScaling>,
     /// Work for long outer products, order x count.
     pub outer_scratch: Mat<f64>,
     eigen: Option<SymmetricEigen>,
@@ -42,19 +46,14 @@ pub(super) struct BlockState {
 }
 
 impl BlockState {
-    pub fn new(block: &BlockOperator, xi: f64, eta: f64) -> Self {
+    /// Takes the memory of one block; [`Self::set_multiples`] makes it an iterate.
+    pub fn new(block: &BlockOperator, newton: NewtonDirection) -> Self {
         let n = block.order;
-        let mut s = block.slack();
-        fill_identity(&mut s, eta);
         let zero = || Mat::zeros(n, n);
-        let mut x = zero();
-        for i in 0..n {
-            x[(i, i)] = xi;
-        }
         BlockState {
             order: n,
-            x,
-            s,
+            x: zero(),
+            s: block.slack(),
             lx: zero(),
             ls: zero(),
             si: zero(),
@@ -64,11 +63,23 @@ impl BlockState {
             t: zero(),
             p: zero(),
             weight: None,
+            nt: (newton == NewtonDirection::Nt).then(|| NtScaling::new(n)),
             outer_scratch: Mat::zeros(n, block.outer.as_ref().map_or(0, |outer| outer.ids.len())),
             eigen: (n <= DENSE_STEP_ORDER).then(|| SymmetricEigen::new(n)),
             lanczos: LanczosWorkspace::new(),
             vector: vec![0.0; n],
         }
+    }
+
+    /// Sets X = xi I and S = eta I, and factors both.
+    pub fn set_multiples(&mut self, xi: f64, eta: f64, ws: &mut Workspace) {
+        self.x.fill(0.0);
+        for i in 0..self.order {
+            self.x[(i, i)] = xi;
+        }
+        fill_identity(&mut self.s, eta);
+        self.factor_x(ws);
+        self.factor_s(ws);
     }
 
     /// Factors X; false when it is not positive definite in floating point.
@@ -181,6 +192,42 @@ pub(super) fn norm_squared(s: &Slack) -> f64 {
             .zip(values)
             .map(|((i, j), value)| if i == j { value * value } else { 2.0 * value * value })
             .sum(),
+    }
+}
+
+/// Fills a slack with `cost_scale C - A*(y)`, long outer products multiplied into a dense store.
+pub(super) fn fill_full(
+    block: &BlockOperator,
+    y: &[f64],
+    cost_scale: f64,
+    slack: &mut Slack,
+    scratch: &mut Mat<f64>,
+) {
+    block.fill_slack(y, cost_scale, slack);
+    let Some(outer) = &block.outer else { return };
+    if let SlackStore::Dense(matrix) = &mut slack.store {
+        for (k, weight) in slack.outer_weights.iter_mut().enumerate() {
+            let target = scratch.col_as_slice_mut(k);
+            for (value, source) in target.iter_mut().zip(outer.vectors.col_as_slice(k)) {
+                *value = *weight * source;
+            }
+            *weight = 0.0;
+        }
+        let vectors_t = outer.vectors.transpose();
+        dense::gemm(matrix.as_mut(), Accumulate::Add, 1.0, scratch.as_ref(), vectors_t);
+    }
+}
+
+/// Copies one slack onto another of the same storage.
+pub(super) fn copy_slack(from: &Slack, to: &mut Slack) {
+    match (&from.store, &mut to.store) {
+        (SlackStore::Dense(a), SlackStore::Dense(b)) => {
+            dense::copy_into(a.as_ref(), b.as_mut());
+        }
+        (SlackStore::Sparse { values: a, .. }, SlackStore::Sparse { values: b, .. }) => {
+            b.copy_from_slice(a);
+        }
+        _ => unreachable!("slacks of one block share their storage"),
     }
 }
 

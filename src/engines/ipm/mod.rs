@@ -1,9 +1,9 @@
-//! Infeasible primal-dual predictor-corrector interior-point method for the relaxation (HKM
+//! Infeasible primal-dual predictor-corrector interior-point method for the relaxation (HKM or NT
 //! direction), with several PSD blocks and a nonnegative part.
 //!
-//! Direction: Helmberg, Rendl, Vanderbei, Wolkowicz, SIAM J. Optim. 6:342-361 (1996); Kojima,
+//! HKM: Helmberg, Rendl, Vanderbei, Wolkowicz, SIAM J. Optim. 6:342-361 (1996); Kojima,
 //! Shindoh, Hara, SIAM J. Optim. 7:86-125 (1997); Monteiro, SIAM J. Optim. 7:663-678 (1997).
-//! Predictor-corrector and its step and centring rules after Mehrotra, SIAM J. Optim. 2:575-601
+//! NT: see the module `nt`. Predictor-corrector and its step and centring rules after Mehrotra, SIAM J. Optim. 2:575-601
 //! (1992) and Tutuncu, Toh, Todd, Math. Program. 95:189-217 (2003); the constants are the ones in
 //! this module's code, recalled from the literature and not copied from a text.
 //!
@@ -13,14 +13,23 @@
 //!
 //! Every constraint is scaled to unit norm, and C and b to norm at most one, before the loop; all
 //! results are given in the units of the caller.
+//!
+//! [`solve`] is one run. A [`Session`] solves one problem again and again with another extra cost, with the
+//! compiled operator, the scaling, the plan of the Schur complement and all workspace kept.
 
 mod direction;
+mod ending;
 mod iterate;
-mod scaling;
+mod ladder;
+mod nt;
+pub mod scaling;
 mod schur;
+mod session;
 mod solve;
+mod start;
 pub mod tail;
 
+pub use session::{Beginning, Session};
 pub use solve::solve;
 
 use crate::linalg::Mat;
@@ -35,11 +44,23 @@ pub struct Params {
     pub tolerance: f64,
     /// Most iterations.
     pub max_iterations: usize,
+    /// Newton direction.
+    pub newton: NewtonDirection,
+}
+
+/// How the complementarity equation is linearised.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum NewtonDirection {
+    /// Helmberg-Rendl-Vanderbei-Wolkowicz, Kojima-Shindoh-Hara, Monteiro: cheapest.
+    Hkm,
+    /// Nesterov-Todd: one eigendecomposition and eleven products of a block more an iteration. Where no
+    /// strictly feasible X exists it stalls earlier than HKM (SDPLIB gpp100: at a relative gap of 1e-5).
+    Nt,
 }
 
 impl Default for Params {
     fn default() -> Self {
-        Params { tolerance: 1e-9, max_iterations: 100 }
+        Params { tolerance: 1e-9, max_iterations: 100, newton: NewtonDirection::Hkm }
     }
 }
 

@@ -5,7 +5,7 @@ use crate::problem::{Coefficient, Functional, OuterSum, Problem, SparseSymmetric
 
 /// Factors between the caller's units and the engine's.
 #[derive(Clone, Debug)]
-pub(super) struct Scaling {
+pub struct Scaling {
     /// Norm each constraint was divided by.
     pub rows: Vec<f64>,
     /// What the right side was divided by; X is divided by it too.

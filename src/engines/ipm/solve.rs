@@ -1,9 +1,12 @@
 //! The loop: start, residuals, stopping, predictor, centring, corrector, step.
 
 use super::direction::{Reach, State};
-use super::iterate::{BlockState, fill_identity, norm_squared, write_dense};
+use super::ending::Best;
+use super::iterate::{BlockState, norm_squared, write_dense};
+use super::ladder::Ladder;
 use super::scaling::Scaling;
-use super::{Hook, Info, Outcome, Params, Residuals, Solution, Steer, Steering};
+use super::start::Start;
+use super::{Hook, Info, NewtonDirection, Outcome, Params, Residuals, Solution, Steer, Steering};
 use crate::budget::{Halt, Meter, TracePoint};
 use crate::linalg::Mat;
 use crate::linalg::dense;
@@ -11,33 +14,19 @@ use crate::linalg::vector::{dot, norm2};
 use crate::problem::operator::Storage;
 use crate::problem::{Operator, Problem, SlackStore};
 
-/// Relative size below which a certificate of infeasibility is believed.
-const INFEASIBLE: f64 = 1e-8;
 /// Steps below this end the loop.
 const TINY_STEP: f64 = 1e-7;
 /// Residuals of a direction below this share of `1 + ||b||` are not refined.
 const REFINE_BELOW: f64 = 1e-13;
-/// Iterations without a better iterate that end the loop.
-const PATIENCE: usize = 12;
-
-/// A saved iterate.
-struct Best {
-    worst: f64,
-    at: usize,
-    residuals: Residuals,
-    points: Vec<Mat<f64>>,
-    slacks: Vec<crate::problem::Slack>,
-    x: Vec<f64>,
-    z: Vec<f64>,
-    y: Vec<f64>,
-}
-
 /// Figures of the current iterate.
 #[derive(Clone, Copy, Debug)]
-struct Figures {
-    residuals: Residuals,
-    primal: f64,
-    dual: f64,
+pub(super) struct Figures {
+    pub residuals: Residuals,
+    /// Value of the weighted cost.
+    pub primal: f64,
+    pub dual: f64,
+    /// Value of the cost alone.
+    pub value: f64,
 }
 
 /// Solves the relaxation of `problem`; rank bounds are ignored.
@@ -54,103 +43,84 @@ pub fn solve(
     hook: Option<&mut dyn Hook>,
     meter: &mut Meter,
 ) -> Result<Solution, Halt> {
-    let (scaled, scaling) = Scaling::scale(problem);
-    meter.check_room(memory_bytes(problem))?;
+    meter.check_room(memory_bytes(problem, params.newton))?;
     let storage = if hook.is_some() { Storage::Dense } else { Storage::Automatic };
-    let op = Operator::with_storage(&scaled, storage);
-    let (state, start) = start(&scaled, op);
-    let mut run = Run {
-        scaled: &scaled,
-        scaling: &scaling,
-        b_norm: norm2(scaled.rhs()),
-        c_norm: scaled.cost().norm(),
-        state,
-        start,
-        best: None,
-        steps: Reach { primal: 0.0, dual: 0.0 },
-    };
+    let mut run = Run::new(problem, storage, params.newton);
     if hook.is_some() {
         for block in &mut run.state.blocks {
             block.weight = Some(Mat::zeros(block.order, block.order));
         }
     }
-    run.iterate(params, hook, meter)
+    run.begin();
+    let (outcome, iterations) = run.iterate(params, hook, meter)?;
+    Ok(run.into_solution(outcome, iterations, params))
 }
 
-fn memory_bytes(problem: &Problem) -> u64 {
+/// Counts the bytes of the matrices of a run.
+pub(super) fn memory_bytes(problem: &Problem, newton: NewtonDirection) -> u64 {
     let m = problem.rhs().len() as u64;
     let blocks: u64 = problem.blocks().iter().map(|b| (b.order as u64).pow(2)).sum();
-    8 * (2 * m * m + 9 * blocks)
+    let squares = if newton == NewtonDirection::Nt { 18 } else { 9 };
+    8 * (2 * m * m + squares * blocks)
 }
 
-/// Sizes of the starting point, kept to recognise divergence.
-#[derive(Clone, Copy, Debug)]
-struct Start {
-    x_norm: f64,
-    s_norm: f64,
-}
-
-fn start(problem: &Problem, op: Operator) -> (State, Start) {
-    let b = problem.rhs().to_vec();
-    let block_norm = |functional: &crate::problem::Functional, index: usize| {
-        functional.part(index).map_or(0.0, crate::problem::Coefficient::norm)
-    };
-    let mut blocks = Vec::new();
-    let mut start = Start { x_norm: 0.0, s_norm: 0.0 };
-    for (index, block) in op.blocks.iter().enumerate() {
-        let n = block.order as f64;
-        let mut xi: f64 = 10.0_f64.max(n.sqrt());
-        let mut eta: f64 = 10.0_f64.max(n.sqrt()).max(1.0 + block_norm(problem.cost(), index));
-        for (functional, b) in problem.constraints().iter().zip(&b) {
-            let norm = block_norm(functional, index);
-            if norm > 0.0 {
-                xi = xi.max(n * (1.0 + b.abs()) / (1.0 + norm));
-                eta = eta.max(1.0 + norm);
-            }
-        }
-        start.x_norm += xi * n;
-        start.s_norm += eta * n;
-        blocks.push(BlockState::new(block, xi, eta));
-    }
-    let size = problem.orthant() as f64;
-    let row_norm = |row: &crate::problem::SparseVector| norm2(&row.values);
-    let mut xi: f64 = 10.0_f64.max(size.sqrt());
-    let mut eta: f64 = 10.0_f64.max(size.sqrt()).max(1.0 + norm2(&op.orthant_cost));
-    for (row, b) in op.orthant_rows.iter().zip(&b) {
-        if !row.is_empty() {
-            xi = xi.max(size.sqrt() * (1.0 + b.abs()) / (1.0 + row_norm(row)));
-            eta = eta.max(1.0 + row_norm(row));
-        }
-    }
-    start.x_norm += xi * size;
-    start.s_norm += eta * size;
-    let mut state = State::new(op, b, blocks, xi, eta);
-    for block in &mut state.blocks {
-        block.factor_x(&mut state.ws);
-        block.factor_s(&mut state.ws);
-    }
-    (state, start)
-}
-
-struct Run<'a> {
-    scaled: &'a Problem,
-    scaling: &'a Scaling,
-    b_norm: f64,
-    c_norm: f64,
-    state: State,
-    start: Start,
-    best: Option<Best>,
+/// The loop with everything it holds, in scaled data.
+#[derive(Debug)]
+pub(super) struct Run {
+    pub scaling: Scaling,
+    pub b_norm: f64,
+    /// Norm of the cost, with its weight when the weight is set from outside.
+    pub c_norm: f64,
+    pub state: State,
+    pub start: Start,
+    pub best: Option<Best>,
+    /// Iterates to start later runs from; none unless a session asks for them.
+    pub ladder: Option<Ladder>,
     /// Steps of the last iteration.
     steps: Reach,
 }
 
-impl Run<'_> {
-    fn iterate(
-        mut self,
+impl Run {
+    /// Scales a problem and takes the memory.
+    pub(super) fn new(problem: &Problem, storage: Storage, newton: NewtonDirection) -> Self {
+        let (scaled, scaling) = Scaling::scale(problem);
+        let op = Operator::with_storage(&scaled, storage);
+        let start = Start::of(&scaled, &op);
+        let blocks = op.blocks.iter().map(|block| BlockState::new(block, newton)).collect();
+        let state = State::new(op, scaled.rhs().to_vec(), blocks, scaled.orthant());
+        Run {
+            scaling,
+            b_norm: norm2(scaled.rhs()),
+            c_norm: scaled.cost().norm(),
+            state,
+            start,
+            best: None,
+            ladder: None,
+            steps: Reach { primal: 0.0, dual: 0.0 },
+        }
+    }
+
+    /// Puts the iterate at the start: multiples of the identity, no multipliers.
+    pub(super) fn begin(&mut self) {
+        let state = &mut self.state;
+        for (block, (xi, eta)) in state.blocks.iter_mut().zip(&self.start.blocks) {
+            block.set_multiples(*xi, eta.max(1.0 + self.c_norm), &mut state.ws);
+        }
+        let (xi, eta) = self.start.orthant;
+        state.x.fill(xi);
+        state.z.fill(eta);
+        state.y.fill(0.0);
+    }
+
+    /// Iterates from the present point; returns how it ended and after how many iterations.
+    pub(super) fn iterate(
+        &mut self,
         params: &Params,
         mut hook: Option<&mut dyn Hook>,
         meter: &mut Meter,
-    ) -> Result<Solution, Halt> {
+    ) -> Result<(Outcome, usize), Halt> {
+        self.best = None;
+        self.steps = Reach { primal: 0.0, dual: 0.0 };
         let mut outcome = Outcome::IterationLimit;
         let mut iteration = 0;
         while iteration < params.max_iterations {
@@ -175,6 +145,9 @@ impl Run<'_> {
                 figures = self.figures();
             }
             self.trace(&figures, meter);
+            if let Some(ladder) = &mut self.ladder {
+                ladder.keep(&figures.residuals, &self.state);
+            }
             if may_stop {
                 self.keep_best(&figures, iteration, hook.is_none());
             } else {
@@ -211,7 +184,7 @@ impl Run<'_> {
                 break;
             }
         }
-        Ok(self.finish(outcome, iteration, params))
+        Ok((outcome, iteration))
     }
 
     fn newton_step(&mut self, figures: &Figures, least_centring: f64, meter: &mut Meter) -> bool {
@@ -241,18 +214,20 @@ impl Run<'_> {
         }
     }
 
-    fn figures(&mut self) -> Figures {
+    pub(super) fn figures(&mut self) -> Figures {
         let state = &mut self.state;
         state.residuals();
         let mut dual_squared = dot(&state.rdz, &state.rdz);
-        let mut primal = dot(&state.op.orthant_cost, &state.x);
+        let mut value = dot(&state.op.orthant_cost, &state.x);
+        let mut weighed = 0.0;
         for (block, part) in state.op.blocks.iter().zip(&state.blocks) {
             dual_squared += norm_squared(&part.rd);
-            primal += block.cost_with_dense(part.x.as_ref());
+            value += block.cost_with_dense(part.x.as_ref());
             if let Some(weight) = &part.weight {
-                primal += dense::dot_symmetric(weight.as_ref(), part.x.as_ref());
+                weighed += dense::dot_symmetric(weight.as_ref(), part.x.as_ref());
             }
         }
+        let primal = value + weighed;
         let dual = dot(&state.b, &state.y);
         let complementarity = state.complementarity();
         state.mu = complementarity / state.pairs();
@@ -263,14 +238,10 @@ impl Run<'_> {
             dual: dual_squared.sqrt() / (1.0 + self.c_norm),
             gap: unit * complementarity.abs() / (1.0 + unit * (primal.abs() + dual.abs())),
         };
-        Figures { residuals, primal, dual }
+        Figures { residuals, primal, dual, value }
     }
 
     fn steer(&mut self, hook: &mut dyn Hook, figures: &Figures, meter: &mut Meter) -> Steering {
-        let mut value = dot(&self.state.op.orthant_cost, &self.state.x);
-        for (block, part) in self.state.op.blocks.iter().zip(&self.state.blocks) {
-            value += block.cost_with_dense(part.x.as_ref());
-        }
         let mut points = Vec::new();
         let mut slacks = Vec::new();
         let mut weights = Vec::new();
@@ -285,7 +256,7 @@ impl Run<'_> {
             &mut Steer {
                 points: &points,
                 residuals: figures.residuals,
-                value,
+                value: figures.value,
                 complementarity: self.state.mu * self.state.pairs(),
                 slacks: &mut slacks,
                 weights: &mut weights,
@@ -302,136 +273,18 @@ impl Run<'_> {
         word
     }
 
-    fn keep_best(&mut self, figures: &Figures, iteration: usize, copy: bool) {
-        let worst = figures.residuals.worst();
-        if self.best.as_ref().is_some_and(|best| worst >= best.worst) {
-            return;
-        }
-        let state = &self.state;
-        // A copy is only worth its time when the iterate could be the one returned.
-        let copy = copy && worst < 1e-4;
-        let mut best = Best {
-            worst,
-            at: iteration,
-            residuals: figures.residuals,
-            points: Vec::new(),
-            slacks: Vec::new(),
-            x: state.x.clone(),
-            z: state.z.clone(),
-            y: state.y.clone(),
-        };
-        if copy {
-            let (points, slacks) = match self.best.take() {
-                Some(old) if !old.points.is_empty() => (old.points, old.slacks),
-                _ => (
-                    state.blocks.iter().map(|b| Mat::zeros(b.order, b.order)).collect(),
-                    state.blocks.iter().map(|b| b.s.clone()).collect(),
-                ),
-            };
-            best.points = points;
-            best.slacks = slacks;
-            for (index, block) in state.blocks.iter().enumerate() {
-                best.points[index].copy_from(&block.x);
-                copy_slack(&block.s, &mut best.slacks[index]);
-            }
-        }
-        self.best = Some(best);
-    }
-
-    fn verdict(
-        &self,
-        params: &Params,
-        figures: &Figures,
-        iteration: usize,
-        may_stop: bool,
-    ) -> Option<Outcome> {
-        let residuals = figures.residuals;
-        if !may_stop {
-            return None;
-        }
-        if residuals.worst() < params.tolerance {
-            return Some(Outcome::Optimal);
-        }
-        if !residuals.worst().is_finite() {
-            return Some(Outcome::Stalled);
-        }
-        if let Some(end) = self.infeasibility(figures) {
-            return Some(end);
-        }
-        let size = |norm: f64, start: f64| norm > 1e15 * start.max(1.0);
-        let x_norm: f64 = self.state.blocks.iter().map(|b| dense::frobenius(b.x.as_ref())).sum();
-        let s_norm: f64 = self.state.blocks.iter().map(|b| norm_squared(&b.s).sqrt()).sum();
-        if size(x_norm, self.start.x_norm) || size(s_norm, self.start.s_norm) {
-            return Some(Outcome::Stalled);
-        }
-        let best = self.best.as_ref()?;
-        if best.worst < 1e-6 {
-            // Near the end rounding takes over: a clearly worse iterate will not recover.
-            if iteration >= best.at + 3 && residuals.worst() > 30.0 * best.worst {
-                return Some(Outcome::Stalled);
-            }
-            if iteration >= best.at + 5 {
-                return Some(Outcome::Stalled);
-            }
-        }
-        (iteration >= best.at + PATIENCE).then_some(Outcome::Stalled)
-    }
-
-    fn infeasibility(&self, figures: &Figures) -> Option<Outcome> {
-        let state = &self.state;
-        if figures.dual > 0.0 {
-            // ||A*(y) + S|| = ||C - R_d||, bounded by the norms; both directions are cheap to bound.
-            let c = self.c_norm;
-            let rd = figures.residuals.dual * (1.0 + self.c_norm);
-            if (c + rd) / figures.dual <= INFEASIBLE {
-                return Some(Outcome::PrimalInfeasible);
-            }
-        }
-        if figures.primal < 0.0 {
-            let image: f64 =
-                state.b.iter().zip(&state.rp).map(|(b, r)| (b - r) * (b - r)).sum::<f64>().sqrt();
-            if image / -figures.primal <= INFEASIBLE {
-                return Some(Outcome::DualInfeasible);
-            }
-        }
-        None
-    }
-
     fn trace(&self, figures: &Figures, meter: &mut Meter) {
         meter.trace(TracePoint {
             flops: 0,
-            objective: Some(figures.primal * self.scaling.rhs * self.scaling.cost),
+            objective: Some(figures.value * self.scaling.rhs * self.scaling.cost),
             residual: Some(figures.residuals.primal),
             tail: None,
         });
     }
 
-    fn finish(mut self, outcome: Outcome, iterations: usize, params: &Params) -> Solution {
-        let figures = self.figures();
-        let mut residuals = figures.residuals;
-        let mut outcome = outcome;
-        if let Some(best) = self.best.take()
-            && !best.points.is_empty()
-            && best.worst < residuals.worst()
-            && !matches!(outcome, Outcome::PrimalInfeasible | Outcome::DualInfeasible)
-        {
-            residuals = best.residuals;
-            let parts = best.points.into_iter().zip(best.slacks);
-            for (block, (x, s)) in self.state.blocks.iter_mut().zip(parts) {
-                block.x = x;
-                block.s = s;
-            }
-            self.state.x = best.x;
-            self.state.z = best.z;
-            self.state.y = best.y;
-        }
-        if outcome == Outcome::Stalled && residuals.worst() < params.tolerance {
-            outcome = Outcome::Optimal;
-        }
-        let unit = self.scaling.rhs * self.scaling.cost;
-        let final_figures = self.figures();
-        let dual_value = unit * final_figures.dual;
-        let primal_value = unit * final_figures.primal;
+    /// Turns the state into a solution in the caller's units.
+    fn into_solution(mut self, outcome: Outcome, iterations: usize, params: &Params) -> Solution {
+        let info = self.report(outcome, iterations, params);
         let mut slacks = Vec::new();
         let mut points = Vec::new();
         for block in self.state.blocks {
@@ -443,20 +296,28 @@ impl Run<'_> {
             dense::scale(self.scaling.rhs, x.as_mut());
             points.push(x);
         }
-        debug_assert_eq!(points.len(), self.scaled.blocks().len());
         Solution {
             points,
             orthant: self.state.x.iter().map(|value| value * self.scaling.rhs).collect(),
             multipliers: self.scaling.multipliers(&self.state.y),
             slacks,
-            info: Info { outcome, iterations, residuals, primal_value, dual_value },
+            info,
         }
     }
-}
 
-fn copy_slack(from: &crate::problem::Slack, to: &mut crate::problem::Slack) {
-    fill_identity(to, 0.0);
-    super::iterate::add_scaled(1.0, from, to);
+    /// Settles on the iterate to return and says what is known of it.
+    pub(super) fn report(&mut self, outcome: Outcome, iterations: usize, params: &Params) -> Info {
+        let (outcome, residuals) = self.settle(outcome, params);
+        let unit = self.scaling.rhs * self.scaling.cost;
+        let figures = self.figures();
+        Info {
+            outcome,
+            iterations,
+            residuals,
+            primal_value: unit * figures.primal,
+            dual_value: unit * figures.dual,
+        }
+    }
 }
 
 /// Chooses sigma from the predictor: small when the predictor goes far.

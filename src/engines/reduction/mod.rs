@@ -8,14 +8,20 @@
 //! The published rule (Lemon, So, Ye, Found. Trends Optim. 2(1-2):1-156, 2016,
 //! doi:10.1561/2400000009) writes X = V V' and takes Delta = D^-1/2 M D^-1/2 and the end 1/lambda with
 //! lambda its eigenvalue of largest modulus. That end is the nearer one, and from an analytic centre
-//! it is the end at which fewer eigenvalues vanish; [`Rule::BothEnds`] looks at both.
+//! it is the end at which fewer eigenvalues vanish; [`Rule::BothEnds`] looks at both, [`Rule::Random`] at random
+//! directions, and [`Rule::Tail`] goes where the eigenvalues beyond the rank bounds fall fastest.
+//!
+//! A Gaussian projection of the relaxation's solution ([`project_relaxation`]) is the randomised, approximate way.
 //!
 //! Eigenvalues of X are cut, never the columns of a square root, which would hide 1e-8 as 1e-4; all
 //! below the cut go at once.
 
+mod gaussian;
 mod pipeline;
+mod rules;
 
-pub use pipeline::reduce_relaxation;
+pub use gaussian::{GaussianReduction, RelaxedFactors, project_relaxation, relaxed_factors};
+pub use pipeline::{Pipeline, reduce_relaxation, reduce_repeatedly};
 
 use crate::budget::{Halt, Meter};
 use crate::linalg::dense::{self, Accumulate};
@@ -23,6 +29,7 @@ use crate::linalg::eigen::{SymmetricEigen, flops};
 use crate::linalg::null_space::null_space;
 use crate::linalg::{Mat, MatRef, packed};
 use crate::problem::{BlockOperator, Factor, Operator, Problem};
+use crate::seed::Stream;
 
 /// Which end of the step is taken.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -31,6 +38,16 @@ pub enum Rule {
     Largest,
     /// Both ends of every basis direction; the one that leaves the lowest total rank.
     BothEnds,
+    /// Both ends of random combinations of the basis; the one that leaves the lowest total rank.
+    Random {
+        /// Combinations tried in a step.
+        combinations: usize,
+        /// Names the random stream.
+        seed: u64,
+    },
+    /// The end with the least eigenvalue sum beyond the rank bounds, along the direction over the face in which that
+    /// sum falls fastest and along those found by linearising it at the ends reached.
+    Tail,
 }
 
 /// Settings of the reduction.
@@ -188,6 +205,8 @@ pub fn reduce(
     meter: &mut Meter,
 ) -> Result<Info, Halt> {
     let mut info = Info { ranks: vec![point.total_rank()], free_directions: 0 };
+    let seed = if let Rule::Random { seed, .. } = params.rule { seed } else { 0 };
+    let mut stream = Stream::named(seed, &["reduction"]);
     loop {
         meter.check()?;
         let system = face_system(problem, op, point);
@@ -209,7 +228,12 @@ pub fn reduce(
                 let t = if high.abs() <= low.abs() { high } else { low };
                 moved(point, direction, t, params.cut)?
             }
-            Rule::BothEnds => best_end(point, &space.basis, params.cut)?,
+            Rule::BothEnds => rules::best_end(point, &space.basis, params.cut)?,
+            Rule::Random { combinations, .. } => {
+                let drawn = rules::combinations(&space.basis, combinations, &mut stream);
+                rules::best_end(point, &drawn, params.cut)?
+            }
+            Rule::Tail => rules::tail_end(problem, point, &space.basis, params.cut)?,
         };
         let Some(next) = next.filter(|next| next.total_rank() < before) else {
             return Ok(info);
@@ -217,26 +241,6 @@ pub fn reduce(
         *point = next;
         info.ranks.push(point.total_rank());
     }
-}
-
-/// Ends are compared by the eigenvalues above this share of the largest: what should vanish at an end
-/// vanishes only up to the accuracy of the point.
-const SEEN: f64 = 1e-4;
-
-fn best_end(point: &Spectral, basis: &Mat<f64>, cut: f64) -> Result<Option<Spectral>, Halt> {
-    let mut best: Option<Spectral> = None;
-    for column in (0..basis.ncols()).rev() {
-        let direction = basis.col_as_slice(column);
-        let (low, high) = range(point, direction)?;
-        for t in [high, low] {
-            if let Some(next) = moved(point, direction, t, cut)?
-                && best.as_ref().is_none_or(|b| next.rank_above(SEEN) < b.rank_above(SEEN))
-            {
-                best = Some(next);
-            }
-        }
-    }
-    Ok(best)
 }
 
 /// Builds the m x k matrix whose rows are svec(Q'A_iQ) / ||A_i|| over all blocks, and the entries of

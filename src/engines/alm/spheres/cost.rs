@@ -167,6 +167,25 @@ impl SphereBlock {
         }
     }
 
+    /// Calls `visit(j, s_i C_ij s_j)` for the entries of row i off the diagonal: those stored, or all of a dense row.
+    #[inline]
+    pub fn each_in_row(&self, i: usize, mut visit: impl FnMut(usize, f64)) {
+        match &self.rows {
+            Rows::Sparse { starts, columns, values } => {
+                let range = starts[i] as usize..starts[i + 1] as usize;
+                for (&j, value) in columns[range.clone()].iter().zip(&values[range]) {
+                    visit(j as usize, *value);
+                }
+            }
+            Rows::Dense(matrix) => {
+                for (j, value) in matrix.col_as_slice(i).iter().enumerate().filter(|(j, _)| *j != i)
+                {
+                    visit(j, *value);
+                }
+            }
+        }
+    }
+
     /// Replaces each unit row in turn by the one that is best with all others held, `-g/|g|` with
     /// `g = sum_j C_ij q_j`, and returns by how much `<C, Q Q'>` fell. At width 1 this is the descent by
     /// single flips. `image` holds one row.

@@ -15,7 +15,7 @@ pub mod trust;
 
 use super::certificate::{CertificateParams, least_eigenpair};
 use super::start::{numerical_rank, principal, resized};
-use super::{AlmParams, Lift};
+use super::{AlmParams, Lift, Schedule};
 use crate::budget::{Halt, Meter, TracePoint};
 use crate::linalg::lanczos::LanczosWorkspace;
 use crate::linalg::vector::{axpy, dot};
@@ -40,7 +40,7 @@ const LOOSE: f64 = 1e-4;
 /// See [`LOOSE`].
 const LOOSE_SHARE: f64 = 1e-5;
 /// Length of the escape column relative to the rows.
-const ESCAPE: f64 = 0.1;
+pub(super) const ESCAPE: f64 = 0.1;
 /// Most widenings of the lifted stage.
 const WIDENINGS: usize = 10;
 /// Random projections tried at width 1 for each start that the caller grants.
@@ -68,13 +68,13 @@ pub struct BlockOutcome {
 }
 
 /// Everything one block's solution works with.
-struct Solver<'a> {
+pub(super) struct Solver<'a> {
     block: &'a SphereBlock,
     operator: &'a BlockOperator,
     params: &'a AlmParams,
     trust: TrustWorkspace,
     lanczos: LanczosWorkspace,
-    settled: bool,
+    pub(super) settled: bool,
     /// Whether this block is the whole problem, so that its objective makes a trace.
     traced: bool,
 }
@@ -106,15 +106,7 @@ pub fn solve_block(
     stream: &mut Stream,
     meter: &mut Meter,
 ) -> BlockOutcome {
-    let mut solver = Solver {
-        block,
-        operator,
-        params,
-        trust: TrustWorkspace::default(),
-        lanczos: LanczosWorkspace::new(),
-        settled: true,
-        traced: whole == Whole::Yes,
-    };
+    let mut solver = Solver::new(block, operator, whole, params);
     let first = match params.lift {
         Lift::WhenNeeded => width.max(LEAST_LIFT.max(width + 1).min(rank_bound(block.order))),
         Lift::Never => width,
@@ -150,12 +142,8 @@ pub fn solve_block(
         }
     }
     let best = best.expect("at least one candidate was made");
-    let mut factor = best.q;
-    for i in 0..block.order {
-        factor.row_mut(i).iter_mut().for_each(|value| *value *= block.radii[i]);
-    }
     BlockOutcome {
-        factor,
+        factor: stretched(best.q, block),
         multipliers: block.ids.iter().copied().zip(lifted.multipliers).collect(),
         objective: best.objective,
         least: lifted.least,
@@ -164,6 +152,42 @@ pub fn solve_block(
         halt: lifted.halt,
         settled: solver.settled,
     }
+}
+
+/// Descends from a given factor, in the problem's units, and certifies the result; widths stay.
+pub fn refine_block(
+    block: &SphereBlock,
+    operator: &BlockOperator,
+    factor: &Factor,
+    whole: Whole,
+    params: &AlmParams,
+    stream: &mut Stream,
+    meter: &mut Meter,
+) -> BlockOutcome {
+    let mut solver = Solver::new(block, operator, whole, params);
+    let mut q = factor.clone();
+    normalise_rows(&mut q, stream);
+    let halt = solver.descend(&mut q, meter);
+    let y = solver.multipliers(&q);
+    let least = halt.is_none().then(|| solver.certify(&q, &y, meter).0);
+    BlockOutcome {
+        objective: solver.objective(&q),
+        widest: q.width,
+        tried: 1,
+        factor: stretched(q, block),
+        multipliers: block.ids.iter().copied().zip(y).collect(),
+        least,
+        halt,
+        settled: solver.settled,
+    }
+}
+
+/// Gives unit rows their lengths in the problem's units.
+pub fn stretched(mut q: Factor, block: &SphereBlock) -> Factor {
+    for i in 0..block.order {
+        q.row_mut(i).iter_mut().for_each(|value| *value *= block.radii[i]);
+    }
+    q
 }
 
 /// Result of the lifted stage.
@@ -175,6 +199,26 @@ struct Lifted {
     halt: Option<Halt>,
 }
 
+impl<'a> Solver<'a> {
+    /// Takes memory for a block.
+    pub(super) fn new(
+        block: &'a SphereBlock,
+        operator: &'a BlockOperator,
+        whole: Whole,
+        params: &'a AlmParams,
+    ) -> Self {
+        Solver {
+            block,
+            operator,
+            params,
+            trust: TrustWorkspace::default(),
+            lanczos: LanczosWorkspace::new(),
+            settled: true,
+            traced: whole == Whole::Yes,
+        }
+    }
+}
+
 impl Solver<'_> {
     /// Stage 1: descends, certifies and widens.
     fn lifted(&mut self, first: usize, stream: &mut Stream, meter: &mut Meter) -> Lifted {
@@ -183,7 +227,11 @@ impl Solver<'_> {
         let mut q = random_rows(n, first, stream);
         let mut halt = None;
         let mut kept: Option<(f64, Vec<f64>, Option<f64>)> = None;
-        for round in 0..=WIDENINGS {
+        let rounds = match self.params.schedule {
+            Schedule::Double => WIDENINGS,
+            Schedule::One => limit,
+        };
+        for round in 0..=rounds {
             // 1. Descend; cut the width twice, where it is cheap to be wrong: the certificate tells.
             let mut ended = self.sweeps(&mut q, meter).err();
             if round == 0 && first > LEAST_LIFT {
@@ -199,21 +247,20 @@ impl Solver<'_> {
             // 2. Certify.
             let objective = self.objective(&q);
             let y = self.multipliers(&q);
-            let dual = dot_radii(self.block, &y);
+            let dual = self.dual(&y);
             if ended.is_some() {
                 halt = ended;
                 kept.get_or_insert((f64::NEG_INFINITY, y, None));
                 break;
             }
             let (least, vector) = self.certify(&q, &y, meter);
-            let trace: f64 = self.block.radii.iter().map(|s| s * s).sum();
-            let bound = dual + trace * least.min(0.0);
+            let bound = self.bound(dual, least);
             if kept.as_ref().is_none_or(|(best, _, _)| bound > *best) {
                 kept = Some((bound, y, Some(least)));
             }
             let certified = objective - bound <= self.params.certificate * (1.0 + objective.abs());
             let last = q.width >= limit && round > 1;
-            if certified || last || self.params.lift == Lift::Never || round == WIDENINGS {
+            if certified || last || self.params.lift == Lift::Never || round == rounds {
                 break;
             }
             // 3. Widen along the escape vector; the other new columns get a little noise.
@@ -222,15 +269,27 @@ impl Solver<'_> {
                 halt = Some(reason);
                 break;
             }
-            q = widened(&q, (2 * q.width).min(limit).max(q.width + 1), &vector, stream);
+            let width = self.params.schedule.next(q.width).min(limit).max(q.width + 1);
+            q = widened(&q, width, &vector, ESCAPE, stream);
         }
         let (bound, multipliers, least) = kept.expect("the first round keeps its multipliers");
         let objective = self.objective(&q);
         Lifted { candidate: Candidate { q, objective }, multipliers, bound, least, halt }
     }
 
+    /// Returns the lower bound of the block's objective from the dual value and the least eigenvalue of its slack.
+    pub(super) fn bound(&self, dual: f64, least: f64) -> f64 {
+        let trace: f64 = self.block.radii.iter().map(|s| s * s).sum();
+        dual + trace * least.min(0.0)
+    }
+
+    /// Returns the dual value `sum_i y_i b_i` over the block's constraints.
+    pub(super) fn dual(&self, y: &[f64]) -> f64 {
+        dot_radii(self.block, y)
+    }
+
     /// Brings a point to a minimiser at its width; returns why it ended early, if it did.
-    fn descend(&mut self, q: &mut Factor, meter: &mut Meter) -> Option<Halt> {
+    pub(super) fn descend(&mut self, q: &mut Factor, meter: &mut Meter) -> Option<Halt> {
         if let Err(halt) = self.sweeps(q, meter) {
             return Some(halt);
         }
@@ -283,12 +342,12 @@ impl Solver<'_> {
         image
     }
 
-    fn objective(&self, q: &Factor) -> f64 {
+    pub(super) fn objective(&self, q: &Factor) -> f64 {
         dot(&q.data, &self.image(q).data) + self.block.constant()
     }
 
     /// Returns the multipliers `(C_ii + q_i.(CQ)_i / s_i^2) / a_i` of the rows.
-    fn multipliers(&self, q: &Factor) -> Vec<f64> {
+    pub(super) fn multipliers(&self, q: &Factor) -> Vec<f64> {
         let image = self.image(q);
         (0..q.order)
             .map(|i| {
@@ -300,7 +359,7 @@ impl Solver<'_> {
     }
 
     /// Returns the least eigenvalue of the slack and its vector.
-    fn certify(&mut self, q: &Factor, y: &[f64], meter: &mut Meter) -> (f64, Vec<f64>) {
+    pub(super) fn certify(&mut self, q: &Factor, y: &[f64], meter: &mut Meter) -> (f64, Vec<f64>) {
         let mut factor = q.clone();
         for i in 0..q.order {
             factor.row_mut(i).iter_mut().for_each(|value| *value *= self.block.radii[i]);
@@ -330,7 +389,7 @@ fn dot_radii(block: &SphereBlock, y: &[f64]) -> f64 {
     (0..block.order).map(|i| y[i] * block.coefficients[i] * block.radii[i].powi(2)).sum()
 }
 
-fn random_rows(order: usize, width: usize, stream: &mut Stream) -> Factor {
+pub(super) fn random_rows(order: usize, width: usize, stream: &mut Stream) -> Factor {
     let mut q = Factor::zeros(order, width);
     q.data.iter_mut().for_each(|value| *value = stream.normal());
     normalise_rows(&mut q, stream);
@@ -346,9 +405,9 @@ fn cut(q: &mut Factor, share: f64, spare: usize, stream: &mut Stream) {
     }
 }
 
-/// Projects the rows of a wider point on random directions: `Q G`, G Gaussian (M. Goemans and D. Williamson,
+/// Projects the rows of a point on random directions: returns `Q G`, G Gaussian of `width` columns (M. Goemans and D. Williamson,
 /// Journal of the ACM 42:1115-1145, 1995, for width 1).
-fn projected(q: &Factor, width: usize, stream: &mut Stream) -> Factor {
+pub fn projected(q: &Factor, width: usize, stream: &mut Stream) -> Factor {
     let turn: Vec<f64> = (0..q.width * width).map(|_| stream.normal()).collect();
     let mut out = Factor::zeros(q.order, width);
     for i in 0..q.order {
@@ -361,7 +420,7 @@ fn projected(q: &Factor, width: usize, stream: &mut Stream) -> Factor {
 }
 
 /// Gives every row norm 1; rows that vanish are drawn anew.
-fn normalise_rows(q: &mut Factor, stream: &mut Stream) {
+pub fn normalise_rows(q: &mut Factor, stream: &mut Stream) {
     for i in 0..q.order {
         let row = q.row_mut(i);
         while dot(row, row) <= 1e-24 || dot(row, row).is_nan() {
@@ -372,17 +431,23 @@ fn normalise_rows(q: &mut Factor, stream: &mut Stream) {
     }
 }
 
-/// Appends columns: the first is the escape vector, the others noise, then normalises rows.
-fn widened(q: &Factor, width: usize, escape: &[f64], stream: &mut Stream) -> Factor {
+/// Appends columns: the first is the escape vector with largest entry `length`, the others noise; then normalises rows.
+pub(super) fn widened(
+    q: &Factor,
+    width: usize,
+    escape: &[f64],
+    length: f64,
+    stream: &mut Stream,
+) -> Factor {
     let base = principal(q).map_or_else(|| q.clone(), |(_, turned)| turned);
     let mut out = Factor::zeros(q.order, width);
     let largest = escape.iter().fold(0.0_f64, |m, v| m.max(v.abs())).max(f64::MIN_POSITIVE);
     for i in 0..q.order {
         let row = out.row_mut(i);
         row[..q.width].copy_from_slice(base.row(i));
-        row[q.width] = ESCAPE * escape[i] / largest;
+        row[q.width] = length * escape[i] / largest;
         for value in &mut row[q.width + 1..] {
-            *value = 0.1 * ESCAPE * stream.normal() / (width as f64).sqrt();
+            *value = 0.1 * length * stream.normal() / (width as f64).sqrt();
         }
     }
     normalise_rows(&mut out, stream);
