@@ -9,7 +9,9 @@ mod effort;
 mod failures;
 pub mod figures;
 mod group;
+mod knobs;
 mod model;
+mod overview;
 mod rank;
 mod relaxation;
 mod render;
@@ -40,14 +42,16 @@ pub struct Input<'a> {
     pub traces: &'a [Trace],
 }
 
-/// Makes every table: accuracy, rank, runtime, effort, relaxation, failures, instances.
+/// Makes every table: accuracy, rank, runtime, effort, overview, relaxation, knobs, failures, instances.
 pub fn all(input: &Input<'_>) -> Vec<Table> {
     vec![
         accuracy::table(input),
         rank::table(input),
         runtime::table(input),
         effort::table(input),
+        overview::table(input),
         relaxation::table(input),
+        knobs::table(input),
         failures::table(input),
         trials::table(input),
     ]

@@ -30,7 +30,7 @@ pub(super) fn table(input: &Input<'_>) -> Table {
         Column::stable(
             "feasibility",
             "feasi-\nbility",
-            "Relative residual ||A(X_r) - b|| / (1 + ||b||) of the truncation.",
+            "Relative residual ||A(X_r) - b|| / (1 + ||b||) of the truncation, with constraints scaled to norm 1 and X to ||b|| = 1.",
         ),
         Column::stable(
             "objective_error",

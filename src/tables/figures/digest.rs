@@ -4,7 +4,7 @@
 //! not solved costs infinitely much; so it is solved when more than half of the repeats are. Nothing
 //! is drawn here.
 
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
 
 use super::super::Input;
 use crate::record::{Record, Verdict};
@@ -20,6 +20,8 @@ pub(super) struct Subject<'a> {
     pub(super) constraints: u64,
     pub(super) target_rank: u64,
     pub(super) optimum: Option<f64>,
+    /// Whether it was planted without a proof of its optimum.
+    pub(super) unproved: bool,
 }
 
 /// What one method did on one instance.
@@ -27,6 +29,8 @@ pub(super) struct Subject<'a> {
 pub(super) struct Outcome {
     /// Whether more than half of the repeats were solved.
     pub(super) solved: bool,
+    /// Whether more than half of the repeats were feasible with no optimum known to compare with.
+    pub(super) feasible: bool,
     /// Median flops; `None` when not solved or not counted.
     pub(super) flops: Option<f64>,
     /// Median processor time, in seconds; `None` when not solved or not measured.
@@ -66,7 +70,12 @@ pub(super) struct Digest<'a> {
     /// Instance of every record.
     pub(super) subject_of: Vec<usize>,
     outcomes: Vec<Option<Outcome>>,
+    /// For each family whether no optimum of it is known.
+    without_optima: Vec<bool>,
 }
+
+/// Word of a certificate that is none: see the instance record.
+const NO_PROOF: &str = "no-proof";
 
 impl<'a> Digest<'a> {
     /// Puts the records in order.
@@ -76,6 +85,12 @@ impl<'a> Digest<'a> {
             .instances
             .iter()
             .filter_map(|instance| Some((instance.instance.as_str(), instance.optimum?)))
+            .collect();
+        let unproved: BTreeSet<&str> = input
+            .instances
+            .iter()
+            .filter(|instance| instance.certificate == NO_PROOF)
+            .map(|instance| instance.instance.as_str())
             .collect();
         let mut families: Vec<&str> = Vec::new();
         let mut subjects: Vec<Subject<'_>> = Vec::new();
@@ -98,6 +113,7 @@ impl<'a> Digest<'a> {
                     constraints: record.constraints,
                     target_rank: record.target_rank,
                     optimum: optima.get(record.instance.as_str()).copied(),
+                    unproved: unproved.contains(record.instance.as_str()),
                 });
                 subjects.len() - 1
             });
@@ -107,7 +123,11 @@ impl<'a> Digest<'a> {
         }
         let outcomes =
             outcomes(input.records, &subject_of, &method_of, subjects.len(), methods.len());
-        Digest { methods, families, subjects, method_of, subject_of, outcomes }
+        let mut without_optima = vec![true; families.len()];
+        for subject in &subjects {
+            without_optima[subject.family] &= subject.optimum.is_none();
+        }
+        Digest { methods, families, subjects, method_of, subject_of, outcomes, without_optima }
     }
 
     /// Returns what a method did on an instance; `None` when it was not run.
@@ -136,6 +156,23 @@ impl<'a> Digest<'a> {
                 methods.iter().all(|&method| self.outcome(subject, method).is_some())
             })
             .collect()
+    }
+
+    /// Lists the instances of a family that a share of successes is taken of: those with a known optimum and
+    /// those planted without proof, so that a knob which takes the proof away does not hide its effect.
+    pub(super) fn scored(&self, family: usize) -> Vec<usize> {
+        let counts = |subject: &Subject<'_>| {
+            subject.family == family && (subject.optimum.is_some() || subject.unproved)
+        };
+        (0..self.subjects.len()).filter(|&at| counts(&self.subjects[at])).collect()
+    }
+
+    /// Returns whether a method succeeded on an instance: solved it, or, in a family none of whose optima is
+    /// known, found a feasible point of the target rank. None when it was not run.
+    pub(super) fn success(&self, subject: usize, method: usize) -> Option<bool> {
+        let outcome = self.outcome(subject, method)?;
+        let family = self.subjects[subject].family;
+        Some(outcome.solved || (outcome.feasible && self.without_optima[family]))
     }
 
     /// Returns the costs of solving, one row an instance, one column a method.
@@ -201,10 +238,13 @@ fn outcomes(
                 cost.unwrap_or(f64::INFINITY)
             }))
         };
-        let solved =
-            repeats.iter().filter(|(_, at)| records[*at].verdict == Verdict::Solved).count();
+        let most = |verdict: Verdict| {
+            let count = repeats.iter().filter(|(_, at)| records[*at].verdict == verdict).count();
+            2 * count > repeats.len()
+        };
         outcomes[repeats[0].0] = Some(Outcome {
-            solved: 2 * solved > repeats.len(),
+            solved: most(Verdict::Solved),
+            feasible: most(Verdict::Feasible),
             flops: of(|record| record.flops.map(|flops| flops as f64)),
             cpu_s: of(|record| record.cpu_s),
         });

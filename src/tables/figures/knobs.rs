@@ -28,8 +28,9 @@ pub(super) fn figure(digest: &Digest<'_>) -> Option<Figure> {
          method solved; the bar through it is the 95 % interval of Wilson. A line that falls shows where the \
          parameter makes the method fail. Points of one value are moved apart sideways to be seen; \
          values over a wide range stand by their ratios, or in equal steps when they begin at zero. Sample: \
-         {}, all with a known optimum; each method counts on the instances that it ran. Failures: whatever is not \
-         solved (verdict solved, in more than half of the repeats) counts as not solved. {left_out}",
+         {}; each method counts on the instances that it ran. Failures: whatever is not solved (verdict solved, or \
+         feasible where no optimum of the family is known, in more than half of the repeats) counts as not solved, as \
+         does an instance planted without proof among proved ones. {left_out}",
         sizes(plots)
     );
     let alt = alt(digest, plots);
@@ -40,9 +41,7 @@ pub(super) fn figure(digest: &Digest<'_>) -> Option<Figure> {
 }
 
 fn plot(digest: &Digest<'_>, family: usize) -> Option<Plot> {
-    let own: Vec<usize> = (0..digest.subjects.len())
-        .filter(|&at| digest.subjects[at].family == family && digest.subjects[at].optimum.is_some())
-        .collect();
+    let own = digest.scored(family);
     let quantity = grid::varied(digest, &own).into_iter().next()?;
     let places: Vec<Option<usize>> = (0..own.len()).map(|at| quantity.place(at)).collect();
     let mut next = places.iter();

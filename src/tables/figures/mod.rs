@@ -11,6 +11,7 @@ mod digest;
 mod grid;
 mod knobs;
 mod legend;
+mod overview;
 mod phase;
 mod profiles;
 mod ranks;
@@ -37,12 +38,13 @@ pub struct Figure {
     pub svg: String,
 }
 
-/// Makes every figure that the records have something to show in: performance profiles over effort
+/// Makes every figure that the records have something to show in: the overview of families and methods, performance profiles over effort
 /// and processor time, data profile, solved share against size, phase diagrams, solved share against
 /// a parameter, accuracy against time, critical difference, convergence traces.
 pub fn all(input: &Input<'_>) -> Vec<Figure> {
     let digest = Digest::new(input);
     let mut figures = Vec::new();
+    figures.extend(overview::figure(&digest));
     figures.extend(profiles::over_effort(&digest));
     figures.extend(profiles::over_time(&digest));
     figures.extend(profiles::data(&digest));

@@ -36,9 +36,7 @@ pub(super) struct Phase {
 /// Lists a family's phase diagrams: one for each order in which two quantities vary, or else one of
 /// order and one more quantity.
 pub(super) fn phases(digest: &Digest<'_>, family: usize) -> Vec<Phase> {
-    let own: Vec<usize> = (0..digest.subjects.len())
-        .filter(|&at| digest.subjects[at].family == family && digest.subjects[at].optimum.is_some())
-        .collect();
+    let own = digest.scored(family);
     let order = |at: usize| digest.subjects[at].order;
     let mut found = Vec::new();
     let orders = distinct(own.iter().map(|&at| order(at) as f64));
@@ -113,9 +111,10 @@ fn figure(digest: &Digest<'_>, phase: &Phase, orders: usize) -> Figure {
         "How to read: each cell is the share of instances, in percent, that the method solved at this {} (across) and \
          {} (up); the darker the more, and a dash where nothing was run. Look for the border between dark and light: \
          the method whose dark region reaches further is the stronger one. {line} Other parameters that vary are \
-         averaged over. Sample: {} instances of {family}{of_order} with a known optimum, {per_cell} in a cell; cells \
-         of few instances are rough. Failures: whatever is not solved (verdict solved, in more than half of its \
-         repeats) counts as not solved. {cut_off}",
+         averaged over. Sample: {} instances of {family}{of_order}, {per_cell} in a cell; cells of few instances are \
+         rough. Failures: whatever is not solved (verdict solved, or feasible where no optimum of the family is \
+         known, in more than half of its repeats) counts as not solved, as does an instance planted without proof \
+         among proved ones. {cut_off}",
         phase.across.name,
         phase.up.name,
         phase.subjects.len()
@@ -142,9 +141,9 @@ fn cells(digest: &Digest<'_>, phase: &Phase) -> Vec<Vec<Vec<Tally>>> {
             continue;
         };
         for (method, rows) in cells.iter_mut().enumerate() {
-            if let Some(outcome) = digest.outcome(subject, method) {
+            if let Some(success) = digest.success(subject, method) {
                 rows[row][column].run += 1;
-                rows[row][column].solved += u64::from(outcome.solved);
+                rows[row][column].solved += u64::from(success);
             }
         }
     }
@@ -154,7 +153,12 @@ fn cells(digest: &Digest<'_>, phase: &Phase) -> Vec<Vec<Vec<Tally>>> {
 /// Returns the threshold of every row as a number of constraints, where the family has one.
 fn threshold(digest: &Digest<'_>, phase: &Phase) -> Option<Vec<f64>> {
     let order = phase.order?;
+    let by_trace = |subject: &usize| {
+        let pairs = digest.subjects[*subject].parameters.split(' ');
+        pairs.filter_map(|pair| pair.strip_prefix("objective=")).all(|word| word == "trace")
+    };
     let known = digest.families[phase.family] == SENSING
+        && phase.subjects.iter().all(by_trace)
         && order <= THRESHOLD_ORDER
         && phase.across.name == "constraints"
         && phase.up.name == "target rank"
@@ -318,13 +322,13 @@ fn border(
 }
 
 /// Mixes paper and a dark blue, so that grey print keeps the order.
-fn shade(share: f64) -> RGBColor {
+pub(super) fn shade(share: f64) -> RGBColor {
     let mix =
         |light: f64, dark: f64| (light + (dark - light) * share.clamp(0.0, 1.0)).round() as u8;
     RGBColor(mix(244.0, 10.0), mix(247.0, 58.0), mix(251.0, 110.0))
 }
 
 /// Writes percent without the sign; what is neither none nor all never reads so.
-fn number(share: f64) -> String {
+pub(super) fn number(share: f64) -> String {
     percent(share).replace(" %", "")
 }

@@ -47,9 +47,9 @@ pub(super) fn tally(
     for &subject in subjects {
         let Some(at) = place(subject) else { continue };
         for (method, row) in rows.iter_mut().enumerate() {
-            if let Some(outcome) = digest.outcome(subject, method) {
+            if let Some(success) = digest.success(subject, method) {
                 row[at].run += 1;
-                row[at].solved += u64::from(outcome.solved);
+                row[at].solved += u64::from(success);
             }
         }
     }
