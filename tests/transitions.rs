@@ -16,8 +16,7 @@ fn measured() -> Vec<Row> {
         .output()
         .unwrap();
     assert!(output.status.success(), "{}", String::from_utf8_lossy(&output.stderr));
-    let drawn =
-        std::fs::read_to_string(folder.path().join("run/figures/phase-sensing.svg"));
+    let drawn = std::fs::read_to_string(folder.path().join("run/figures/phase-sensing.svg"));
     assert!(
         drawn.unwrap().contains("statistical dimension"),
         "the phase diagram has its threshold"
