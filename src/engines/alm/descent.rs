@@ -1,4 +1,4 @@
-//! The loops: limited-memory BFGS (or [`super::truncated`] Newton steps) with the exact line search inside, multipliers
+//! The loops: limited-memory BFGS (or truncated Newton steps) with the exact line search inside, multipliers
 //! and penalty outside.
 
 use super::lagrangian::Lagrangian;

@@ -6,7 +6,7 @@
 //! optimization over semidefinite matrices with block-diagonal constraints, arXiv:1506.00575, 2015; N. Boumal, V. Voroninski,
 //! A. Bandeira, Communications on Pure and Applied Mathematics 73:581-608, 2020 (bibliographic data from memory). Unit rows
 //! are descended on by the trust-region method of [`super::spheres`], as in the source; general constraints by the augmented
-//! Lagrangian of [`super::general`], which is ours. At the end [`decreased`] takes spare columns away.
+//! Lagrangian of `general`, which is ours. At the end [`decreased`] takes spare columns away.
 
 use super::certificate::{CertificateParams, least_eigenpair};
 use super::descent::FIRST_SIGMA;

@@ -10,7 +10,7 @@
 //! (by the shell's `ulimit`), the size of each file it writes, what it prints, and how long an answer is
 //! read at all ([`answer_bytes`]), and, where there is a `/proc`, the number of processes at once
 //! ([`MOST_PROCESSES`]). Children go with the program, those that left its group too where they can be found
-//! (see [`census`]). An answer that is there and whole when the wall limit ends the program still counts.
+//! (`census`). An answer that is there and whole when the wall limit ends the program still counts.
 
 mod census;
 pub(crate) mod process;
